@@ -1,0 +1,3 @@
+"""profileplan plans the motion of Cartesian machines."""
+
+__version__ = "0.1.0"

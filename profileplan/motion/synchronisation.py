@@ -1,0 +1,191 @@
+"""How do several axes get from one position to another together?
+
+Two kinds of motion: from point to point, each axis by its own law; and along straight lines, by one
+law for the way covered. Both are rest to rest. Positions are (..., d) arrays in axis order [mm or
+degree]; limits are records of (..., d) arrays.
+
+Which rule the axes that are not the slowest follow
+---------------------------------------------------
+They run through the same law as when alone, only more slowly: every axis is stretched to the time
+of the slowest. With c = own least time / common time, velocity falls to c, acceleration to c² and
+jerk to c³ of what the axis uses alone. All three fall together, by factors that can be read off the
+duration, and what excites the frame falls fastest. The least possible peak torque would be had by
+keeping the velocity at its limit instead, but then neither velocity nor jerk would fall, and an
+axis with time to spare would still run to its limits.
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from profileplan.motion.laws import Limits
+from profileplan.motion.trajectory import ORDER, Trajectory
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from profileplan.motion.laws import Law
+    from profileplan.motion.polynomials import Array
+
+
+def move_duration(distance: Array, limits: Limits, law: Law) -> Array:
+    """Return the least time of moves from point to point: that of the slowest axis.
+
+    Parameters
+    ----------
+    distance : (..., d) array [mm]
+    limits : Limits of (..., d) arrays
+    law : Law
+
+    Returns
+    -------
+    (...) array [s]
+    """
+    slowest: Array = law.solve(distance, limits).duration.max(axis=-1)
+    return slowest
+
+
+def move(
+    axes: tuple[str, ...],
+    ends: tuple[Array, Array],
+    limits: Limits,
+    *,
+    law: Law,
+    duration: float | None = None,
+) -> Trajectory:
+    """Return the motion from one position to another, each axis by its own law.
+
+    Parameters
+    ----------
+    axes : tuple of str
+        Names of the d axes.
+    ends : pair of (d,) arrays [mm]
+        Start and end.
+    limits : Limits of (d,) arrays
+    law : Law
+    duration : float, optional [s]
+        The time that every axis takes, at least the least time of the slowest. Without it every
+        axis stops as early as it can.
+    """
+    start, end = ends
+    moves = law.solve(end - start, limits)
+    if duration is not None:
+        moves = moves.stretched(duration)
+    pieces = law.pieces(moves) * np.sign(moves.distance)[:, np.newaxis, np.newaxis]
+    pieces[..., 0] += start[:, np.newaxis]
+    parts = []
+    for axis, name in enumerate(axes):
+        kept = moves.phases[axis] > 0
+        if kept.any():
+            part = Trajectory((name,), moves.phases[axis, kept], pieces[axis, kept, :, np.newaxis])
+        else:
+            part = Trajectory.rest((name,), start[axis : axis + 1])
+        parts.append(part)
+    return Trajectory.stack(parts)
+
+
+def line_limits(
+    distance: Array, limits: Limits, *, linear: Sequence[bool], speed: Array | float = np.inf
+) -> Limits:
+    """Return what bounds the share of the way along straight lines, from 0 to 1.
+
+    On a straight line every axis moves in proportion to the way, so each of its limits, divided by
+    its distance, bounds the way: the least of them counts.
+
+    Parameters
+    ----------
+    distance : (..., d) array [mm]
+    limits : Limits of (..., d) arrays
+    linear : (d,) sequence of bool
+        The axes along which ``speed`` is counted.
+    speed : (...) array or float [mm/s]
+        Limit of the speed along the path; infinity is none.
+
+    Returns
+    -------
+    Limits of (...) arrays [1/s, 1/s², 1/s², 1/s³]
+        Infinite where nothing moves.
+    """
+    size = np.abs(distance)
+
+    def least(limit: Array | float) -> Array:
+        share = np.full(np.broadcast_shapes(size.shape, np.shape(limit)), np.inf)
+        bound: Array = np.divide(limit, size, out=share, where=size > 0).min(axis=-1)
+        return bound
+
+    way = np.sqrt(np.sum(np.where(np.asarray(linear), distance, 0.0) ** 2, axis=-1))
+    by_speed = np.full(np.broadcast_shapes(way.shape, np.shape(speed)), np.inf)
+    np.divide(speed, way, out=by_speed, where=way > 0)
+    own = Limits(*(least(limit) for limit in limits))
+    return own._replace(velocity=np.minimum(own.velocity, by_speed))
+
+
+def line_durations(distance: Array, limits: Limits, law: Law) -> Array:
+    """Return the least times of straight lines under limits along the way, as of ``line_limits``.
+
+    Parameters
+    ----------
+    distance : (..., d) array [mm]
+    limits : Limits of (...) arrays
+    law : Law
+
+    Returns
+    -------
+    (...) array [s]
+        Zero where nothing moves.
+    """
+    moving = np.any(distance != 0, axis=-1)
+    # A line of no length has infinite limits; any finite one gives it its duration of zero.
+    finite = Limits(*(np.where(moving, limit, 1.0) for limit in limits))
+    return law.solve(np.where(moving, 1.0, 0.0), finite).duration
+
+
+def lines(
+    axes: tuple[str, ...],
+    points: Array,
+    limits: Limits,
+    *,
+    law: Law,
+    durations: Array,
+    waits: Array | None = None,
+) -> Trajectory:
+    """Return the motion along straight lines from point to point, at rest at every point.
+
+    Parameters
+    ----------
+    axes : tuple of str
+        Names of the d axes.
+    points : (m + 1, d) array [mm]
+    limits : Limits of (m,) arrays
+        Along each line's way, as of ``line_limits``.
+    law : Law
+    durations : (m,) array [s]
+        At least those of ``line_durations``; a line of no length waits so long.
+    waits : (m + 1,) array, optional [s]
+        How long the motion rests at each point.
+    """
+    distance = np.diff(points, axis=0)
+    moving = np.any(distance != 0, axis=-1)
+    finite = Limits(*(np.where(moving, limit, 1.0) for limit in limits))
+    moves = law.solve(np.where(moving, 1.0, 0.0), finite).stretched(durations)
+    share = law.pieces(moves)
+    coefficients = share[..., np.newaxis] * distance[:, np.newaxis, np.newaxis, :]
+    coefficients[:, :, 0] += points[:-1, np.newaxis, :]
+    # From its middle on a line is counted from its end, so that it ends there exactly.
+    phases = np.concatenate([moves.phases, np.zeros((distance.shape[0], 1))], axis=-1)
+    rest = np.zeros((distance.shape[0], 1, ORDER, len(axes)))
+    rest[:, 0, 0] = points[1:]
+    coefficients = np.concatenate([coefficients, rest], axis=1).reshape(-1, ORDER, len(axes))
+    if waits is not None:
+        phases[:, -1] = waits[1:]
+        lead_in = np.zeros((1, ORDER, len(axes)))
+        lead_in[0, 0] = points[0]
+        coefficients = np.concatenate([lead_in, coefficients])
+        phases = np.concatenate([waits[:1], phases.reshape(-1)])
+    phases = phases.reshape(-1)
+    kept = phases > 0
+    if not kept.any():
+        return Trajectory.rest(axes, points[0])
+    return Trajectory(axes, phases[kept], coefficients[kept])

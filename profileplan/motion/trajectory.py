@@ -1,0 +1,353 @@
+"""Where is each axis at any time, and how large do its motion's derivatives become?
+
+A ``Trajectory`` is polynomial pieces in time for all axes of a machine, of degree five at most. It
+is exact: values, derivatives and extremes come from the polynomials, never from samples. Arrays
+are (n, d): pieces or times first, axes last. Units are those of the axes: mm or degree, and s.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING, NamedTuple
+
+import numpy as np
+
+from profileplan.motion import polynomials
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from profileplan.motion.polynomials import Array
+
+ORDER = 6
+"""Coefficients of a piece: degree five and below."""
+
+VELOCITY_FLOOR = 1e-10
+"""Share of an axis's greatest speed below which it counts as standing, when its acceleration is
+called speeding up or slowing down: rounding decides the direction of a slower motion."""
+
+BREAK_TOLERANCE = 4 * np.finfo(np.float64).eps
+"""Distance, as a share of the end time, at which breaks of two axes count as one."""
+
+
+class Peak(NamedTuple):
+    """The greatest value of a quantity on every axis, and when it is first taken.
+
+    value : (d,) array, never negative; time : (d,) array [s].
+    """
+
+    value: Array
+    time: Array
+
+
+class Peaks(NamedTuple):
+    """Greatest magnitudes on every axis over a whole trajectory.
+
+    velocity [mm/s], acceleration [mm/s²] while it does not oppose the velocity, deceleration
+    [mm/s²] while it does, jerk [mm/s³] inside the pieces (a jump of the acceleration between two
+    pieces is no jerk: ``Trajectory.jumps(2)`` finds it). For a rotary axis deg for mm.
+    """
+
+    velocity: Peak
+    acceleration: Peak
+    deceleration: Peak
+    jerk: Peak
+
+
+@dataclass(frozen=True, eq=False)
+class Trajectory:
+    """Piecewise polynomial motion of d axes.
+
+    Parameters
+    ----------
+    axes : tuple of str
+        Names of the d axes.
+    durations : (n,) array [s]
+        How long each piece lasts, at least 0; the first begins at time 0. Kept rather than the
+        times of the breaks, whose differences are rounded the more the later they are.
+    coefficients : (n, 6, d) array
+        Ascending powers of the time since the piece's own beginning [mm, mm/s, ...].
+
+    Examples
+    --------
+    >>> rise = Trajectory(("x",), np.array([2.0]), np.eye(6)[[2]].reshape(1, 6, 1))
+    >>> rise.at([0.0, 1.0, 2.0]).ravel()
+    array([0., 1., 4.])
+    >>> rise.at([1.0], 1).item()
+    2.0
+    """
+
+    axes: tuple[str, ...]
+    durations: Array
+    coefficients: Array
+
+    def __post_init__(self) -> None:
+        needed = (self.durations.size, ORDER, len(self.axes))
+        if not needed[0] or self.coefficients.shape != needed:
+            message = f"coefficients of shape {needed} needed, not {self.coefficients.shape}"
+            raise ValueError(message)
+
+    @cached_property
+    def breaks(self) -> Array:
+        """Times at which the pieces begin and end, from 0 on: (n + 1,) [s]."""
+        return np.concatenate([[0.0], np.cumsum(self.durations)])
+
+    @property
+    def duration(self) -> float:
+        """Time from beginning to end [s]."""
+        return float(self.breaks[-1])
+
+    @cached_property
+    def first(self) -> Array:
+        """Position at the beginning, (d,) [mm]."""
+        return self.coefficients[0, 0]
+
+    @cached_property
+    def last(self) -> Array:
+        """Position at the end, (d,) [mm]."""
+        return self._at_ends_of_pieces(0)[-1]
+
+    def at(self, times: Sequence[float] | Array, derivative: int = 0) -> Array:
+        """Return position, or a derivative of it, at given times.
+
+        Before its beginning and from its end on the motion is at rest: position held, derivatives
+        zero. At a break the piece that begins there counts.
+
+        Parameters
+        ----------
+        times : (m,) array [s]
+        derivative : int
+            0 position, 1 velocity, 2 acceleration, 3 jerk, ...
+
+        Returns
+        -------
+        (m, d) array
+        """
+        times = np.asarray(times, dtype=np.float64)
+        pieces = np.searchsorted(self.breaks, times, side="right") - 1
+        pieces = np.clip(pieces, 0, self.durations.size - 1)
+        local = np.clip(times - self.breaks[pieces], 0.0, self.durations[pieces])
+        coefficients = self._derivative(derivative)
+        value = np.zeros((times.size, len(self.axes)))
+        for power in range(coefficients.shape[1] - 1, -1, -1):
+            value = value * local[:, np.newaxis] + coefficients[pieces, power]
+        if derivative:
+            value[(times < 0) | (times >= self.duration)] = 0.0
+        return value
+
+    def extremes(self, derivative: int = 0) -> tuple[Peak, Peak]:
+        """Return the least and the greatest value of every axis with its time, exactly.
+
+        Parameters
+        ----------
+        derivative : int
+            0 position, 1 velocity, 2 acceleration, 3 jerk.
+
+        Returns
+        -------
+        low, high : Peak
+            ``value`` (d,) and ``time`` (d,) [s].
+        """
+        count, axes = self.coefficients.shape[0], len(self.axes)
+        rows = self._rows(derivative)
+        low, high, low_at, high_at = polynomials.extremes(rows, self._row_lengths)
+        starts = self.breaks[:-1, np.newaxis]
+        low, high = low.reshape(count, axes), high.reshape(count, axes)
+        low_at = low_at.reshape(count, axes) + starts
+        high_at = high_at.reshape(count, axes) + starts
+        columns = np.arange(axes)
+        lowest, highest = low.argmin(axis=0), high.argmax(axis=0)
+        return (
+            Peak(low[lowest, columns], low_at[lowest, columns]),
+            Peak(high[highest, columns], high_at[highest, columns]),
+        )
+
+    @cached_property
+    def peaks(self) -> Peaks:
+        """Greatest velocity, acceleration, deceleration and jerk of every axis, exactly.
+
+        The acceleration is bounded by another limit where it opposes the velocity, so every piece
+        is cut where velocity or acceleration change sign and each part is counted where it belongs.
+        """
+        velocity = self._magnitude(1)
+        # Durations are rounded as the time of their break is: so far off is the velocity there.
+        rounding = BREAK_TOLERANCE * self.duration * self._magnitude(2).value
+        floor = np.maximum(VELOCITY_FLOOR * velocity.value, rounding)
+        acceleration, deceleration = self._speeding_and_slowing(floor)
+        return Peaks(velocity, acceleration, deceleration, self._magnitude(3))
+
+    def jumps(self, derivative: int) -> Peak:
+        """Return the greatest jump at a break on every axis: 0 in position, 1 in velocity, ...
+
+        The motion is at rest before its beginning and after its end, so a velocity there is a jump.
+        """
+        ends = self._at_ends_of_pieces(derivative)
+        starts = self._derivative(derivative)[:, 0]
+        outside = np.zeros((1, len(self.axes)))
+        before = np.concatenate([starts[:1] if derivative == 0 else outside, ends])
+        after = np.concatenate([starts, ends[-1:] if derivative == 0 else outside])
+        jump = np.abs(after - before)
+        worst = jump.argmax(axis=0)
+        return Peak(jump[worst, np.arange(len(self.axes))], self.breaks[worst])
+
+    def speed(self, members: Sequence[bool]) -> tuple[float, float]:
+        """Return the greatest speed along the path of some axes and its time, exactly.
+
+        Parameters
+        ----------
+        members : (d,) sequence of bool
+            The axes whose velocities count: the linear ones.
+
+        Returns
+        -------
+        speed [mm/s], time [s]
+        """
+        velocity = polynomials.trimmed(np.moveaxis(self._derivative(1), 1, 2))
+        width = velocity.shape[-1]
+        squared = np.zeros((velocity.shape[0], 2 * width - 1))
+        for axis in np.flatnonzero(members):
+            for power in range(width):
+                squared[:, power : power + width] += (
+                    velocity[:, axis, power : power + 1] * velocity[:, axis]
+                )
+        _, high, _, high_at = polynomials.extremes(squared, self.durations)
+        fastest = int(high.argmax())
+        return float(np.sqrt(max(high[fastest], 0.0))), float(
+            self.breaks[fastest] + high_at[fastest]
+        )
+
+    def stretched(self, duration: float) -> Trajectory:
+        """Return the same positions in another time.
+
+        With c = old duration / new duration velocities are multiplied by c, accelerations by c²,
+        jerks by c³.
+
+        Source: Hollerbach: Dynamic Scaling of Manipulator Trajectories (1984); from memory.
+        """
+        c = self.duration / duration
+        powers = np.power(c, np.arange(ORDER))
+        return Trajectory(self.axes, self.durations / c, self.coefficients * powers[:, np.newaxis])
+
+    @classmethod
+    def rest(cls, axes: tuple[str, ...], position: Array, duration: float = 0.0) -> Trajectory:
+        """Return a stay at a position, (d,) [mm], for a time [s]."""
+        coefficients = np.zeros((1, ORDER, len(axes)))
+        coefficients[0, 0] = position
+        return cls(axes, np.array([duration]), coefficients)
+
+    @classmethod
+    def chain(cls, parts: Sequence[Trajectory]) -> Trajectory:
+        """Return trajectories of the same axes played one after the other.
+
+        Parts that take no time are left out, unless nothing else is there.
+        """
+        lasting = [part for part in parts if part.duration > 0] or list(parts[:1])
+        return cls(
+            lasting[0].axes,
+            np.concatenate([part.durations for part in lasting]),
+            np.concatenate([part.coefficients for part in lasting]),
+        )
+
+    @classmethod
+    def stack(cls, parts: Sequence[Trajectory]) -> Trajectory:
+        """Return one trajectory of all axes of trajectories that are played at the same time.
+
+        All begin together; one that ends before the others rests where it ended. Breaks are the
+        union of theirs, so every piece is one polynomial on every axis.
+        """
+        breaks = np.unique(np.concatenate([part.breaks for part in parts]))
+        apart = np.diff(breaks) > BREAK_TOLERANCE * breaks[-1]
+        breaks = np.concatenate([[0.0], breaks[1:][apart]])
+        if breaks.size == 1:
+            breaks = np.zeros(2)
+        coefficients = np.concatenate([part._expanded(breaks) for part in parts], axis=-1)  # noqa: SLF001 - the same class
+        axes = tuple(axis for part in parts for axis in part.axes)
+        return cls(axes, np.diff(breaks), coefficients)
+
+    def _expanded(self, breaks: Array) -> Array:
+        """Return the coefficients about other breaks that include this trajectory's own."""
+        middles = 0.5 * (breaks[:-1] + breaks[1:])
+        pieces = np.searchsorted(self.breaks, middles, side="right") - 1
+        inside = pieces < self.durations.size
+        pieces = np.minimum(pieces, self.durations.size - 1)
+        offset = np.where(inside, breaks[:-1] - self.breaks[pieces], 0.0)[:, np.newaxis]
+        expanded = self.coefficients[pieces].copy()
+        # Taylor shift by repeated synthetic division: Knuth, The Art of Computer Programming,
+        # volume 2, section 4.6.4 (from memory).
+        for first in range(ORDER - 1):
+            for power in range(ORDER - 2, first - 1, -1):
+                expanded[:, power] += offset * expanded[:, power + 1]
+        expanded[~inside, 0] = self.last
+        expanded[~inside, 1:] = 0.0
+        return expanded
+
+    def _derivative(self, order: int) -> Array:
+        """Return the coefficients of a derivative: (n, 6 - order, d), at least one power."""
+        coefficients = np.moveaxis(self.coefficients, 1, 2)
+        for _ in range(order):
+            coefficients = polynomials.derivative(coefficients)
+        return np.moveaxis(coefficients, 2, 1)
+
+    def _rows(self, derivative: int) -> Array:
+        """Return a derivative's polynomials one a row, piece by piece, axis by axis: (n d, k)."""
+        by_axis = np.moveaxis(self._derivative(derivative), 1, 2)
+        return polynomials.trimmed(by_axis.reshape(-1, by_axis.shape[-1]))
+
+    @cached_property
+    def _row_lengths(self) -> Array:
+        """Durations of the pieces in the order of ``_rows``: (n d,) [s]."""
+        return np.repeat(self.durations, len(self.axes))
+
+    def _at_ends_of_pieces(self, derivative: int) -> Array:
+        """Return the value just before the end of each piece: (n, d)."""
+        by_axis = np.moveaxis(self._derivative(derivative), 1, 2)
+        return polynomials.evaluate(by_axis, self.durations[:, np.newaxis])
+
+    def _magnitude(self, derivative: int) -> Peak:
+        """Return the greatest magnitude of a derivative on every axis."""
+        low, high = self.extremes(derivative)
+        downward = -low.value > high.value
+        return Peak(
+            np.where(downward, -low.value, high.value), np.where(downward, low.time, high.time)
+        )
+
+    def _speeding_and_slowing(self, floor: Array) -> tuple[Peak, Peak]:
+        """Return peak magnitudes of the acceleration along and against the velocity.
+
+        Parameters
+        ----------
+        floor : (d,) array [mm/s]
+            Slower than this an axis counts as standing.
+        """
+        velocity, acceleration = self._rows(1), self._rows(2)
+        lengths = self._row_lengths
+        ends = np.stack([np.zeros_like(lengths), lengths], axis=-1)
+        inner = [
+            polynomials.roots(rows, lengths)
+            for rows in (velocity, acceleration, polynomials.derivative(acceleration))
+        ]
+        cuts = np.sort(np.concatenate([ends, *inner], axis=-1), axis=-1)
+        # NaN sorts last; a cut at the end of the piece adds an empty part.
+        cuts = np.where(np.isnan(cuts), lengths[:, np.newaxis], cuts)
+        middles = 0.5 * (cuts[:, :-1] + cuts[:, 1:])
+        velocity_there = polynomials.evaluate(velocity[:, np.newaxis, :], middles)
+        acceleration_there = polynomials.evaluate(acceleration[:, np.newaxis, :], middles)
+        sizes = np.abs(polynomials.evaluate(acceleration[:, np.newaxis, :], cuts))
+        size = np.maximum(sizes[:, :-1], sizes[:, 1:])
+        at = np.where(sizes[:, :-1] >= sizes[:, 1:], cuts[:, :-1], cuts[:, 1:])
+        at += np.repeat(self.breaks[:-1], len(self.axes))[:, np.newaxis]
+        moving = np.abs(velocity_there) > np.tile(floor, self.durations.size)[:, np.newaxis]
+        slowing = velocity_there * acceleration_there < 0
+        return (
+            self._greatest(np.where(moving & ~slowing, size, 0.0), at),
+            self._greatest(np.where(moving & slowing, size, 0.0), at),
+        )
+
+    def _greatest(self, size: Array, at: Array) -> Peak:
+        """Return the greatest of sizes (n d, k) on every axis, and the time of it."""
+        count, axes = self.durations.size, len(self.axes)
+        by_axis = np.moveaxis(size.reshape(count, axes, -1), 1, 0).reshape(axes, -1)
+        times = np.moveaxis(at.reshape(count, axes, -1), 1, 0).reshape(axes, -1)
+        worst = by_axis.argmax(axis=-1)
+        return Peak(by_axis[np.arange(axes), worst], times[np.arange(axes), worst])
