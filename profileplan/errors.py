@@ -78,4 +78,4 @@ class InputError(ProfileplanError, ValueError):
 
 
 class PlanError(ProfileplanError):
-    """The input is sound, but the job cannot be planned: the message says what would have to change."""
+    """The input is sound, but the job cannot be planned; the message says what would help."""

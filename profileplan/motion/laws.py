@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, NamedTuple, Protocol
 
 import numpy as np
 
-from profileplan.motion.trajectory import ORDER, Trajectory
+from profileplan.motion.trajectory import ORDER
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -140,24 +140,6 @@ class Law:
     solve: _Solve
     pieces: _Pieces
 
-    def trajectory(self, moves: Moves, *, axis: str, start: float = 0.0) -> Trajectory:
-        """Return one move of one axis (arrays of shape () or (1,)) as a trajectory from 0 s on.
-
-        Examples
-        --------
-        >>> law = LAWS["trapezoidal"]
-        >>> moves = law.solve(30.0, Limits(10.0, 10.0, 10.0, np.inf))
-        >>> law.trajectory(moves, axis="x").breaks
-        array([0., 1., 3., 4.])
-        """
-        phases = moves.phases.reshape(-1)
-        coefficients = self.pieces(moves).reshape(-1, ORDER) * np.sign(moves.distance).reshape(())
-        coefficients[:, 0] += start
-        kept = phases > 0
-        if not kept.any():
-            return Trajectory.rest((axis,), np.array([start]))
-        return Trajectory((axis,), phases[kept], coefficients[kept, :, np.newaxis])
-
 
 def solve_trapezoidal(distance: Array | float, limits: Limits) -> Moves:
     """Return the least-time moves: trapezoidal velocity, corners rounded where jerk is limited.
@@ -269,13 +251,14 @@ def solve_quintic(distance: Array | float, limits: Limits) -> Moves:
 
 
 def pieces_quintic(moves: Moves) -> Array:
-    """Return the polynomial 10 u³ - 15 u⁴ + 6 u⁵, u = t / T, scaled to the distance: (..., 1, 6)."""
+    """Return the polynomial 10 u³ - 15 u⁴ + 6 u⁵, u = t / T, times the distance: (..., 1, 6)."""
     rate = np.divide(
         1.0, moves.duration, out=np.zeros_like(moves.duration), where=moves.duration > 0
     )
     shape = np.array([0.0, 0.0, 0.0, 10.0, -15.0, 6.0])
     powers = rate[..., np.newaxis] ** np.arange(ORDER)
-    return (np.abs(moves.distance)[..., np.newaxis] * shape * powers)[..., np.newaxis, :]
+    pieces: Array = np.abs(moves.distance)[..., np.newaxis] * shape * powers
+    return pieces[..., np.newaxis, :]
 
 
 LAWS: Mapping[LawName, Law] = {
@@ -287,7 +270,9 @@ LAWS: Mapping[LawName, Law] = {
 
 def _broadcast(distance: Array | float, limits: Limits) -> list[Array]:
     """Return distance and the four limits as float arrays of one shape."""
-    return list(np.broadcast_arrays(*(np.asarray(item, dtype=np.float64) for item in (distance, *limits))))
+    return list(
+        np.broadcast_arrays(*(np.asarray(item, dtype=np.float64) for item in (distance, *limits)))
+    )
 
 
 def _peak_velocity(length: Array, acceleration: Array, deceleration: Array, jerk: Array) -> Array:
@@ -327,7 +312,9 @@ def _ramp(peak: Array, acceleration: Array, jerk: Array) -> tuple[Array, Array, 
     bounded = np.isfinite(jerk)
     attained = np.minimum(acceleration, np.where(bounded, jerk, 0.0) * up)
     attained = np.where(bounded, attained, acceleration)
-    steady = np.maximum(np.divide(peak, attained, out=np.zeros_like(peak), where=peak > 0) - up, 0.0)
+    steady = np.maximum(
+        np.divide(peak, attained, out=np.zeros_like(peak), where=peak > 0) - up, 0.0
+    )
     return up, steady, np.where(peak > 0, attained, 0.0)
 
 

@@ -12,8 +12,14 @@ import numpy.typing as npt
 Array = npt.NDArray[np.float64]
 """An array of floats: the one name for it in this package."""
 
+Flags = npt.NDArray[np.bool_]
+"""An array of truth values."""
+
 ITERATION_LIMIT = 200
-"""Steps of the bracketed root search. Every third one halves the bracket, so 180 reach the last bit."""
+"""Steps of the bracketed root search; every third halves the bracket: 180 reach the last bit."""
+
+VALUE_ROUNDING = 4 * np.finfo(np.float64).eps
+"""Rounding error of a value, as a share of the sum of the coefficients' magnitudes."""
 
 ROOT_TOLERANCE = 4 * np.finfo(np.float64).eps
 """Width, as a share of the interval, at which a bracketed root counts as found."""
@@ -123,6 +129,8 @@ def _unit_roots(coefficients: Array) -> Array:
         return np.empty((coefficients.shape[0], 0))
     if degree == 1:
         return _linear_roots(coefficients)
+    if degree == 2:
+        return _quadratic_roots(coefficients)
     turning = _unit_roots(derivative(coefficients))
     count = coefficients.shape[0]
     edges = np.concatenate(
@@ -130,11 +138,12 @@ def _unit_roots(coefficients: Array) -> Array:
         axis=-1,
     )
     values = evaluate(coefficients[:, np.newaxis, :], edges)
+    # What rounding alone can explain is zero: a double root at an end of the interval, say.
+    values[np.abs(values) <= VALUE_ROUNDING * np.abs(coefficients).sum(axis=-1, keepdims=True)] = 0
     low, high = values[:, :-1], values[:, 1:]
-    crosses = (low < 0) & (high > 0) | (low > 0) & (high < 0) | (high == 0) & (low != 0)
-    crosses[:, 0] |= (low[:, 0] == 0) & (high[:, 0] != 0)
-    found = np.full(crosses.shape, np.nan)
-    rows, columns = np.nonzero(crosses)
+    found = np.where((high == 0) & (low != 0), edges[:, 1:], np.nan)
+    found[:, 0] = np.where((low[:, 0] == 0) & (high[:, 0] != 0), 0.0, found[:, 0])
+    rows, columns = np.nonzero(low * high < 0)
     found[rows, columns] = _bracketed(
         coefficients[rows], edges[rows, columns], edges[rows, columns + 1]
     )
@@ -149,6 +158,25 @@ def _linear_roots(coefficients: Array) -> Array:
     root = np.full(constant.shape, np.nan)
     np.divide(-constant, slope, out=root, where=inside)
     return root[:, np.newaxis]
+
+
+def _quadratic_roots(coefficients: Array) -> Array:
+    """Return the roots of parabolas in [0, 1] by the formula that does not cancel: (m, 3) → (m, 2).
+
+    Source: Press et al.: Numerical Recipes (2007), section 5.6 (from memory).
+    """
+    constant, linear, square = np.moveaxis(coefficients, -1, 0)
+    square_free = linear**2 - 4 * square * constant
+    real = square_free >= 0
+    half = -0.5 * (linear + np.copysign(np.sqrt(np.where(real, square_free, 0.0)), linear))
+    pairs = np.stack(
+        [
+            _linear_roots(np.stack(pair, axis=-1))[:, 0]
+            for pair in ((-half, square), (-constant, half))
+        ],
+        axis=-1,
+    )
+    return np.sort(np.where(real[:, np.newaxis], pairs, np.nan), axis=-1)
 
 
 def _bracketed(coefficients: Array, low: Array, high: Array) -> Array:

@@ -26,7 +26,7 @@ from profileplan.motion.trajectory import ORDER, Trajectory
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
-    from profileplan.motion.laws import Law
+    from profileplan.motion.laws import Law, Moves
     from profileplan.motion.polynomials import Array
 
 
@@ -136,10 +136,7 @@ def line_durations(distance: Array, limits: Limits, law: Law) -> Array:
     (...) array [s]
         Zero where nothing moves.
     """
-    moving = np.any(distance != 0, axis=-1)
-    # A line of no length has infinite limits; any finite one gives it its duration of zero.
-    finite = Limits(*(np.where(moving, limit, 1.0) for limit in limits))
-    return law.solve(np.where(moving, 1.0, 0.0), finite).duration
+    return _way(distance, limits, law).duration
 
 
 def lines(
@@ -167,25 +164,26 @@ def lines(
         How long the motion rests at each point.
     """
     distance = np.diff(points, axis=0)
-    moving = np.any(distance != 0, axis=-1)
-    finite = Limits(*(np.where(moving, limit, 1.0) for limit in limits))
-    moves = law.solve(np.where(moving, 1.0, 0.0), finite).stretched(durations)
-    share = law.pieces(moves)
-    coefficients = share[..., np.newaxis] * distance[:, np.newaxis, np.newaxis, :]
+    moves = _way(distance, limits, law).stretched(durations)
+    coefficients = law.pieces(moves)[..., np.newaxis] * distance[:, np.newaxis, np.newaxis, :]
     coefficients[:, :, 0] += points[:-1, np.newaxis, :]
-    # From its middle on a line is counted from its end, so that it ends there exactly.
-    phases = np.concatenate([moves.phases, np.zeros((distance.shape[0], 1))], axis=-1)
-    rest = np.zeros((distance.shape[0], 1, ORDER, len(axes)))
-    rest[:, 0, 0] = points[1:]
-    coefficients = np.concatenate([coefficients, rest], axis=1).reshape(-1, ORDER, len(axes))
-    if waits is not None:
-        phases[:, -1] = waits[1:]
-        lead_in = np.zeros((1, ORDER, len(axes)))
-        lead_in[0, 0] = points[0]
-        coefficients = np.concatenate([lead_in, coefficients])
-        phases = np.concatenate([waits[:1], phases.reshape(-1)])
-    phases = phases.reshape(-1)
+    rests = np.zeros((len(points), 1, ORDER, len(axes)))
+    rests[:, 0, 0] = points
+    pauses = np.zeros(len(points)) if waits is None else waits
+    # One row a line: its phases, then the rest at its end.
+    phases = np.concatenate([moves.phases, pauses[1:, np.newaxis]], axis=-1)
+    coefficients = np.concatenate([coefficients, rests[1:]], axis=1)
+    phases = np.concatenate([pauses[:1], phases.reshape(-1)])
+    coefficients = np.concatenate([rests[0], coefficients.reshape(-1, ORDER, len(axes))])
     kept = phases > 0
     if not kept.any():
         return Trajectory.rest(axes, points[0])
     return Trajectory(axes, phases[kept], coefficients[kept])
+
+
+def _way(distance: Array, limits: Limits, law: Law) -> Moves:
+    """Return the moves along the way of straight lines, 1 for each, 0 where nothing moves."""
+    moving = np.any(distance != 0, axis=-1)
+    # Nothing bounds a line of no length; any finite limits give it its duration of zero.
+    finite = Limits(*(np.where(moving, limit, 1.0) for limit in limits))
+    return law.solve(np.where(moving, 1.0, 0.0), finite)

@@ -101,12 +101,14 @@ class Trajectory:
     @cached_property
     def first(self) -> Array:
         """Position at the beginning, (d,) [mm]."""
-        return self.coefficients[0, 0]
+        position: Array = self.coefficients[0, 0]
+        return position
 
     @cached_property
     def last(self) -> Array:
         """Position at the end, (d,) [mm]."""
-        return self._at_ends_of_pieces(0)[-1]
+        position: Array = self._at_ends_of_pieces(0)[-1]
+        return position
 
     def at(self, times: Sequence[float] | Array, derivative: int = 0) -> Array:
         """Return position, or a derivative of it, at given times.
@@ -191,8 +193,8 @@ class Trajectory:
         worst = jump.argmax(axis=0)
         return Peak(jump[worst, np.arange(len(self.axes))], self.breaks[worst])
 
-    def speed(self, members: Sequence[bool]) -> tuple[float, float]:
-        """Return the greatest speed along the path of some axes and its time, exactly.
+    def speeds(self, members: Sequence[bool]) -> Peak:
+        """Return the greatest speed along the path of some axes in every piece, exactly.
 
         Parameters
         ----------
@@ -201,7 +203,8 @@ class Trajectory:
 
         Returns
         -------
-        speed [mm/s], time [s]
+        Peak
+            ``value`` (n,) [mm/s] and ``time`` (n,) [s].
         """
         velocity = polynomials.trimmed(np.moveaxis(self._derivative(1), 1, 2))
         width = velocity.shape[-1]
@@ -212,10 +215,7 @@ class Trajectory:
                     velocity[:, axis, power : power + 1] * velocity[:, axis]
                 )
         _, high, _, high_at = polynomials.extremes(squared, self.durations)
-        fastest = int(high.argmax())
-        return float(np.sqrt(max(high[fastest], 0.0))), float(
-            self.breaks[fastest] + high_at[fastest]
-        )
+        return Peak(np.sqrt(np.maximum(high, 0.0)), self.breaks[:-1] + high_at)
 
     def stretched(self, duration: float) -> Trajectory:
         """Return the same positions in another time.
@@ -256,6 +256,8 @@ class Trajectory:
         All begin together; one that ends before the others rests where it ended. Breaks are the
         union of theirs, so every piece is one polynomial on every axis.
         """
+        if len(parts) == 1:
+            return parts[0]
         breaks = np.unique(np.concatenate([part.breaks for part in parts]))
         apart = np.diff(breaks) > BREAK_TOLERANCE * breaks[-1]
         breaks = np.concatenate([[0.0], breaks[1:][apart]])

@@ -1,0 +1,64 @@
+"""What the user wrote: machine file, cycle file and waypoint file as frozen records."""
+
+from profileplan.inputs.cycle import (
+    LAW_NAMES,
+    Cycle,
+    LawName,
+    Line,
+    Move,
+    PathStep,
+    Payload,
+    Place,
+    Signal,
+    Step,
+    Trace,
+    Transfer,
+    Wait,
+    Waypoint,
+)
+from profileplan.inputs.cycle_file import read_cycle
+from profileplan.inputs.job import Job
+from profileplan.inputs.machine import (
+    Axis,
+    AxisLimits,
+    Circle,
+    Keepout,
+    Machine,
+    SetpointSettings,
+    Tool,
+)
+from profileplan.inputs.machine_file import read_machine
+from profileplan.inputs.rules import Outline, Positions
+from profileplan.inputs.source import load_job
+from profileplan.inputs.waypoints import read_waypoints
+
+__all__ = [
+    "LAW_NAMES",
+    "Axis",
+    "AxisLimits",
+    "Circle",
+    "Cycle",
+    "Job",
+    "Keepout",
+    "LawName",
+    "Line",
+    "Machine",
+    "Move",
+    "Outline",
+    "PathStep",
+    "Payload",
+    "Place",
+    "Positions",
+    "SetpointSettings",
+    "Signal",
+    "Step",
+    "Tool",
+    "Trace",
+    "Transfer",
+    "Wait",
+    "Waypoint",
+    "load_job",
+    "read_cycle",
+    "read_machine",
+    "read_waypoints",
+]

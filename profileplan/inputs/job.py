@@ -1,0 +1,311 @@
+"""Whether a machine and a cycle fit each other.
+
+The places of faults are key paths of the cycle file, with steps counted from 1, or lines and
+columns of the waypoint file that a point came from.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+from profileplan.errors import Fault, InputError
+from profileplan.inputs.cycle import (
+    STEP_KEYS,
+    Cycle,
+    Line,
+    Move,
+    PathStep,
+    Signal,
+    Step,
+    Trace,
+    Transfer,
+    Wait,
+    Waypoint,
+)
+from profileplan.inputs.rules import join, limited, near, shown
+
+if TYPE_CHECKING:
+    from collections.abc import Iterable, Iterator, Mapping
+    from pathlib import Path
+
+    from profileplan.inputs.machine import Axis, Machine
+    from profileplan.inputs.rules import Positions
+
+# headings of a setpoint table after the name of an axis, with {} for its unit
+COLUMNS = ("pos_{}", "vel_{}_s", "acc_{}_s2", "jerk_{}_s3", "force_N", "torque_Nm")
+
+
+@dataclass(frozen=True)
+class Job:
+    """A cycle on a machine, each checked against the other.
+
+    Parameters
+    ----------
+    machine : Machine
+        What does it.
+    cycle : Cycle
+        What is done.
+    """
+
+    machine: Machine
+    cycle: Cycle
+
+    def __post_init__(self) -> None:
+        cycle = self.cycle
+        faults = fit_faults(self.machine, cycle.start, cycle.steps, cycle.source)
+        if not faults and _does_nothing(cycle):
+            message = "nothing to do: no step moves an axis, and no step waits"
+            faults = [Fault("", message, cycle.source)]
+        if faults:
+            raise InputError(faults)
+
+    def positions(self) -> tuple[tuple[float, ...], ...]:
+        """Return where the axes are told to be between the steps.
+
+        Returns
+        -------
+        tuple of tuples
+            Entry 0 is the start, entry i + 1 the end of step i (counted from 0); each in the
+            order of the machine's axes [mm or deg].
+        """
+        names = self.machine.axis_names
+        now = dict(self.cycle.start)
+        result = [tuple(now[name] for name in names)]
+        for step in self.cycle.steps:
+            for stop in _stops(step):
+                now.update(stop)
+            result.append(tuple(now[name] for name in names))
+        return tuple(result)
+
+    def points(self, index: int) -> tuple[tuple[float, ...], ...]:
+        """Return the points that a step leads through, its end last: one for each that it names.
+
+        Parameters
+        ----------
+        index : int
+            The step, counted from 0.
+
+        Returns
+        -------
+        tuple of tuples
+            Each in the order of the machine's axes [mm or deg].
+        """
+        names = self.machine.axis_names
+        now = dict(zip(names, self.positions()[index], strict=True))
+        result = []
+        for stop in _stops(self.cycle.steps[index]):
+            now.update(stop)
+            result.append(tuple(now[name] for name in names))
+        return tuple(result)
+
+    def step_label(self, index: int) -> str:
+        """Return a step's own name, or its kind and its number counted from 1.
+
+        Parameters
+        ----------
+        index : int
+            Counted from 0.
+        """
+        return self.cycle.step_label(index)
+
+
+def fit_faults(
+    machine: Machine, start: Positions, steps: Iterable[Step], file: Path | None
+) -> list[Fault]:
+    """Return what does not fit between a machine and a cycle's values, in their order.
+
+    Parameters
+    ----------
+    machine : Machine
+        What does it.
+    start : mapping
+        Axis name → position at the start [mm or deg].
+    steps : iterable of Step
+        What is done.
+    file : Path, optional
+        The cycle file.
+    """
+    axes = {axis.name: axis for axis in machine.axes}
+    faults = [*_position_faults(axes, start, "start"), *_start_faults(axes, start)]
+    for index, step in enumerate(steps, start=1):
+        place = f"steps[{index}]"
+        faults += [f if f.file else f.within(place) for f in _step_faults(machine, axes, step)]
+    return [fault.within("", file) for fault in faults]
+
+
+def _start_faults(axes: Mapping[str, Axis], start: Positions) -> Iterator[Fault]:
+    for name, axis in axes.items():
+        if name not in start:
+            message = f"missing; the start gives every axis a position, here {_travel(axis)}"
+            yield Fault(join("start", name), message)
+
+
+def _step_faults(machine: Machine, axes: Mapping[str, Axis], step: Step) -> Iterator[Fault]:
+    """Yield the faults of a step; places are relative to it, or to the file that is named."""
+    match step:
+        case Move() | Transfer():
+            yield from _position_faults(axes, step.to, step.kind)
+        case Line():
+            yield from _position_faults(axes, step.to, step.kind)
+            yield from _speed_faults(axes, step.speed, step.to)
+        case PathStep():
+            yield from _point_faults(axes, step)
+            named = [name for point in step.points for name in point.to]
+            yield from _speed_faults(axes, step.speed, dict.fromkeys(named, 0.0))
+        case Trace():
+            yield from _at_faults(axes, step.at)
+            if step.with_signal is not None:
+                yield from _signal_faults(axes, step.with_signal, "with_signal")
+        case Signal():
+            for output in step.states:
+                yield from _signal_faults(axes, output, join("signal", output))
+        case _:
+            pass
+    if isinstance(step, Transfer) and step.height is not None:
+        yield from _height_faults(machine, step.height)
+
+
+def _position_faults(axes: Mapping[str, Axis], positions: Positions, place: str) -> Iterator[Fault]:
+    for name, position in positions.items():
+        if message := _position_fault(axes, name, position):
+            yield Fault(join(place, name), message)
+
+
+def _position_fault(axes: Mapping[str, Axis], name: str, position: float) -> str | None:
+    axis = axes.get(name)
+    if axis is None:
+        hint = near(name, axes) or f"; this machine has {', '.join(axes)}"
+        return f"unknown axis{hint}"
+    if not axis.travel[0] <= position <= axis.travel[1]:
+        return f"{shown(position)} {axis.unit}; outside of the travel, {_travel(axis)}"
+    return None
+
+
+def _travel(axis: Axis) -> str:
+    return f"{shown(axis.travel[0])} to {shown(axis.travel[1])} {axis.unit}"
+
+
+def _point_faults(axes: Mapping[str, Axis], step: PathStep) -> list[Fault]:
+    """Return the faults of a path's points, those of a file with line and column."""
+    if step.file is None:
+        return [
+            fault
+            for index, point in enumerate(step.points, start=1)
+            for fault in _position_faults(axes, point.to, f"path[{index}]")
+        ]
+    unknown: dict[str, Fault] = {}
+    faults = []
+    for point in step.points:
+        for name, position in point.to.items():
+            if message := _position_fault(axes, name, position):
+                if name in axes:
+                    faults.append(Fault(line_and_column(point, name), message, step.file))
+                else:
+                    unknown.setdefault(name, Fault(f"column {name}", message, step.file))
+    return [*unknown.values(), *limited(faults, step.file)]
+
+
+def line_and_column(point: Waypoint, column: str) -> str:
+    """Return the place of a value in a waypoint file.
+
+    Parameters
+    ----------
+    point : Waypoint
+        The point, with its line.
+    column : str
+        The heading.
+    """
+    return f"line {point.line}, column {column}" if point.line else f"column {column}"
+
+
+def _speed_faults(
+    axes: Mapping[str, Axis], speed: float | None, named: Positions
+) -> Iterator[Fault]:
+    known = [axes[name] for name in named if name in axes]
+    if speed is not None and known and all(axis.kind == "rotary" for axis in known):
+        names = ", ".join(axis.name for axis in known)
+        yield Fault(
+            "speed",
+            f"{shown(speed)} mm/s; counts along linear axes, and only rotary ones are named: "
+            f"{names}; leave it out",
+        )
+
+
+def _at_faults(axes: Mapping[str, Axis], at: Positions) -> Iterator[Fault]:
+    """Yield the faults of a trace's other keys: each is an axis or a misspelt key."""
+    for name, position in at.items():
+        if name in axes:
+            message = _position_fault(axes, name, position)
+        else:
+            hint = (
+                near(name, [*STEP_KEYS["trace"], *axes]) or f"; this machine has {', '.join(axes)}"
+            )
+            message = f"unknown key, and no axis{hint}"
+        if message:
+            yield Fault(join("", name), message)
+
+
+def _signal_faults(axes: Mapping[str, Axis], output: str, place: str) -> Iterator[Fault]:
+    for axis in axes.values():
+        if output in _columns(axis):
+            message = f"{shown(output)} is a column of axis {axis.name} in the setpoint table"
+            yield Fault(place, f"{message}; choose another name")
+
+
+def _columns(axis: Axis) -> set[str]:
+    """Return the headings that an axis can have in a setpoint table."""
+    return {f"{axis.name}_{column.format(axis.unit)}" for column in COLUMNS}
+
+
+def _height_faults(machine: Machine, height: float) -> Iterator[Fault]:
+    if machine.up_axis is None:
+        message = f"{shown(height)} mm; this machine has no up axis: give `up` in its file"
+        yield Fault("height", message)
+    else:
+        axis = machine.axis(machine.up_axis)
+        if not axis.travel[0] <= height <= axis.travel[1]:
+            yield Fault(
+                "height",
+                f"{shown(height)} mm; outside of the travel of {axis.name}, {_travel(axis)}",
+            )
+
+
+def _stops(step: Step) -> tuple[Positions, ...]:
+    """Return the positions that a step names, in order."""
+    match step:
+        case Move() | Line() | Transfer():
+            return (step.to,)
+        case PathStep():
+            return tuple(point.to for point in step.points)
+        case _:
+            return ()
+
+
+def _does_nothing(cycle: Cycle) -> bool:
+    return not any(_waits(step) for step in cycle.steps) and not _moves(cycle)
+
+
+def _waits(step: Step) -> bool:
+    match step:
+        case Wait():
+            return step.seconds > 0
+        case PathStep():
+            return any(point.wait > 0 for point in step.points)
+        case _:
+            return False
+
+
+def _moves(cycle: Cycle) -> bool:
+    if any(
+        isinstance(step, Trace) or (isinstance(step, Transfer) and step.lift > 0)
+        for step in cycle.steps
+    ):
+        return True
+    # the first position that differs from the start is a motion, whatever lies between
+    return any(
+        position != cycle.start[name]
+        for step in cycle.steps
+        for stop in _stops(step)
+        for name, position in stop.items()
+    )

@@ -1,0 +1,343 @@
+"""What the machine can do: the records of a machine file.
+
+Linear axes count in mm, rotary axes in deg; rates per second. Every record judges its own values
+when it is made and raises `InputError` with places relative to itself.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import KW_ONLY, dataclass, field
+from types import MappingProxyType
+from typing import TYPE_CHECKING, Literal, NamedTuple, TypeAlias
+
+from profileplan.inputs.rules import (
+    EXTENT,
+    LIMIT,
+    PERIOD,
+    POSITION,
+    RADIUS,
+    RESOLUTION,
+    Judge,
+    Outline,
+    is_number,
+    join,
+    quoted,
+    shown,
+)
+
+if TYPE_CHECKING:
+    from pathlib import Path
+
+AxisKind: TypeAlias = Literal["linear", "rotary"]
+AXIS_KINDS: tuple[AxisKind, ...] = ("linear", "rotary")
+
+MOST_AXES = 12
+WHOLE_NANOSECOND_TOLERANCE = 1e-6  # ns: a period of 1 s in double precision is rounded by 2e-7 ns
+
+
+class AxisLimits(NamedTuple):
+    """What bounds the motion of one axis, in its units per s, s² and s³; jerk may be infinite."""
+
+    velocity: float
+    acceleration: float
+    deceleration: float
+    jerk: float
+
+
+@dataclass(frozen=True)
+class Axis:
+    """One axis and its limits.
+
+    Parameters
+    ----------
+    name : str
+        Heads the axis's columns; no reserved word.
+    travel : tuple of float
+        Lowest and highest allowed position [mm or deg].
+    velocity, acceleration : float
+        Limits [mm/s, mm/s² or deg/s, deg/s²].
+    kind : {"linear", "rotary"}
+        A linear axis counts in mm, a rotary one in deg.
+    deceleration : float, optional
+        Limit while slowing down; None: as acceleration.
+    jerk : float, optional
+        Limit [mm/s³ or deg/s³]; None: not limited.
+    resolution : float, optional
+        What a drive increment stands for [mm or deg].
+    mechanics : mapping, optional
+        The table of that name as it was written.
+    """
+
+    name: str
+    _: KW_ONLY
+    travel: tuple[float, float]
+    velocity: float
+    acceleration: float
+    kind: AxisKind = "linear"
+    deceleration: float | None = None
+    jerk: float | None = None
+    resolution: float | None = None
+    mechanics: Mapping[str, object] | None = None
+
+    def __post_init__(self) -> None:
+        judge = Judge()
+        unit = self.unit
+        judge.column("", self.name)
+        judge.choice("kind", self.kind, AXIS_KINDS)
+        object.__setattr__(self, "travel", _judged_travel(judge, self.travel, unit))
+        judge.number("velocity", self.velocity, LIMIT, f"{unit}/s")
+        judge.number("acceleration", self.acceleration, LIMIT, f"{unit}/s²")
+        judge.optional("deceleration", self.deceleration, LIMIT, f"{unit}/s²")
+        judge.optional("jerk", self.jerk, LIMIT, f"{unit}/s³")
+        judge.optional("resolution", self.resolution, RESOLUTION, unit)
+        if isinstance(self.mechanics, Mapping):
+            object.__setattr__(self, "mechanics", MappingProxyType(dict(self.mechanics)))
+        judge.finish()
+
+    @property
+    def unit(self) -> Literal["mm", "deg"]:
+        """The unit of a position."""
+        return "deg" if self.kind == "rotary" else "mm"
+
+    @property
+    def limits(self) -> AxisLimits:
+        """All limits, those left out filled in."""
+        return AxisLimits(
+            self.velocity,
+            self.acceleration,
+            self.acceleration if self.deceleration is None else self.deceleration,
+            math.inf if self.jerk is None else self.jerk,
+        )
+
+
+@dataclass(frozen=True)
+class Circle:
+    """A circle in the plane of the horizontal axes, mm."""
+
+    x: float
+    y: float
+    radius: float
+
+    def __post_init__(self) -> None:
+        judge = Judge()
+        judge.number("x", self.x, POSITION, "mm")
+        judge.number("y", self.y, POSITION, "mm")
+        judge.number("radius", self.radius, RADIUS, "mm")
+        judge.finish()
+
+
+@dataclass(frozen=True)
+class Keepout:
+    """A place that the tool must not enter: exactly one of `outline`, `circle` and `dxf`.
+
+    Parameters
+    ----------
+    name : str
+        What messages call it.
+    outline : tuple of pairs, optional
+        Corners [mm].
+    circle : Circle, optional
+        A round one.
+    dxf, layer : optional
+        A drawing, and the layer of it whose outlines are meant.
+    top : float, optional
+        The position of the up axis up to which it blocks [mm]; None: to any height.
+    """
+
+    name: str
+    _: KW_ONLY
+    outline: Outline | None = None
+    circle: Circle | None = None
+    dxf: Path | None = None
+    layer: str | None = None
+    top: float | None = None
+
+    def __post_init__(self) -> None:
+        judge = Judge()
+        judge.name("name", self.name)
+        shapes = {"outline": self.outline, "circle": self.circle, "dxf": self.dxf}
+        given = [key for key, shape in shapes.items() if shape is not None]
+        if len(given) != 1:
+            found = " and ".join(given) if given else "none of them"
+            judge.note("", f"has {found}; exactly one of outline, circle, dxf is needed")
+        object.__setattr__(self, "outline", judge.outline("outline", self.outline))
+        judge.optional_name("layer", self.layer)
+        if self.dxf is not None and self.layer is None:
+            judge.note("layer", "missing; a drawing needs the name of the layer that is meant")
+        if self.dxf is None and self.layer is not None:
+            judge.note("layer", f"{shown(self.layer)}; only with dxf")
+        judge.optional("top", self.top, POSITION, "mm")
+        judge.finish()
+
+
+@dataclass(frozen=True)
+class Tool:
+    """The footprint around the tool point: a radius, an outline, or (neither) a point.
+
+    `radius` and the corners of `outline` are in mm, and so is `margin`, the clearance kept to
+    anything.
+    """
+
+    radius: float | None = None
+    outline: Outline | None = None
+    margin: float = 0.0
+
+    def __post_init__(self) -> None:
+        judge = Judge()
+        object.__setattr__(self, "outline", judge_footprint(judge, "", self.radius, self.outline))
+        judge.number("margin", self.margin, EXTENT, "mm")
+        judge.finish()
+
+
+@dataclass(frozen=True)
+class SetpointSettings:
+    """How the motion is sampled: `period` in s, a whole number of ns from 50 µs to 1 s."""
+
+    period: float = 0.001
+
+    def __post_init__(self) -> None:
+        judge = Judge()
+        judge.number("period", self.period, PERIOD, "s")
+        if not judge.faults:
+            nanoseconds = self.period * 1e9
+            if abs(nanoseconds - round(nanoseconds)) > WHOLE_NANOSECOND_TOLERANCE:
+                nearest = f"{round(nanoseconds)}e-9"
+                judge.note(
+                    "period",
+                    f"{self.period!r} s; allowed: a whole number of nanoseconds, such as {nearest}",
+                )
+        judge.finish()
+
+
+@dataclass(frozen=True)
+class Machine:
+    """A Cartesian machine.
+
+    Parameters
+    ----------
+    name : str
+        What reports call it.
+    axes : tuple of Axis
+        1 to 12, in the order of the columns.
+    up : str, optional
+        Sign and name of the linear axis that points up: ``"+z"``, or ``"-z"`` where z counts
+        downward. None: a flat machine.
+    tool : Tool
+        What moves.
+    keepouts : tuple of Keepout
+        What it must not hit.
+    setpoints : SetpointSettings
+        How the motion is sampled.
+    source : Path, optional
+        The file it was read from.
+    """
+
+    name: str
+    axes: tuple[Axis, ...]
+    _: KW_ONLY
+    up: str | None = None
+    tool: Tool = field(default_factory=Tool)
+    keepouts: tuple[Keepout, ...] = ()
+    setpoints: SetpointSettings = field(default_factory=SetpointSettings)
+    source: Path | None = None
+
+    def __post_init__(self) -> None:
+        judge = Judge()
+        judge.name("name", self.name)
+        object.__setattr__(self, "axes", judge.records("axes", self.axes, (Axis,)))
+        object.__setattr__(self, "keepouts", judge.records("keepouts", self.keepouts, (Keepout,)))
+        if not 1 <= len(self.axes) <= MOST_AXES:
+            judge.note("axes", f"{len(self.axes)} axes; allowed: 1 to {MOST_AXES}")
+        judge.unique(
+            ((join("axes", axis.name), axis.name) for axis in self.axes), "each axis has its own"
+        )
+        judge.unique(
+            ((f"keepouts[{i}].name", k.name) for i, k in enumerate(self.keepouts, start=1)),
+            "each keep-out has its own",
+        )
+        self._judge_height(judge)
+        judge.finish()
+
+    @property
+    def axis_names(self) -> tuple[str, ...]:
+        """The names of the axes, in order."""
+        return tuple(axis.name for axis in self.axes)
+
+    @property
+    def linear(self) -> tuple[bool, ...]:
+        """Which axes are linear, in order."""
+        return tuple(axis.kind == "linear" for axis in self.axes)
+
+    @property
+    def up_axis(self) -> str | None:
+        """The name of the axis that points up or down, if there is one."""
+        return None if self.up is None else self.up[1:]
+
+    def axis(self, name: str) -> Axis:
+        """Return the axis of a name.
+
+        Raises
+        ------
+        KeyError
+            If there is none.
+        """
+        for axis in self.axes:
+            if axis.name == name:
+                return axis
+        raise KeyError(name)
+
+    def _judge_height(self, judge: Judge) -> None:
+        linear = [axis.name for axis in self.axes if axis.kind == "linear"]
+        allowed = tuple(f"{sign}{name}" for name in linear for sign in "+-")
+        if self.up is not None and self.up not in allowed:
+            choices = quoted(allowed) if allowed else "nothing, as no axis is linear"
+            judge.note(
+                "up", f"{shown(self.up)}; allowed: a sign and the name of a linear axis: {choices}"
+            )
+        for index, keepout in enumerate(self.keepouts, start=1):
+            if self.up is None and keepout.top is not None:
+                judge.note(
+                    f"keepouts[{index}].top",
+                    f"{shown(keepout.top)} mm; only on a machine with an up axis: give `up`",
+                )
+
+
+def judge_footprint(
+    judge: Judge, place: str, radius: float | None, outline: Outline | None
+) -> Outline | None:
+    """Judge a radius and an outline, which exclude each other; return the outline, frozen.
+
+    Parameters
+    ----------
+    judge : Judge
+        Takes the faults.
+    place : str
+        Key path of the table that holds both.
+    radius : float, optional
+        Radius [mm].
+    outline : tuple of pairs, optional
+        Corners [mm].
+    """
+    judge.optional(join(place, "radius"), radius, EXTENT, "mm")
+    if radius is not None and outline is not None:
+        judge.note(place, "has radius and outline; at most one of them is allowed")
+    return judge.outline(join(place, "outline"), outline)
+
+
+def _judged_travel(judge: Judge, travel: tuple[float, float], unit: str) -> tuple[float, float]:
+    try:
+        low, high = travel
+    except (TypeError, ValueError):
+        judge.note("travel", f"{shown(travel)}; allowed: [lowest, highest] position in {unit}")
+        return travel
+    judge.number("travel[1]", low, POSITION, unit)
+    judge.number("travel[2]", high, POSITION, unit)
+    if is_number(low) and is_number(high) and low >= high:
+        judge.note(
+            "travel",
+            f"[{shown(low)}, {shown(high)}] {unit}; the lowest position comes first, "
+            "and the highest is above it",
+        )
+    return (low, high)

@@ -1,0 +1,165 @@
+"""What job a file describes: a cycle, or the points of a waypoint file, on a machine."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from pathlib import Path
+from typing import TYPE_CHECKING, TypeVar
+
+from profileplan.errors import Fault, InputError
+from profileplan.inputs.cycle import Cycle, PathStep, Step, Wait, Waypoint
+from profileplan.inputs.cycle_file import cycle_reading, machine_path
+from profileplan.inputs.job import Job, fit_faults, line_and_column
+from profileplan.inputs.machine_file import read_machine
+from profileplan.inputs.rules import distinct
+from profileplan.inputs.table import open_table
+from profileplan.inputs.waypoints import read_waypoints
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Iterable
+
+    from profileplan.inputs.machine import Machine
+
+Result = TypeVar("Result")
+
+
+def load_job(
+    source: Path | str,
+    *,
+    machine: Path | str | None = None,
+    speed: float | None = None,
+    tolerance: float | None = None,
+) -> Job:
+    """Read a job, with the machine file and the waypoint files that belong to it.
+
+    Parameters
+    ----------
+    source : Path or str
+        A cycle (``.toml``), or points (``.csv``): the first is the start, and a path leads
+        through the others.
+    machine : Path or str, optional
+        The machine file; for a cycle it overrides the one that the cycle names.
+    speed : float, optional
+        Highest speed through the points of a waypoint file [mm/s].
+    tolerance : float, optional
+        Farthest distance between the motion and a waypoint file's path [mm]; None: 0, which
+        stops at every point.
+
+    Raises
+    ------
+    InputError
+        With every fault of all the files.
+    """
+    source = Path(source)
+    machine_file = None if machine is None else Path(machine)
+    match source.suffix.lower():
+        case ".toml":
+            return _cycle_job(source, machine_file, _not_for_a_cycle(speed, tolerance))
+        case ".csv":
+            return _waypoint_job(source, machine_file, speed=speed, tolerance=tolerance)
+        case ".dxf":
+            message = "this version does not read drawings"
+        case suffix:
+            found = f'"{suffix}" files are not read' if suffix else "has no suffix"
+            message = f"{found}; a cycle (.toml) or a waypoint file (.csv) is needed"
+    raise InputError([Fault("", message, source)])
+
+
+def _not_for_a_cycle(speed: float | None, tolerance: float | None) -> list[Fault]:
+    given = {"speed": speed, "tolerance": tolerance}
+    message = "only for a waypoint or outline file; a cycle gives it in its steps"
+    return [Fault(name, message) for name, value in given.items() if value is not None]
+
+
+def _cycle_job(source: Path, machine_file: Path | None, faults: list[Fault]) -> Job:
+    table = _attempt(lambda: open_table(source), faults)
+    if machine_file is None and table is not None:
+        machine_file = machine_path(table)
+        if machine_file is None:
+            message = (
+                'missing; write machine = "machine.toml" in the cycle file, or give --machine FILE'
+            )
+            faults.append(Fault("machine", message, source))
+    machine = _machine(machine_file, faults)
+    if table is None:
+        raise InputError(faults)
+    reading = cycle_reading(table, machine)
+    faults += reading.faults
+    if machine is None or reading.cycle is None or faults:
+        if machine is not None:
+            fit = fit_faults(machine, reading.start, reading.steps, source)
+            faults += _not_covered(fit, reading.faults)
+        raise InputError(distinct(faults))
+    return Job(machine, reading.cycle)
+
+
+def _machine(file: Path | None, faults: list[Fault]) -> Machine | None:
+    return None if file is None else _attempt(lambda: read_machine(file), faults)
+
+
+def _not_covered(fit: Iterable[Fault], found: Iterable[Fault]) -> list[Fault]:
+    """Return the faults that stand neither at nor inside a place that is faulty already."""
+    faulty = {(str(fault.file), fault.place) for fault in found}
+    return [fault for fault in fit if not any(p in faulty for p in _places_around(fault))]
+
+
+def _places_around(fault: Fault) -> list[tuple[str, str]]:
+    """Return the place of a fault and of all that holds it, with the file."""
+    ends = [i for i, letter in enumerate(fault.place) if letter in ".["]
+    return [(str(fault.file), fault.place[:end]) for end in (*ends, len(fault.place))]
+
+
+def _waypoint_job(
+    source: Path, machine_file: Path | None, *, speed: float | None, tolerance: float | None
+) -> Job:
+    faults: list[Fault] = []
+    if machine_file is None:
+        message = "a waypoint file needs a machine: give --machine FILE"
+        faults.append(Fault("", message, source))
+    machine = _machine(machine_file, faults)
+    points = _attempt(lambda: read_waypoints(source), faults) or ()
+    if len(points) == 1:
+        message = "one point only, the start; at least one more is needed to go to"
+        faults.append(Fault(f"line {points[0].line}", message, source))
+    path = _attempt(
+        lambda: PathStep(
+            points[1:] or (Waypoint({"-": 0.0}),),
+            file=source,
+            speed=speed,
+            tolerance=PathStep.tolerance if tolerance is None else tolerance,
+        ),
+        faults,
+    )
+    if machine is None or path is None or faults:
+        raise InputError(faults)
+    return _job_from_start(machine, points[0], path)
+
+
+def _job_from_start(machine: Machine, start: Waypoint, path: PathStep) -> Job:
+    """Return the job of a path; a fault of the start stands in the first row.
+
+    A speed in that row has no meaning, as no way leads to the start.
+    """
+    before: tuple[Step, ...] = (Wait(start.wait, name=start.name),) if start.wait > 0 else ()
+    try:
+        return Job(machine, Cycle((*before, path), start.to, source=path.file))
+    except InputError as error:
+        placed = [_in_first_row(fault, start, machine) for fault in error.faults]
+        raise InputError(distinct(placed)) from None
+
+
+def _in_first_row(fault: Fault, start: Waypoint, machine: Machine) -> Fault:
+    name = fault.place.removeprefix("start.")
+    if name == fault.place:
+        return fault
+    known = name in machine.axis_names
+    return replace(fault, place=line_and_column(start, name) if known else f"column {name}")
+
+
+def _attempt(read: Callable[[], Result], faults: list[Fault]) -> Result | None:
+    """Return what is read, or None where that fails, with the faults added to the list."""
+    try:
+        return read()
+    except InputError as error:
+        faults += error.faults
+        return None

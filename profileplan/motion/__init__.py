@@ -1,0 +1,1 @@
+"""When it gets there: trajectories, the laws of one axis, and several axes together."""
