@@ -167,10 +167,10 @@ def _upper(worst: _Worst, check: str, limit: float, unit: str, axis: Axis | None
         check=check,
         axis=axis.name if axis else None,
         value=worst.value,
-        limit=limit,
-        margin=limit - worst.value,
+        limit=float(limit),
+        margin=float(limit) - worst.value,
         unit=unit,
-        ok=worst.value <= limit * (1 + LIMIT_TOLERANCE),
+        ok=bool(worst.value <= limit * (1 + LIMIT_TOLERANCE)),
         time=worst.time,
         step=worst.step,
     )
@@ -413,4 +413,4 @@ def _differences(
         rounding = 2 ** (order - 1) * table.position_step / period**order
         finding = _upper(found, quantity, limit, _rate_unit(axis, order), axis)
         within = found.value <= limit * (1 + LIMIT_TOLERANCE) + rounding
-        yield replace(finding, rounding=rounding, ok=within)
+        yield replace(finding, rounding=rounding, ok=bool(within))

@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 
 from profileplan.errors import Fault, InputError
+from profileplan.inputs import SetpointSettings
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping, Sequence
@@ -112,7 +113,7 @@ def sample(
     rows : range, optional
         The rows wanted, counted from 0; default: all.
     """
-    period = period or schedule.job.machine.setpoints.period
+    period = _period(schedule, period)
     last = row_count(schedule, period) - 1
     rows = rows if rows is not None else range(last + 1)
     ticks = np.arange(rows.start, rows.stop)
@@ -175,7 +176,7 @@ def write_csv(
     Source: RFC 4180 for the form of the file.
     """
     machine = schedule.job.machine
-    period = period or machine.setpoints.period
+    period = _period(schedule, period)
     _judge_columns(columns)
     count = row_count(schedule, period)
     if count > MOST_ROWS:
@@ -223,6 +224,15 @@ def read_csv(file: Path, machine: Machine) -> SetpointTable:
     return _table(names, _parse(rows, file), machine, _decimals(names, rows[1], machine))
 
 
+def is_table(file: Path) -> bool:
+    """Tell whether a CSV file is a setpoint table: one of its columns is the time, ``t_s``."""
+    try:
+        with file.open(encoding="utf-8-sig", errors="replace", newline="") as stream:
+            return "t_s" in next(csv.reader(stream), [])
+    except (OSError, csv.Error):
+        return False
+
+
 @contextmanager
 def replacing(file: Path) -> Iterator[TextIO]:
     """Open a text file that takes its place only when it was written to the end.
@@ -257,6 +267,13 @@ def _umask() -> int:
     mask = os.umask(0o022)
     os.umask(mask)
     return mask
+
+
+def _period(schedule: Schedule, period: float | None) -> float:
+    """Return the period asked for, judged as one in a machine file is, or the machine's own [s]."""
+    return (
+        schedule.job.machine.setpoints.period if period is None else SetpointSettings(period).period
+    )
 
 
 def _column_name(axis: Axis, column: str) -> str:
@@ -364,24 +381,20 @@ def _decimals(names: Sequence[str], row: Sequence[str], machine: Machine) -> int
 
 def _table(names: Sequence[str], numbers: Array, machine: Machine, decimals: int) -> SetpointTable:
     """Return the table that named columns of numbers make."""
-    found: dict[str, Array | None] = {}
+    found: dict[str, Array] = {}
     taken = {"t_s"}
     for column in COLUMNS:
         own = [_column_name(axis, column) for axis in machine.axes]
         taken.update(own)
-        complete = all(name in names for name in own)
-        found[column] = numbers[:, [names.index(name) for name in own]] if complete else None
-    position = found["pos"]
-    if position is None:
-        message = "positions are missing after the header was judged complete"
-        raise AssertionError(message)
+        if all(name in names for name in own):
+            found[column] = numbers[:, [names.index(name) for name in own]]
     return SetpointTable(
         axes=machine.axis_names,
         time=numbers[:, names.index("t_s")],
-        position=position,
-        velocity=found["vel"],
-        acceleration=found["acc"],
-        jerk=found["jerk"],
+        position=found["pos"],
+        velocity=found.get("vel"),
+        acceleration=found.get("acc"),
+        jerk=found.get("jerk"),
         signals={
             name: numbers[:, column] for column, name in enumerate(names) if name not in taken
         },

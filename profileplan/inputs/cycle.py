@@ -384,6 +384,9 @@ class Trace:
 Step: TypeAlias = Move | Line | Wait | Signal | Payload | PathStep | Transfer | Trace
 STEP_TYPES = (Move, Line, Wait, Signal, Payload, PathStep, Transfer, Trace)
 
+POINT_KEYS = ("speed", "wait", "name")
+"""The keys that a point may have besides the names of axes."""
+
 STEP_KEYS = {
     "move": ("law", "arrival", "time", "name"),
     "line": ("speed", "law", "time", "name"),

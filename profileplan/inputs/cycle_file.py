@@ -14,6 +14,7 @@ from profileplan.inputs.cycle import (
     ACROSS,
     ARRIVALS,
     LAW_NAMES,
+    POINT_KEYS,
     STEP_KEYS,
     Cycle,
     Line,
@@ -29,9 +30,9 @@ from profileplan.inputs.cycle import (
     Waypoint,
 )
 from profileplan.inputs.quantities import Quantity
-from profileplan.inputs.rules import POSITION, distinct, is_number, near, shown
+from profileplan.inputs.rules import POSITION, is_number, near, shown, tidy
 from profileplan.inputs.table import Table, open_table
-from profileplan.inputs.waypoints import EXTRA_COLUMNS, read_waypoints
+from profileplan.inputs.waypoints import waypoint_reading
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Mapping
@@ -68,7 +69,7 @@ def read_cycle(path: Path | str, machine: Machine | None = None) -> Cycle:
     """
     reading = cycle_reading(open_table(Path(path)), machine)
     if reading.cycle is None or reading.faults:
-        raise InputError(reading.faults)
+        raise InputError(tidy(reading.faults))
     return reading.cycle
 
 
@@ -99,7 +100,7 @@ def cycle_reading(table: Table, machine: Machine | None) -> Reading:
             source=table.file,
         )
     )
-    return Reading(cycle, _harmless(start), steps, distinct(table.faults))
+    return Reading(cycle, _harmless(start), steps, table.faults)
 
 
 def machine_path(table: Table) -> Path | None:
@@ -256,11 +257,9 @@ def _points(table: Table, kinds: Kinds) -> tuple[tuple[Waypoint, ...] | None, Pa
     raw = table.raw["path"]
     if isinstance(raw, str):
         file = table.file.parent / table.text("path")
-        try:
-            return read_waypoints(file), file
-        except InputError as error:
-            table.faults += error.faults
-            return None, file
+        points, faults = waypoint_reading(file)
+        table.faults += faults
+        return points or None, file
     if not isinstance(raw, list):
         table.skip("path")
         table.note("path", f"{shown(raw)}; points, or the name of a waypoint file, are needed")
@@ -270,7 +269,7 @@ def _points(table: Table, kinds: Kinds) -> tuple[tuple[Waypoint, ...] | None, Pa
 
 
 def _waypoint(table: Table, kinds: Kinds) -> Waypoint | None:
-    to = table.positions([key for key in table.raw if key not in EXTRA_COLUMNS], kinds)
+    to = table.positions([key for key in table.raw if key not in POINT_KEYS], kinds)
     return table.build(
         lambda: Waypoint(
             to,

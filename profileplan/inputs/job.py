@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING
 
 from profileplan.errors import Fault, InputError
 from profileplan.inputs.cycle import (
+    POINT_KEYS,
     STEP_KEYS,
     Cycle,
     Line,
@@ -23,7 +24,7 @@ from profileplan.inputs.cycle import (
     Wait,
     Waypoint,
 )
-from profileplan.inputs.rules import join, limited, near, shown
+from profileplan.inputs.rules import join, near, shown, tidy
 
 if TYPE_CHECKING:
     from collections.abc import Iterable, Iterator, Mapping
@@ -58,7 +59,7 @@ class Job:
             message = "nothing to do: no step moves an axis, and no step waits"
             faults = [Fault("", message, cycle.source)]
         if faults:
-            raise InputError(faults)
+            raise InputError(tidy(faults))
 
     def positions(self) -> tuple[tuple[float, ...], ...]:
         """Return where the axes are told to be between the steps.
@@ -154,7 +155,7 @@ def _step_faults(machine: Machine, axes: Mapping[str, Axis], step: Step) -> Iter
             named = [name for point in step.points for name in point.to]
             yield from _speed_faults(axes, step.speed, dict.fromkeys(named, 0.0))
         case Trace():
-            yield from _at_faults(axes, step.at)
+            yield from _position_faults(axes, step.at, "", STEP_KEYS[step.kind])
             if step.with_signal is not None:
                 yield from _signal_faults(axes, step.with_signal, "with_signal")
         case Signal():
@@ -166,17 +167,22 @@ def _step_faults(machine: Machine, axes: Mapping[str, Axis], step: Step) -> Iter
         yield from _height_faults(machine, step.height)
 
 
-def _position_faults(axes: Mapping[str, Axis], positions: Positions, place: str) -> Iterator[Fault]:
+def _position_faults(
+    axes: Mapping[str, Axis], positions: Positions, place: str, keys: tuple[str, ...] = ()
+) -> Iterator[Fault]:
+    """Yield the faults of positions; `keys` are other words that one may have meant."""
     for name, position in positions.items():
-        if message := _position_fault(axes, name, position):
+        if message := _position_fault(axes, name, position, keys):
             yield Fault(join(place, name), message)
 
 
-def _position_fault(axes: Mapping[str, Axis], name: str, position: float) -> str | None:
+def _position_fault(
+    axes: Mapping[str, Axis], name: str, position: float, keys: tuple[str, ...] = ()
+) -> str | None:
     axis = axes.get(name)
     if axis is None:
-        hint = near(name, axes) or f"; this machine has {', '.join(axes)}"
-        return f"unknown axis{hint}"
+        hint = near(name, [*keys, *axes]) or f"; this machine has {', '.join(axes)}"
+        return f"unknown axis{' or key' if keys else ''}{hint}"
     if not axis.travel[0] <= position <= axis.travel[1]:
         return f"{shown(position)} {axis.unit}; outside of the travel, {_travel(axis)}"
     return None
@@ -186,24 +192,17 @@ def _travel(axis: Axis) -> str:
     return f"{shown(axis.travel[0])} to {shown(axis.travel[1])} {axis.unit}"
 
 
-def _point_faults(axes: Mapping[str, Axis], step: PathStep) -> list[Fault]:
-    """Return the faults of a path's points, those of a file with line and column."""
-    if step.file is None:
-        return [
-            fault
-            for index, point in enumerate(step.points, start=1)
-            for fault in _position_faults(axes, point.to, f"path[{index}]")
-        ]
-    unknown: dict[str, Fault] = {}
-    faults = []
-    for point in step.points:
+def _point_faults(axes: Mapping[str, Axis], step: PathStep) -> Iterator[Fault]:
+    """Yield the faults of a path's points, those of a file with line and column."""
+    for index, point in enumerate(step.points, start=1):
+        if step.file is None:
+            yield from _position_faults(axes, point.to, f"path[{index}]", POINT_KEYS)
+            continue
         for name, position in point.to.items():
-            if message := _position_fault(axes, name, position):
-                if name in axes:
-                    faults.append(Fault(line_and_column(point, name), message, step.file))
-                else:
-                    unknown.setdefault(name, Fault(f"column {name}", message, step.file))
-    return [*unknown.values(), *limited(faults, step.file)]
+            if message := _position_fault(axes, name, position, POINT_KEYS):
+                # an unknown column is one fault, not one in each row
+                place = line_and_column(point, name) if name in axes else f"column {name}"
+                yield Fault(place, message, step.file)
 
 
 def line_and_column(point: Waypoint, column: str) -> str:
@@ -230,20 +229,6 @@ def _speed_faults(
             f"{shown(speed)} mm/s; counts along linear axes, and only rotary ones are named: "
             f"{names}; leave it out",
         )
-
-
-def _at_faults(axes: Mapping[str, Axis], at: Positions) -> Iterator[Fault]:
-    """Yield the faults of a trace's other keys: each is an axis or a misspelt key."""
-    for name, position in at.items():
-        if name in axes:
-            message = _position_fault(axes, name, position)
-        else:
-            hint = (
-                near(name, [*STEP_KEYS["trace"], *axes]) or f"; this machine has {', '.join(axes)}"
-            )
-            message = f"unknown key, and no axis{hint}"
-        if message:
-            yield Fault(join("", name), message)
 
 
 def _signal_faults(axes: Mapping[str, Axis], output: str, place: str) -> Iterator[Fault]:

@@ -17,7 +17,7 @@ from profileplan.inputs.machine import (
     Tool,
 )
 from profileplan.inputs.quantities import Quantity
-from profileplan.inputs.rules import distinct
+from profileplan.inputs.rules import tidy
 from profileplan.inputs.table import Table, open_table
 
 if TYPE_CHECKING:
@@ -61,7 +61,7 @@ def read_machine(path: Path | str) -> Machine:
         )
     )
     if machine is None or table.faults:
-        raise InputError(distinct(table.faults))
+        raise InputError(tidy(table.faults))
     return machine
 
 

@@ -28,25 +28,27 @@ Outline: TypeAlias = tuple[tuple[float, float], ...]
 Record = TypeVar("Record")
 
 
+ABOVE_ZERO = 5e-324  # the least positive number: a range from it leaves out zero only
+
+
 @dataclass(frozen=True)
 class Range:
-    """The values from `low` to `high`; `low` itself is left out where `above` is set.
+    """The values from `low` to `high`, both allowed.
 
     Every range is finite, so that NaN and infinity lie outside of it.
     """
 
     low: float
     high: float
-    above: bool = False
 
     def holds(self, value: float) -> bool:
         """Tell whether `value` is allowed."""
-        return (self.low < value if self.above else self.low <= value) and value <= self.high
+        return self.low <= value <= self.high
 
     def describe(self, unit: str) -> str:
         """Say what is allowed, with its unit."""
-        if self.above:
-            return f"above {self.low:g} and at most {self.high:g} {unit}"
+        if self.low == ABOVE_ZERO:
+            return f"above 0 and at most {self.high:g} {unit}"
         if self.low > 0:
             return f"above 0, from {self.low:g} to {self.high:g} {unit}"
         return f"{self.low:g} to {self.high:g} {unit}"
@@ -55,10 +57,10 @@ class Range:
 LIMIT = Range(1e-6, 1e12)  # velocity, acceleration, deceleration, jerk, speed
 POSITION = Range(-1e7, 1e7)
 EXTENT = Range(0, 1e7)  # margins, tolerances, heights raised
-RADIUS = Range(0, 1e7, above=True)
+RADIUS = Range(ABOVE_ZERO, 1e7)
 RESOLUTION = Range(1e-9, 1e7)
 PAUSE = Range(0, 1e6)
-DURATION = Range(0, 1e6, above=True)
+DURATION = Range(ABOVE_ZERO, 1e6)
 LEAD = Range(-1e6, 1e6)
 PERIOD = Range(50e-6, 1)
 MASS = Range(0, 1e6)
@@ -85,6 +87,8 @@ class Judge:
 
     def number(self, place: str, value: object, allowed: Range, unit: str) -> None:
         """Note a value that is no number in the range `allowed`."""
+        if isinstance(value, float) and allowed.holds(value):
+            return  # the short way, as a file may have 100,000 rows
         if not is_number(value):
             self.note(place, f"{shown(value)}; a number in {unit} is needed")
         elif not allowed.holds(value):
@@ -135,8 +139,8 @@ class Judge:
             self.note(place, "names no axis; at least one position is needed")
         judged: dict[str, float] = {}
         for name, position in value.items():
-            if isinstance(position, float) and POSITION.low <= position <= POSITION.high:
-                judged[name] = position  # the short way, as a file may have 100,000 rows
+            if isinstance(position, float) and POSITION.holds(position):
+                judged[name] = position  # the short way again
             elif is_number(position) and POSITION.holds(position):
                 judged[name] = float(position)
             else:
@@ -242,20 +246,25 @@ def near(word: object, known: Iterable[str]) -> str:
     return f'; did you mean "{folded[matches[0]]}"?' if matches else ""
 
 
-def distinct(faults: Iterable[Fault]) -> list[Fault]:
-    """Keep the first fault of each place: what follows there is a consequence of it."""
-    first: dict[tuple[str, str], Fault] = {}
+def tidy(faults: Iterable[Fault]) -> list[Fault]:
+    """Keep what the user can act on.
+
+    Of each place the first fault stays, as what follows there is a consequence of it; of the
+    rows of a table the first with a fault stay, and the others are counted.
+    """
+    first: dict[tuple[Path | str | None, str], Fault] = {}
     for fault in faults:
-        first.setdefault((str(fault.file), fault.place), fault)
-    return list(first.values())
-
-
-def limited(faults: Iterable[Fault], file: Path | None) -> list[Fault]:
-    """Keep the first faults of a table, and count the others."""
-    found = list(faults)
-    more = len(found) - ROWS_SHOWN
-    kept = found[:ROWS_SHOWN]
-    return [*kept, Fault("", f"… and {more} more", file)] if more > 0 else kept
+        first.setdefault((fault.file, fault.place), fault)
+    kept = []
+    rows: dict[Path | str | None, int] = {}
+    for fault in first.values():
+        if fault.place.startswith("line "):
+            rows[fault.file] = rows.get(fault.file, 0) + 1
+            if rows[fault.file] > ROWS_SHOWN:
+                continue
+        kept.append(fault)
+    more = [(file, count - ROWS_SHOWN) for file, count in rows.items() if count > ROWS_SHOWN]
+    return [*kept, *(Fault("", f"… and {count} more", file) for file, count in more)]
 
 
 def join(place: str, key: str) -> str:

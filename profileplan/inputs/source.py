@@ -11,9 +11,9 @@ from profileplan.inputs.cycle import Cycle, PathStep, Step, Wait, Waypoint
 from profileplan.inputs.cycle_file import cycle_reading, machine_path
 from profileplan.inputs.job import Job, fit_faults, line_and_column
 from profileplan.inputs.machine_file import read_machine
-from profileplan.inputs.rules import distinct
+from profileplan.inputs.rules import tidy
 from profileplan.inputs.table import open_table
-from profileplan.inputs.waypoints import read_waypoints
+from profileplan.inputs.waypoints import waypoint_reading
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable
@@ -82,14 +82,14 @@ def _cycle_job(source: Path, machine_file: Path | None, faults: list[Fault]) -> 
             faults.append(Fault("machine", message, source))
     machine = _machine(machine_file, faults)
     if table is None:
-        raise InputError(faults)
+        raise InputError(tidy(faults))
     reading = cycle_reading(table, machine)
     faults += reading.faults
     if machine is None or reading.cycle is None or faults:
         if machine is not None:
             fit = fit_faults(machine, reading.start, reading.steps, source)
             faults += _not_covered(fit, reading.faults)
-        raise InputError(distinct(faults))
+        raise InputError(tidy(faults))
     return Job(machine, reading.cycle)
 
 
@@ -117,8 +117,9 @@ def _waypoint_job(
         message = "a waypoint file needs a machine: give --machine FILE"
         faults.append(Fault("", message, source))
     machine = _machine(machine_file, faults)
-    points = _attempt(lambda: read_waypoints(source), faults) or ()
-    if len(points) == 1:
+    points, found = waypoint_reading(source)
+    faults += found
+    if len(points) == 1 and not found:
         message = "one point only, the start; at least one more is needed to go to"
         faults.append(Fault(f"line {points[0].line}", message, source))
     path = _attempt(
@@ -130,9 +131,22 @@ def _waypoint_job(
         ),
         faults,
     )
+    if machine is not None and (faults or path is None):
+        faults += _row_faults(machine, points, source)
     if machine is None or path is None or faults:
-        raise InputError(faults)
+        raise InputError(tidy(faults))
     return _job_from_start(machine, points[0], path)
+
+
+def _row_faults(machine: Machine, points: tuple[Waypoint, ...], file: Path) -> list[Fault]:
+    """Return what does not fit the machine in the rows of a file that is faulty otherwise.
+
+    Whether a start is complete cannot be told there, as its row may be a faulty one.
+    """
+    if not points:
+        return []
+    fit = fit_faults(machine, {}, [PathStep(points, file=file)], file)
+    return [fault for fault in fit if not fault.place.startswith("start")]
 
 
 def _job_from_start(machine: Machine, start: Waypoint, path: PathStep) -> Job:
@@ -145,7 +159,7 @@ def _job_from_start(machine: Machine, start: Waypoint, path: PathStep) -> Job:
         return Job(machine, Cycle((*before, path), start.to, source=path.file))
     except InputError as error:
         placed = [_in_first_row(fault, start, machine) for fault in error.faults]
-        raise InputError(distinct(placed)) from None
+        raise InputError(tidy(placed)) from None
 
 
 def _in_first_row(fault: Fault, start: Waypoint, machine: Machine) -> Fault:

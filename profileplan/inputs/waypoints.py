@@ -14,14 +14,12 @@ from pathlib import Path
 from typing import TYPE_CHECKING, NamedTuple
 
 from profileplan.errors import Fault, InputError
-from profileplan.inputs.cycle import Waypoint
+from profileplan.inputs.cycle import POINT_KEYS, Waypoint
 from profileplan.inputs.files import read_text
-from profileplan.inputs.rules import limited, shown
+from profileplan.inputs.rules import shown, tidy
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
-
-EXTRA_COLUMNS = ("speed", "wait", "name")
 
 
 class Row(NamedTuple):
@@ -32,12 +30,19 @@ class Row(NamedTuple):
 
 
 class Columns(NamedTuple):
-    """Which cell of a row is what; `decimal` is what stands before the fraction, beside ``.``."""
+    """Which cells of a row hold numbers, and which the name; what stands before a fraction."""
 
-    axes: tuple[tuple[str, int], ...]
-    extras: dict[str, int]
+    numbers: tuple[tuple[str, int], ...]
+    name: int | None
     width: int
     decimal: str
+
+
+class Reading(NamedTuple):
+    """The points of the rows that are sound, and the faults of the file."""
+
+    points: tuple[Waypoint, ...]
+    faults: list[Fault]
 
 
 def read_waypoints(path: Path | str) -> tuple[Waypoint, ...]:
@@ -53,16 +58,32 @@ def read_waypoints(path: Path | str) -> tuple[Waypoint, ...]:
     InputError
         With the faults of the file; beyond the first rows with a fault they are counted only.
     """
-    path = Path(path)
-    text = read_text(path)
+    reading = waypoint_reading(Path(path))
+    if reading.faults:
+        raise InputError(tidy(reading.faults))
+    return reading.points
+
+
+def waypoint_reading(path: Path) -> Reading:
+    """Return what a waypoint file lists, as far as it can be made out, with its faults.
+
+    Parameters
+    ----------
+    path : Path
+        A CSV file.
+    """
+    try:
+        text = read_text(path)
+    except InputError as error:
+        return Reading((), list(error.faults))
+    faults: list[Fault] = []
     if "\0" in text:
         line = text[: text.index("\0")].count("\n") + 1
-        raise InputError([Fault(f"line {line}", "has a NUL character; this is no text", path)])
-    faults: list[Fault] = []
-    points = _points(text, faults)
-    if faults:
-        raise InputError(limited([fault.within("", path) for fault in faults], path))
-    return points
+        faults.append(Fault(f"line {line}", "has a NUL character; this is no text"))
+        points: tuple[Waypoint, ...] = ()
+    else:
+        points = _points(text, faults)
+    return Reading(points, [fault.within("", path) for fault in faults])
 
 
 def _points(text: str, faults: list[Fault]) -> tuple[Waypoint, ...]:
@@ -76,16 +97,10 @@ def _points(text: str, faults: list[Fault]) -> tuple[Waypoint, ...]:
     columns = _columns(header, delimiter, faults)
     if columns is None:
         return ()
-    points = []
-    empty = True
-    for row in rows:
-        empty = False
-        point = _point(row, columns, faults)
-        if point is not None:
-            points.append(point)
-    if empty and not faults:
+    points = tuple(point for row in rows if (point := _point(row, columns, faults)) is not None)
+    if not points and not faults:
         faults.append(Fault("", "has a header only; at least one point is needed"))
-    return tuple(points)
+    return points
 
 
 def _delimiter(text: str) -> str:
@@ -114,7 +129,7 @@ def _columns(header: Row, delimiter: str, faults: list[Fault]) -> Columns | None
     place = f"line {header.line}"
     count = len(faults)
     decimal = "," if delimiter == ";" else "."
-    if all(_number(name, decimal) is not None for name in names):
+    if all(name.lstrip("+-")[:1].isdigit() for name in names):
         faults.append(Fault(place, "has numbers only; the first row names the columns"))
         return None
     for index, name in enumerate(names):
@@ -122,59 +137,59 @@ def _columns(header: Row, delimiter: str, faults: list[Fault]) -> Columns | None
             faults.append(Fault(f"{place}, column {index + 1}", "has no name"))
         elif name in names[:index]:
             faults.append(Fault(f"{place}, column {name}", f"{shown(name)} stands twice"))
-    axes = tuple((name, i) for i, name in enumerate(names) if name not in EXTRA_COLUMNS)
-    if not axes:
+    if all(name in POINT_KEYS for name in names):
         faults.append(Fault(place, "names no axis; at least one column is needed"))
-    extras = {name: i for i, name in enumerate(names) if name in EXTRA_COLUMNS}
-    return Columns(axes, extras, len(names), decimal) if len(faults) == count else None
+    numbers = tuple((name, index) for index, name in enumerate(names) if name != "name")
+    name_index = names.index("name") if "name" in names else None
+    columns = Columns(numbers, name_index, len(names), decimal)
+    return columns if len(faults) == count else None
 
 
 def _point(row: Row, columns: Columns, faults: list[Fault]) -> Waypoint | None:
-    if len(row.cells) != columns.width:
-        message = f"{len(row.cells)} cells; the header has {columns.width} columns"
-        faults.append(Fault(f"line {row.line}", message))
-        return None
-    count = len(faults)
-    to = {
-        name: position
-        for name, index in columns.axes
-        if (position := _cell(row, index, name, columns, faults)) is not None
-    }
-    extras = columns.extras
-    speed = _cell(row, extras["speed"], "speed", columns, faults) if "speed" in extras else None
-    wait = _cell(row, extras["wait"], "wait", columns, faults) if "wait" in extras else None
-    name = row.cells[extras["name"]].strip() if "name" in extras else ""
-    if len(faults) > count:
+    """Return the point of a row, or None where it is faulty."""
+    line, cells = row
+    if len(cells) != columns.width:
+        message = f"{len(cells)} cells; the header has {columns.width} columns"
+        faults.append(Fault(f"line {line}", message))
         return None
     try:
-        return Waypoint(to, speed=speed, wait=wait or 0.0, name=name or None, line=row.line)
+        # a row with a number in every cell, as nearly all are, is read at one go
+        to = {column: _number(cells[index], columns.decimal) for column, index in columns.numbers}
+    except ValueError:
+        found = len(faults)
+        to = dict(_given_numbers(row, columns, faults))
+        if len(faults) > found:
+            return None
+    speed = to.pop("speed", None)
+    wait = to.pop("wait", 0.0)
+    name = None if columns.name is None else cells[columns.name].strip() or None
+    try:
+        return Waypoint(to, speed=speed, wait=wait, name=name, line=line)
     except InputError as error:
-        faults += [
-            Fault(f"line {row.line}" + (f", column {f.place}" if f.place else ""), f.message)
-            for f in error.faults
-        ]
+        for fault in error.faults:
+            place = f"line {line}, column {fault.place}" if fault.place else f"line {line}"
+            faults.append(Fault(place, fault.message))
         return None
 
 
-def _cell(row: Row, index: int, name: str, columns: Columns, faults: list[Fault]) -> float | None:
-    """Return the number in a cell; None where it is empty or faulty."""
-    cell = row.cells[index]
-    if not cell or cell.isspace():
-        return None
-    number = _number(cell, columns.decimal)
-    if number is None:
-        message = f"{shown(cell)}; a number in axis units is needed"
-        if "," in cell and columns.decimal == ".":
-            message += "; a decimal comma is understood where ; separates the columns"
-        faults.append(Fault(f"line {row.line}, column {name}", message))
-    return number
+def _given_numbers(row: Row, columns: Columns, faults: list[Fault]) -> Iterator[tuple[str, float]]:
+    """Yield the numbers of the cells that are not empty, with their columns."""
+    for column, index in columns.numbers:
+        cell = row.cells[index].strip()
+        if not cell:
+            continue
+        try:
+            yield column, _number(cell, columns.decimal)
+        except ValueError:
+            message = f"{shown(cell)}; a number in axis units is needed"
+            if "," in cell and columns.decimal == ".":
+                message += "; a decimal comma is understood where ; separates the columns"
+            faults.append(Fault(f"line {row.line}, column {column}", message))
 
 
-def _number(cell: str, decimal: str) -> float | None:
+def _number(cell: str, decimal: str) -> float:
+    """Return the number in a cell; raise ValueError where there is none."""
     # Python's own spelling of numbers has underscores and other scripts' digits
     if "_" in cell or not cell.isascii():
-        return None
-    try:
-        return float(cell.replace(decimal, "."))
-    except ValueError:
-        return None
+        raise ValueError(cell)
+    return float(cell.replace(decimal, "."))

@@ -1,0 +1,5 @@
+"""``python -m profileplan``: the command line."""
+
+from profileplan.cli import main
+
+main()

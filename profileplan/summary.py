@@ -1,0 +1,139 @@
+"""What does a script read of a plan? The content of summary.json.
+
+Numbers are in axis units and s. What is not limited or not known is null.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+from typing import TYPE_CHECKING
+
+from profileplan import checks, setpoints
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping, Sequence
+    from pathlib import Path
+
+    from profileplan.planning import Limit, Plan, PlannedStep
+
+CAUTION = (
+    "A plan is not a safety function. Try every motion at reduced speed first. Risk assessment, "
+    "guarding and the local codes are for qualified people."
+)
+"""What goes with every plan that leaves the program."""
+
+
+def summarise(plan: Plan) -> dict[str, object]:
+    """Return a plan and the findings on it as plain values, ready for JSON.
+
+    Parameters
+    ----------
+    plan : Plan
+
+    Returns
+    -------
+    dict
+        The keys of summary.json as README lists them.
+    """
+    findings = plan.check()
+    return {
+        "cycle_time_s": plan.duration,
+        "target_s": plan.target,
+        "meets_target": plan.meets_target,
+        "requirements_met": all(finding.ok for finding in findings),
+        "steps": [_step(plan, step) for step in plan.steps],
+        "checks": [finding_values(finding) for finding in findings],
+        "levers": [
+            {
+                **_limit(lever.limit),
+                "saves_s": lever.limit.saves,
+                "time_s": lever.time,
+                "steps": list(lever.steps),
+            }
+            for lever in plan.levers
+        ],
+        "notes": list(plan.notes),
+        "caution": CAUTION,
+    }
+
+
+def finding_values(finding: checks.Finding) -> dict[str, object]:
+    """Return a finding as plain values, ready for JSON."""
+    return {
+        "check": finding.check,
+        "axis": finding.axis,
+        "value": finding.value,
+        "limit": finding.limit,
+        "margin": finding.margin,
+        "unit": finding.unit,
+        "use": finding.use,
+        "ok": finding.ok,
+        "rounding": finding.rounding,
+        "time_s": finding.time,
+        "step": finding.step,
+    }
+
+
+def write_json(values: Mapping[str, object], file: Path) -> None:
+    """Write plain values to a JSON file, which is replaced when it is complete.
+
+    Raises
+    ------
+    InputError
+        The file cannot be written.
+    """
+    with setpoints.replacing(file) as stream:
+        stream.write(text(values))
+
+
+def text(values: Mapping[str, object]) -> str:
+    """Return plain values as JSON, the same for the same values."""
+    return json.dumps(values, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+
+
+def uses(plan: Plan, step: PlannedStep) -> dict[str, dict[str, float]]:
+    """Return the share of each limit that a step uses at most: quantity → axis → share.
+
+    Limits that an axis does not have are left out.
+    """
+    return {
+        quantity: {
+            axis.name: peak / axis.limits[row]
+            for axis, peak in zip(
+                plan.job.machine.axes, step.trajectory.peaks[row].value.tolist(), strict=True
+            )
+            if math.isfinite(axis.limits[row])
+        }
+        for row, quantity in enumerate(checks.QUANTITIES)
+    }
+
+
+def _step(plan: Plan, step: PlannedStep) -> dict[str, object]:
+    return {
+        "name": step.name,
+        "kind": step.kind,
+        "start_s": step.start,
+        "duration_s": step.duration,
+        "least_time_s": step.least_time,
+        "limited_by": [_limit(limit) for limit in step.limited_by],
+        "peaks": _peaks(plan, step),
+    }
+
+
+def _limit(limit: Limit) -> dict[str, str | None]:
+    return {"axis": limit.axis, "quantity": limit.quantity}
+
+
+def _peaks(plan: Plan, step: PlannedStep) -> dict[str, dict[str, float | None]]:
+    """Return the peaks of every axis. Without a jerk limit the acceleration may jump: no number."""
+    rows: Sequence[list[float]] = [peak.value.tolist() for peak in step.trajectory.peaks]
+    return {
+        axis.name: {
+            quantity: rows[row][column]
+            if quantity != "jerk" or math.isfinite(axis.limits.jerk)
+            else None
+            for row, quantity in enumerate(checks.QUANTITIES)
+        }
+        for column, axis in enumerate(plan.job.machine.axes)
+    }
