@@ -37,6 +37,9 @@ TIME_ROUNDING = 8 * np.finfo(np.float64).eps
 TICK_TOLERANCE = 1e-9
 """Greatest deviation [s] of a row's time from an even period."""
 
+FLOAT_ROUNDING = 4.0
+"""Rounding of a computed position, in units of its last binary digit."""
+
 QUANTITIES = {"velocity": 1, "acceleration": 2, "deceleration": 2, "jerk": 3}
 """The limits of an axis, in the order of its record, and the derivatives that they bound."""
 
@@ -395,6 +398,7 @@ def _differences(
     slows = acceleration * (before + after) < 0
     slows = np.where(one_way, slows, limits.deceleration > limits.acceleration)
     size = np.abs(acceleration)
+    last_digit = table.position_step + FLOAT_ROUNDING * float(np.spacing(np.abs(position).max()))
     sizes = {
         "velocity": np.abs(velocity),
         "acceleration": np.where(slows, 0.0, size),
@@ -409,8 +413,8 @@ def _differences(
         time = float(table.time[min(max(worst - 3 + order, 0), table.time.size - 1)])
         found = _Worst(float(sizes[quantity][worst]), time)
         # The magnitudes of a difference's weights sum to 2^order; each position may be half of its
-        # last decimal off.
-        rounding = 2 ** (order - 1) * table.position_step / period**order
+        # last digit off.
+        rounding = 2 ** (order - 1) * last_digit / period**order
         finding = _upper(found, quantity, limit, _rate_unit(axis, order), axis)
         within = found.value <= limit * (1 + LIMIT_TOLERANCE) + rounding
         yield replace(finding, rounding=rounding, ok=bool(within))

@@ -438,7 +438,7 @@ def _levers(planned: Plan) -> str:
     ]
     longest = sorted(planned.steps, key=lambda step: -step.duration)[:5]
     asked = sum(step.duration for step in planned.steps if _asks_for_time(step))
-    lines = ["", "What would shorten the cycle:", "", _table(heads, rows, text=heads[2:])]
+    lines = ["", "What would shorten the cycle:", "", _table(heads, rows, text=(heads[0], heads[2]))]
     if asked:
         lines.append(f"\nWaits and times asked for take {asked:.3f} s.")
     names = "; ".join(f"{step.name} {step.duration:.3f} s" for step in longest if step.duration)
@@ -460,9 +460,9 @@ def _findings_table(findings: Sequence[Finding]) -> str:
         [
             finding.check,
             finding.axis or "",
-            f"{finding.value:.6g}",
+            _short(finding.value),
             f"{finding.limit:.6g}",
-            f"{finding.margin:.3g}",
+            _short(finding.margin, 3),
             finding.unit,
             "" if finding.use is None else f"{100 * finding.use:.1f}",
             _at(finding),
@@ -473,9 +473,15 @@ def _findings_table(findings: Sequence[Finding]) -> str:
     return _table(heads, rows, text=("requirement", "axis", "unit", "where", "met"))
 
 
+def _short(value: float, digits: int = 6) -> str:
+    """Return a number in few digits. What rounding alone makes, below a billionth, is 0."""
+    return f"{round(value, 9) + 0.0:.{digits}g}"
+
+
 def _at(finding: Finding) -> str:
-    parts = [finding.step] if finding.step else []
-    if finding.time is not None:
+    """Return where the worst case is; nowhere in particular where it is 0."""
+    parts = [finding.step] if finding.step and round(finding.value, 9) else []
+    if finding.time is not None and round(finding.value, 9):
         parts.append(f"at {finding.time:.3f} s")
     return " ".join(parts)
 

@@ -14,6 +14,7 @@ To add a kind of step, write a function that turns its ``_Task`` into a ``_Motio
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, NamedTuple
 
@@ -174,9 +175,13 @@ class Plan(Schedule):
             levers.append(Lever(Limit(axis, quantity, saves), sum(first), names))
         return tuple(sorted(levers, key=lambda lever: (-lever.limit.saves, -lever.time)))
 
-    def check(self) -> tuple[checks.Finding, ...]:
-        """Judge every requirement, as ``checks.check`` does."""
+    @cached_property
+    def _findings(self) -> tuple[checks.Finding, ...]:
         return checks.check(self)
+
+    def check(self) -> tuple[checks.Finding, ...]:
+        """Judge every requirement, as ``checks.check`` does; once, for a plan does not change."""
+        return self._findings
 
     def setpoints(
         self, period: float | None = None, columns: Sequence[str] = tuple(setpoints.COLUMNS)
@@ -218,6 +223,7 @@ def plan(
         ends = (np.array(positions[index]), np.array(positions[index + 1]))
         task = _Task(job, index, step, ends, limits)
         motion = _motion(task)
+        duration, least = motion.trajectory.duration, motion.least_time
         steps.append(
             PlannedStep(
                 name=job.cycle.step_label(index),
@@ -225,7 +231,8 @@ def plan(
                 start=start,
                 trajectory=motion.trajectory,
                 limited_by=motion.limited_by,
-                least_time=motion.least_time,
+                # Rounding may put the bound above a motion that reaches it.
+                least_time=None if least is None else min(least, duration),
             )
         )
         start = steps[-1].end

@@ -264,7 +264,8 @@ class Table:
     def _inner(self, place: str, raw: object) -> Table:
         if not isinstance(raw, dict):
             self.faults.append(Fault(place, f"{shown(raw)}; a table is needed", self.file))
-            raw = {}
+            # what is missing in a table that is none is no news: those faults go nowhere
+            return Table({}, place=place, file=self.file, faults=[])
         return Table(raw, place=place, file=self.file, faults=self.faults)
 
 

@@ -129,9 +129,6 @@ def _columns(header: Row, delimiter: str, faults: list[Fault]) -> Columns | None
     place = f"line {header.line}"
     count = len(faults)
     decimal = "," if delimiter == ";" else "."
-    if all(name.lstrip("+-")[:1].isdigit() for name in names):
-        faults.append(Fault(place, "has numbers only; the first row names the columns"))
-        return None
     for index, name in enumerate(names):
         if not name:
             faults.append(Fault(f"{place}, column {index + 1}", "has no name"))
@@ -152,14 +149,18 @@ def _point(row: Row, columns: Columns, faults: list[Fault]) -> Waypoint | None:
         message = f"{len(cells)} cells; the header has {columns.width} columns"
         faults.append(Fault(f"line {line}", message))
         return None
-    try:
-        # a row with a number in every cell, as nearly all are, is read at one go
-        to = {column: _number(cells[index], columns.decimal) for column, index in columns.numbers}
-    except ValueError:
-        found = len(faults)
-        to = dict(_given_numbers(row, columns, faults))
-        if len(faults) > found:
-            return None
+    count = len(faults)
+    to: dict[str, float] = {}
+    for column, index in columns.numbers:
+        cell = cells[index]
+        if cell and not cell.isspace():
+            number = _number(cell, columns.decimal)
+            if number is None:
+                faults.append(_no_number(row, cell, column, columns))
+            else:
+                to[column] = number
+    if len(faults) > count:
+        return None
     speed = to.pop("speed", None)
     wait = to.pop("wait", 0.0)
     name = None if columns.name is None else cells[columns.name].strip() or None
@@ -172,24 +173,18 @@ def _point(row: Row, columns: Columns, faults: list[Fault]) -> Waypoint | None:
         return None
 
 
-def _given_numbers(row: Row, columns: Columns, faults: list[Fault]) -> Iterator[tuple[str, float]]:
-    """Yield the numbers of the cells that are not empty, with their columns."""
-    for column, index in columns.numbers:
-        cell = row.cells[index].strip()
-        if not cell:
-            continue
-        try:
-            yield column, _number(cell, columns.decimal)
-        except ValueError:
-            message = f"{shown(cell)}; a number in axis units is needed"
-            if "," in cell and columns.decimal == ".":
-                message += "; a decimal comma is understood where ; separates the columns"
-            faults.append(Fault(f"line {row.line}, column {column}", message))
+def _no_number(row: Row, cell: str, column: str, columns: Columns) -> Fault:
+    message = f"{shown(cell)}; a number in axis units is needed"
+    if "," in cell and columns.decimal == ".":
+        message += "; a decimal comma is understood where ; separates the columns"
+    return Fault(f"line {row.line}, column {column}", message)
 
 
-def _number(cell: str, decimal: str) -> float:
-    """Return the number in a cell; raise ValueError where there is none."""
+def _number(cell: str, decimal: str) -> float | None:
     # Python's own spelling of numbers has underscores and other scripts' digits
     if "_" in cell or not cell.isascii():
-        raise ValueError(cell)
-    return float(cell.replace(decimal, "."))
+        return None
+    try:
+        return float(cell.replace(decimal, "."))
+    except ValueError:
+        return None

@@ -90,12 +90,11 @@ def roots(coefficients: Array, length: Array) -> Array:
     derivative, found in the same way, give those of the polynomial (Collins, Loos: Polynomial Real
     Root Isolation by Differentiation, 1976; value from memory).
     """
-    scaled = trimmed(coefficients) * np.power(
-        length[:, np.newaxis], np.arange(trimmed(coefficients).shape[-1])
-    )
-    found = _unit_roots(scaled) * length[:, np.newaxis]
-    missing = coefficients.shape[-1] - 1 - found.shape[-1]
-    return np.pad(found, ((0, 0), (0, missing)), constant_values=np.nan)
+    used = trimmed(coefficients)
+    scaled = used * np.power(length[:, np.newaxis], np.arange(used.shape[-1]))
+    found = np.full((length.size, coefficients.shape[-1] - 1), np.nan)
+    found[:, : used.shape[-1] - 1] = _unit_roots(scaled) * length[:, np.newaxis]
+    return found
 
 
 def extremes(coefficients: Array, length: Array) -> tuple[Array, Array, Array, Array]:
@@ -165,7 +164,7 @@ def _quadratic_roots(coefficients: Array) -> Array:
 
     Source: Press et al.: Numerical Recipes (2007), section 5.6 (from memory).
     """
-    constant, linear, square = np.moveaxis(coefficients, -1, 0)
+    constant, linear, square = coefficients.T
     square_free = linear**2 - 4 * square * constant
     real = square_free >= 0
     half = -0.5 * (linear + np.copysign(np.sqrt(np.where(real, square_free, 0.0)), linear))

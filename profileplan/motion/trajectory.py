@@ -206,7 +206,7 @@ class Trajectory:
         Peak
             ``value`` (n,) [mm/s] and ``time`` (n,) [s].
         """
-        velocity = polynomials.trimmed(np.moveaxis(self._derivative(1), 1, 2))
+        velocity = polynomials.trimmed(self._derivative(1).transpose(0, 2, 1))
         width = velocity.shape[-1]
         squared = np.zeros((velocity.shape[0], 2 * width - 1))
         for axis in np.flatnonzero(members):
@@ -286,14 +286,15 @@ class Trajectory:
 
     def _derivative(self, order: int) -> Array:
         """Return the coefficients of a derivative: (n, 6 - order, d), at least one power."""
-        coefficients = np.moveaxis(self.coefficients, 1, 2)
-        for _ in range(order):
-            coefficients = polynomials.derivative(coefficients)
-        return np.moveaxis(coefficients, 2, 1)
+        coefficients = self.coefficients
+        for _ in range(min(order, ORDER - 1)):
+            powers = np.arange(1.0, coefficients.shape[1])
+            coefficients = coefficients[:, 1:] * powers[:, np.newaxis]
+        return coefficients if order < ORDER else np.zeros_like(coefficients)
 
     def _rows(self, derivative: int) -> Array:
         """Return a derivative's polynomials one a row, piece by piece, axis by axis: (n d, k)."""
-        by_axis = np.moveaxis(self._derivative(derivative), 1, 2)
+        by_axis = self._derivative(derivative).transpose(0, 2, 1)
         return polynomials.trimmed(by_axis.reshape(-1, by_axis.shape[-1]))
 
     @cached_property
@@ -303,7 +304,7 @@ class Trajectory:
 
     def _at_ends_of_pieces(self, derivative: int) -> Array:
         """Return the value just before the end of each piece: (n, d)."""
-        by_axis = np.moveaxis(self._derivative(derivative), 1, 2)
+        by_axis = self._derivative(derivative).transpose(0, 2, 1)
         return polynomials.evaluate(by_axis, self.durations[:, np.newaxis])
 
     def _magnitude(self, derivative: int) -> Peak:
@@ -349,7 +350,7 @@ class Trajectory:
     def _greatest(self, size: Array, at: Array) -> Peak:
         """Return the greatest of sizes (n d, k) on every axis, and the time of it."""
         count, axes = self.durations.size, len(self.axes)
-        by_axis = np.moveaxis(size.reshape(count, axes, -1), 1, 0).reshape(axes, -1)
-        times = np.moveaxis(at.reshape(count, axes, -1), 1, 0).reshape(axes, -1)
+        by_axis = size.reshape(count, axes, -1).swapaxes(0, 1).reshape(axes, -1)
+        times = at.reshape(count, axes, -1).swapaxes(0, 1).reshape(axes, -1)
         worst = by_axis.argmax(axis=-1)
         return Peak(by_axis[np.arange(axes), worst], times[np.arange(axes), worst])

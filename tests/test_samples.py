@@ -1,0 +1,78 @@
+"""Every sample is planned, checked and exported as a user would do it."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+import pytest
+from click.testing import CliRunner
+from numpy.testing import assert_array_less
+
+import profileplan as pp
+from profileplan.cli import cli
+
+SAMPLES = Path(__file__).parents[1] / "samples"
+
+JOBS = {
+    "kiln-loader": (["cycle.toml"], 0),
+    "tile-turner": (["cycle.toml"], 1),
+    "sealant-portal": (["bead.csv", "-m", "machine.toml"], 0),
+    "faulty": (["cycle.toml"], 2),
+}
+"""Folder → arguments, and the exit status: the tile turner misses its target on purpose."""
+
+GOOD = [name for name, (_, status) in JOBS.items() if status < 2]
+
+
+def arguments(name: str) -> list[str]:
+    """Return a sample's arguments with its folder put before every file."""
+    words, _ = JOBS[name]
+    return [word if word.startswith("-") else str(SAMPLES / name / word) for word in words]
+
+
+def test_every_sample_is_listed_here() -> None:
+    """A sample that no test runs will break unseen."""
+    assert sorted(JOBS) == sorted(folder.name for folder in SAMPLES.iterdir())
+
+
+@pytest.mark.parametrize("name", JOBS)
+@pytest.mark.parametrize("command", ["plan", "check"])
+def test_samples_end_with_their_exit_status(name: str, command: str) -> None:
+    """0 fine, 1 a requirement is not met, 2 bad input."""
+    result = CliRunner().invoke(cli, [command, *arguments(name)])
+    assert JOBS[name][1] == result.exit_code, result.output
+
+
+@pytest.mark.parametrize("name", GOOD)
+def test_differences_of_the_tables_of_samples_keep_the_limits(name: str, tmp_path: Path) -> None:
+    """A drive that differentiates positions must see no limit broken.
+
+    First, second and third differences over the period, its square and its cube are means of the
+    derivatives, so they keep the limits as well; rounding to nine decimals adds at most 1, 2 and 4
+    units of the last decimal.
+    """
+    result = CliRunner().invoke(cli, ["plan", *arguments(name), "-o", str(tmp_path)])
+    assert result.exit_code == JOBS[name][1]
+    machine = pp.read_machine(SAMPLES / name / "machine.toml")
+    lines = (tmp_path / "setpoints.csv").read_text(encoding="utf-8").splitlines()
+    columns = lines[0].split(",")
+    rows = np.array([[float(cell) for cell in line.split(",")] for line in lines[1:]])
+    period = machine.setpoints.period
+    for axis in machine.axes:
+        position = rows[:, columns.index(f"{axis.name}_pos_{axis.unit}")]
+        position = np.pad(position, 3, mode="edge")
+        either = max(axis.limits.acceleration, axis.limits.deceleration)
+        for order, limit in enumerate((axis.limits.velocity, either, axis.limits.jerk), start=1):
+            rounding = 2 ** (order - 1) * 1e-9
+            greatest = np.abs(np.diff(position, order)).max()
+            assert_array_less(greatest, limit * period**order * (1 + 1e-9) + 1.01 * rounding)
+
+
+@pytest.mark.parametrize("name", GOOD)
+def test_tables_of_samples_pass_the_table_check(name: str, tmp_path: Path) -> None:
+    """What the program writes, its own check of tables must accept."""
+    CliRunner().invoke(cli, ["plan", *arguments(name), "-o", str(tmp_path)])
+    machine = str(SAMPLES / name / "machine.toml")
+    result = CliRunner().invoke(cli, ["check", str(tmp_path / "setpoints.csv"), "-m", machine])
+    assert result.exit_code == 0, result.output
