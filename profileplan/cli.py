@@ -438,7 +438,8 @@ def _levers(planned: Plan) -> str:
     ]
     longest = sorted(planned.steps, key=lambda step: -step.duration)[:5]
     asked = sum(step.duration for step in planned.steps if _asks_for_time(step))
-    lines = ["", "What would shorten the cycle:", "", _table(heads, rows, text=(heads[0], heads[2]))]
+    table = _table(heads, rows, text=(heads[0], heads[2]))
+    lines = ["", "What would shorten the cycle:", "", table]
     if asked:
         lines.append(f"\nWaits and times asked for take {asked:.3f} s.")
     names = "; ".join(f"{step.name} {step.duration:.3f} s" for step in longest if step.duration)
@@ -455,11 +456,10 @@ def _name(limit: Limit) -> str:
 
 
 def _findings_table(findings: Sequence[Finding]) -> str:
-    heads = ["requirement", "axis", "value", "limit", "margin", "unit", "use %", "where", "met"]
+    heads = ["requirement", "value", "limit", "margin", "unit", "use %", "where", "met"]
     rows = [
         [
-            finding.check,
-            finding.axis or "",
+            _required(finding),
             _short(finding.value),
             f"{finding.limit:.6g}",
             _short(finding.margin, 3),
@@ -470,7 +470,11 @@ def _findings_table(findings: Sequence[Finding]) -> str:
         ]
         for finding in findings
     ]
-    return _table(heads, rows, text=("requirement", "axis", "unit", "where", "met"))
+    return _table(heads, rows, text=("requirement", "unit", "where", "met"))
+
+
+def _required(finding: Finding) -> str:
+    return f"{finding.axis} {finding.check}" if finding.axis else finding.check
 
 
 def _short(value: float, digits: int = 6) -> str:
@@ -487,9 +491,8 @@ def _at(finding: Finding) -> str:
 
 
 def _where(finding: Finding) -> str:
-    name = f"{finding.axis} {finding.check}" if finding.axis else finding.check
     return (
-        f"{name}: {finding.value:.6g} {finding.unit}, allowed {finding.limit:.6g} {finding.unit}, "
+        f"{_required(finding)}: {finding.value:.6g} {finding.unit}, allowed {finding.limit:.6g} {finding.unit}, "
         f"{_at(finding)}"
     )
 

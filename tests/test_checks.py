@@ -231,10 +231,10 @@ def test_a_leap_in_a_table_breaks_every_difference() -> None:
     )
 
 
-def test_a_micrometre_in_a_table_breaks_the_jerk() -> None:
-    """At 1 ms, 1 µm in one row is 3000 mm/s³ of third difference; 100 µm is above the limit."""
-    assert table_failed(moved(GOOD_REST, 1e-3)) == set()
-    assert ("jerk", "x") in table_failed(moved(GOOD_REST, 0.1))
+def test_a_tenth_of_a_micrometre_in_a_table_breaks_the_jerk() -> None:
+    """At 1 ms, 10 nm in one row is 30,000 mm/s³ of third difference; 100 nm is above the limit."""
+    assert table_failed(moved(GOOD_REST, 1e-5)) == set()
+    assert table_failed(moved(GOOD_REST, 1e-4)) == {("jerk", "x")}
 
 
 GOOD_REST = int((GOOD.steps[1].start + 0.1) * 1000)
