@@ -38,7 +38,7 @@ TICK_TOLERANCE = 1e-9
 """Greatest deviation [s] of a row's time from an even period."""
 
 FLOAT_ROUNDING = 4.0
-"""Rounding of a computed position, in units of its last binary digit."""
+"""Rounding of a computed position or time, in units of its last binary digit."""
 
 QUANTITIES = {"velocity": 1, "acceleration": 2, "deceleration": 2, "jerk": 3}
 """The limits of an axis, in the order of its record, and the derivatives that they bound."""
@@ -398,7 +398,10 @@ def _differences(
     slows = acceleration * (before + after) < 0
     slows = np.where(one_way, slows, limits.deceleration > limits.acceleration)
     size = np.abs(acceleration)
-    last_digit = table.position_step + FLOAT_ROUNDING * float(np.spacing(np.abs(position).max()))
+    # A position is rounded as it is written, as a number, and as the time that it belongs to is.
+    last_digit = table.position_step + FLOAT_ROUNDING * float(
+        np.spacing(np.abs(position).max()) + np.spacing(table.time[-1]) * np.abs(velocity).max()
+    )
     sizes = {
         "velocity": np.abs(velocity),
         "acceleration": np.where(slows, 0.0, size),

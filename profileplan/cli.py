@@ -492,8 +492,8 @@ def _at(finding: Finding) -> str:
 
 def _where(finding: Finding) -> str:
     return (
-        f"{_required(finding)}: {finding.value:.6g} {finding.unit}, allowed {finding.limit:.6g} {finding.unit}, "
-        f"{_at(finding)}"
+        f"{_required(finding)}: {finding.value:.6g} {finding.unit}, "
+        f"allowed {finding.limit:.6g} {finding.unit}, {_at(finding)}"
     )
 
 

@@ -165,8 +165,13 @@ def test_the_example_of_the_design_is_read(tmp_path: Path) -> None:
             Payload(0.5, outline=((0, 0), (1, 0), (0, 1)), name="n"),
         ),
         (
-            'path = [{x = 1, c = "0.5 rev", speed = 5, wait = 1, name = "p"}]\n'
-            'tolerance = "1 mm"\nangle_tolerance = 1\nspeed = 3\ntime = 4\nlaw = "quintic"',
+            """path = [{x = 1, c = "0.5 rev", speed = 5, wait = 1, name = "p"}]
+            tolerance = "1 mm"
+            angle_tolerance = 1
+            speed = 3
+            time = 4
+            law = "quintic"
+            """,
             PathStep(
                 (Waypoint({"x": 1, "c": 180}, speed=5, wait=1, name="p"),),
                 tolerance=1,
@@ -401,10 +406,11 @@ def test_a_step_without_a_name_is_called_by_kind_and_number() -> None:
     assert [cycle.step_label(0), cycle.step_label(1)] == ["move 1", "settle"]
 
 
-KEYS = st.sampled_from(
-    ["move", "line", "wait", "signal", "payload", "path", "transfer", "trace", "x", "z", "speed"]
-    + ["time", "name", "tolerance", "outline", "radius", "place", "layers", "law", "lift", ""]
+WORDS = (
+    "move line wait signal payload path transfer trace x z speed time name tolerance outline "
+    "radius place layers law lift"
 )
+KEYS = st.sampled_from([*WORDS.split(), ""])
 SCALARS = (
     st.booleans()
     | st.integers(-(2**70), 2**70)

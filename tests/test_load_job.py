@@ -265,6 +265,7 @@ def test_faults_of_all_files_come_at_once(folder: Path) -> None:
         ('move = { x = 400, turn = "0.25 rev" }', "move = {}", ["steps[1].move"]),
         ('move = { x = 400, turn = "0.25 rev" }', "path = [{}, {x = 1}]", ["steps[1].path[1]"]),
         ('move = { x = 400, turn = "0.25 rev" }', "path = 5", ["steps[1].path"]),
+        ('move = { x = 400, turn = "0.25 rev" }', 'path = "no.csv"', [""]),
         ("wait = 1", 'wait = 1\nname = "move 1"', ["steps[2].name"]),
     ],
 )
@@ -351,5 +352,5 @@ def test_other_files_are_refused(tmp_path: Path, name: str, words: str) -> None:
 def test_a_missing_cycle_is_reported_with_a_faulty_machine(folder: Path) -> None:
     """The file that is there is judged nevertheless."""
     (folder / "machine.toml").write_text("[axes]", encoding="utf-8")
-    act = lambda: load_job(folder / "no.toml", machine=folder / "machine.toml")  # noqa: E731
-    assert places(act) == [("no.toml", ""), ("machine.toml", "axes")]
+    found = places(lambda: load_job(folder / "no.toml", machine=folder / "machine.toml"))
+    assert found == [("no.toml", ""), ("machine.toml", "axes")]

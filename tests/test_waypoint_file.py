@@ -85,10 +85,15 @@ def test_an_empty_cell_leaves_the_axis_where_it_is(tmp_path: Path) -> None:
 
 
 def test_points_know_their_lines(tmp_path: Path) -> None:
-    """Later faults must be found in the file, quoted line ends and blank lines included."""
-    text = 'x,name\n\n1,"two\nlines"\n\n2,b\n'
-    path = write(tmp_path, text.replace("two\nlines", "a"))
-    assert [point.line for point in read_waypoints(path)] == [3, 5]
+    """Later faults must be found in the file, blank lines included."""
+    points = read_waypoints(write(tmp_path, "x\n\n1\n \n2\n"))
+    assert [point.line for point in points] == [3, 5]
+
+
+def test_lines_are_counted_through_quoted_line_ends(tmp_path: Path) -> None:
+    """A row is found where it begins, even after a cell of several lines."""
+    path = write(tmp_path, 'x,name\n1,"two\nlines"\na,b\n')
+    assert [place for place, _ in faults(path)] == ["line 2, column name", "line 4, column x"]
 
 
 def test_a_hundred_thousand_rows_are_read(tmp_path: Path) -> None:

@@ -80,9 +80,7 @@ def main() -> None:
     with tempfile.TemporaryDirectory() as folder:
         bare = Path(folder) / "bare.py"
         bare.write_text(BARE_CLICK)
-        start_up = ratio(
-            command("-m", "profileplan", "--help"), command(str(bare), "--help")
-        )
+        start_up = ratio(command("-m", "profileplan", "--help"), command(str(bare), "--help"))
         print(f"start-up over a bare click program         {start_up}  aim 1.5")
         job = str(ROOT / "samples/kiln-loader/cycle.toml")
         sample = ratio(
