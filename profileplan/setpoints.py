@@ -24,7 +24,7 @@ if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping, Sequence
     from typing import TextIO
 
-    from profileplan.inputs import Axis, Machine
+    from profileplan.inputs import Machine
     from profileplan.motion.polynomials import Array
     from profileplan.motion.schedule import Schedule
 
@@ -46,15 +46,14 @@ class Column(NamedTuple):
     """A quantity that a table can hold for every axis."""
 
     derivative: int
-    unit: str
     decimals: int
 
 
 COLUMNS: Mapping[str, Column] = {
-    "pos": Column(0, "{unit}", 9),
-    "vel": Column(1, "{unit}_s", 6),
-    "acc": Column(2, "{unit}_s2", 6),
-    "jerk": Column(3, "{unit}_s3", 6),
+    "pos": Column(0, 9),
+    "vel": Column(1, 6),
+    "acc": Column(2, 6),
+    "jerk": Column(3, 6),
 }
 """Quantities by the names that select them. Positions have nine decimals, for a drive takes their
 third difference: with a period of 1 ms half of the last digit is then 2 mm/s³ of jerk."""
@@ -141,7 +140,7 @@ def sample(
 def header(machine: Machine, columns: Sequence[str], signals: Sequence[str]) -> list[str]:
     """Return the names of a table's columns: time, the axes in file order, the signals."""
     names = ["t_s"]
-    names += [_column_name(axis, column) for axis in machine.axes for column in columns]
+    names += [axis.column(column) for axis in machine.axes for column in columns]
     return [*names, *signals]
 
 
@@ -276,10 +275,6 @@ def _period(schedule: Schedule, period: float | None) -> float:
     )
 
 
-def _column_name(axis: Axis, column: str) -> str:
-    return f"{axis.name}_{column}_{COLUMNS[column].unit.format(unit=axis.unit)}"
-
-
 def _judge_columns(columns: Sequence[str]) -> None:
     known = ", ".join(COLUMNS)
     faults = [
@@ -343,7 +338,7 @@ def _header_faults(names: Sequence[str], machine: Machine) -> list[str]:
     if not names:
         return ["is empty; a header of column names is needed"]
     faults = [f'column "{name}" stands twice' for name in names if names.count(name) > 1]
-    needed = ["t_s", *(_column_name(axis, "pos") for axis in machine.axes)]
+    needed = ["t_s", *(axis.column("pos") for axis in machine.axes)]
     faults += [f'column "{name}" is missing' for name in needed if name not in names]
     return list(dict.fromkeys(faults))
 
@@ -375,7 +370,7 @@ def _parse(rows: Sequence[Sequence[str]], file: Path) -> Array:
 
 def _decimals(names: Sequence[str], row: Sequence[str], machine: Machine) -> int:
     """Return how many decimals the positions of a table have, at least, by its first row."""
-    cells = [row[names.index(_column_name(axis, "pos"))] for axis in machine.axes]
+    cells = [row[names.index(axis.column("pos"))] for axis in machine.axes]
     return min(len(cell.partition(".")[2]) for cell in cells)
 
 
@@ -384,7 +379,7 @@ def _table(names: Sequence[str], numbers: Array, machine: Machine, decimals: int
     found: dict[str, Array] = {}
     taken = {"t_s"}
     for column in COLUMNS:
-        own = [_column_name(axis, column) for axis in machine.axes]
+        own = [axis.column(column) for axis in machine.axes]
         taken.update(own)
         if all(name in names for name in own):
             found[column] = numbers[:, [names.index(name) for name in own]]

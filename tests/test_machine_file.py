@@ -23,7 +23,7 @@ from profileplan.inputs import (
     read_machine,
 )
 
-# the example of the design, to the letter, and the two axes that it leaves to the reader
+# the whole format in one example, and the two axes that it leaves to the reader
 EXAMPLE = """\
 name = "Kiln loader"
 up = "+z"                      # which direction of which axis is up ("-z" where z counts downward); leave out on a flat machine
@@ -37,7 +37,7 @@ deceleration = 9000            # mm/s², slowing down; default: acceleration
 jerk = 200000                  # mm/s³; leave out: not limited
 resolution = 0.001             # mm a drive increment stands for; optional
 
-[axes.x.mechanics]             # optional: see the mechanics issue
+[axes.x.mechanics]             # optional: recorded as it is
 
 [tool]
 radius = 45                    # footprint around the tool point, mm; or outline = [[x, y], ...]
@@ -50,7 +50,7 @@ top = 180                      # the height up to which it blocks, on the up axi
 
 [setpoints]
 period = 0.001                 # s
-"""  # noqa: E501 - to the letter
+"""  # noqa: E501 - as a user writes it
 OTHER_AXES = """
 [axes.y]
 travel = [0, "1.2 m"]
@@ -112,7 +112,7 @@ def write(folder: Path, text: str) -> Path:
     return path
 
 
-def test_the_example_of_the_design_is_read(tmp_path: Path) -> None:
+def test_the_whole_format_is_read(tmp_path: Path) -> None:
     """Users start from this example; order of the axes and every value must come through."""
     path = write(tmp_path, EXAMPLE + OTHER_AXES)
     machine = read_machine(path)

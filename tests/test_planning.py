@@ -100,6 +100,12 @@ def test_a_time_too_short_is_refused_with_the_least(step: Step) -> None:
         pp.plan(loader(), cycle(step))
 
 
+def test_a_time_asked_for_goes_with_arriving_together() -> None:
+    """Each axis as soon as it can, and all in a given time: one contradicts the other."""
+    with pytest.raises(pp.InputError, match="leave one out"):
+        pp.Move({"x": 1100.0}, arrival="earliest", time=2.0)
+
+
 def test_least_time_of_a_quintic_is_that_of_the_fastest_law() -> None:
     """The bound is proven: no motion under the limits beats the trapezoidal law."""
     target = {"x": 1100.0, "z": 100.0}

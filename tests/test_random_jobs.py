@@ -21,4 +21,4 @@ BATCH = 40
 def test_no_random_cycle_breaks_a_limit(first: int) -> None:
     """Neither the plan nor the differences of its table, and nothing is raised."""
     faults = {seed: random_jobs.faults(seed) for seed in range(first, first + BATCH)}
-    assert {} == {seed: found for seed, found in faults.items() if found}
+    assert not {seed: found for seed, found in faults.items() if found}

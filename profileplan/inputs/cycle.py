@@ -71,6 +71,8 @@ class Move:
         judge = _judge_step(self.name, law=self.law, time=self.time)
         object.__setattr__(self, "to", judge.positions(self.kind, self.to))
         judge.choice("arrival", self.arrival, ARRIVALS)
+        if self.arrival == "earliest" and self.time is not None:
+            judge.note("arrival", '"earliest" lets no axis take the time asked for; leave one out')
         judge.finish()
 
 

@@ -24,6 +24,7 @@ from profileplan.inputs.cycle import (
     Wait,
     Waypoint,
 )
+from profileplan.inputs.machine import SETPOINT_UNITS
 from profileplan.inputs.rules import join, near, shown, tidy
 
 if TYPE_CHECKING:
@@ -32,9 +33,6 @@ if TYPE_CHECKING:
 
     from profileplan.inputs.machine import Axis, Machine
     from profileplan.inputs.rules import Positions
-
-# headings of a setpoint table after the name of an axis, with {} for its unit
-COLUMNS = ("pos_{}", "vel_{}_s", "acc_{}_s2", "jerk_{}_s3", "force_N", "torque_Nm")
 
 
 @dataclass(frozen=True)
@@ -233,14 +231,9 @@ def _speed_faults(
 
 def _signal_faults(axes: Mapping[str, Axis], output: str, place: str) -> Iterator[Fault]:
     for axis in axes.values():
-        if output in _columns(axis):
+        if output in map(axis.column, SETPOINT_UNITS):
             message = f"{shown(output)} is a column of axis {axis.name} in the setpoint table"
             yield Fault(place, f"{message}; choose another name")
-
-
-def _columns(axis: Axis) -> set[str]:
-    """Return the headings that an axis can have in a setpoint table."""
-    return {f"{axis.name}_{column.format(axis.unit)}" for column in COLUMNS}
 
 
 def _height_faults(machine: Machine, height: float) -> Iterator[Fault]:

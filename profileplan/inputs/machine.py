@@ -33,6 +33,16 @@ if TYPE_CHECKING:
 AxisKind: TypeAlias = Literal["linear", "rotary"]
 AXIS_KINDS: tuple[AxisKind, ...] = ("linear", "rotary")
 
+SETPOINT_UNITS = {
+    "pos": "{}",
+    "vel": "{}_s",
+    "acc": "{}_s2",
+    "jerk": "{}_s3",
+    "force": "N",
+    "torque": "Nm",
+}
+"""What a setpoint table can hold of an axis → its unit in the heading, {} for the axis's own."""
+
 MOST_AXES = 12
 WHOLE_NANOSECOND_TOLERANCE = 1e-6  # ns: a period of 1 s in double precision is rounded by 2e-7 ns
 
@@ -100,6 +110,16 @@ class Axis:
     def unit(self) -> Literal["mm", "deg"]:
         """The unit of a position."""
         return "deg" if self.kind == "rotary" else "mm"
+
+    def column(self, quantity: str) -> str:
+        """Return the heading of the axis's column in a setpoint table.
+
+        Parameters
+        ----------
+        quantity : str
+            A key of ``SETPOINT_UNITS``.
+        """
+        return f"{self.name}_{quantity}_{SETPOINT_UNITS[quantity].format(self.unit)}"
 
     @property
     def limits(self) -> AxisLimits:
