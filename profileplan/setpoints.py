@@ -56,7 +56,7 @@ COLUMNS: Mapping[str, Column] = {
     "jerk": Column(3, 6),
 }
 """Quantities by the names that select them. Positions have nine decimals, for a drive takes their
-third difference: with a period of 1 ms half of the last digit is then 2 mm/s³ of jerk."""
+third difference: at a period of 1 ms rounding is then at most 4 mm/s³ of jerk."""
 
 DEFAULT_COLUMNS = ("pos", "vel", "acc")
 

@@ -270,10 +270,10 @@ def test_turning_round_between_rows_raises_no_false_alarm() -> None:
 
 
 def test_rounding_is_allowed_for_and_told(tmp_path: Path) -> None:
-    """Nine decimals at 50 µs are 0.03 mm/s³ of third difference: rounding, not motion."""
+    """Nine decimals at 50 µs are 32,000 mm/s³ of third difference: rounding, not motion."""
     file = tmp_path / "table.csv"
     pp.write_csv(GOOD, file, period=0.00005, columns=["pos"])
     findings = pp.check_table(pp.read_csv(file, MACHINE), MACHINE)
     jerk = next(f for f in findings if f.check == "jerk")
-    assert_allclose(jerk.rounding, 4e-9 / 0.00005**3, rtol=1e-3)
+    assert_allclose(jerk.rounding, 4e-9 / 0.00005**3, rtol=0.01)
     assert all(f.ok for f in findings)
