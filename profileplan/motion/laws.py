@@ -160,8 +160,8 @@ def solve_trapezoidal(distance: Array | float, limits: Limits) -> Moves:
 
     Examples
     --------
-    >>> solve_trapezoidal(10.0, Limits(5.0, 10.0, 10.0, 30.0)).duration.round(4)
-    array(2.8333)
+    >>> round(float(solve_trapezoidal(10.0, Limits(5.0, 10.0, 10.0, 30.0)).duration), 4)
+    2.8333
     """
     distance, velocity, acceleration, deceleration, jerk = _broadcast(distance, limits)
     length = np.abs(distance)
@@ -227,8 +227,8 @@ def solve_quintic(distance: Array | float, limits: Limits) -> Moves:
 
     Examples
     --------
-    >>> solve_quintic(0.5, Limits(1.0, 10.0, 10.0, 100.0)).duration
-    array(0.9375)
+    >>> float(solve_quintic(0.5, Limits(1.0, 10.0, 10.0, 100.0)).duration)
+    0.9375
     """
     distance, velocity, acceleration, deceleration, jerk = _broadcast(distance, limits)
     length = np.abs(distance)
