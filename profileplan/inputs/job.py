@@ -7,6 +7,7 @@ columns of the waypoint file that a point came from.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 from profileplan.errors import Fault, InputError
@@ -68,6 +69,10 @@ class Job:
             Entry 0 is the start, entry i + 1 the end of step i (counted from 0); each in the
             order of the machine's axes [mm or deg].
         """
+        return self._positions
+
+    @cached_property
+    def _positions(self) -> tuple[tuple[float, ...], ...]:
         names = self.machine.axis_names
         now = dict(self.cycle.start)
         result = [tuple(now[name] for name in names)]
