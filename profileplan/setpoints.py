@@ -8,6 +8,7 @@ temporary name and then put in place, so that a reader finds the whole file or n
 from __future__ import annotations
 
 import csv
+import io
 import os
 import tempfile
 from contextlib import contextmanager
@@ -19,6 +20,8 @@ import numpy as np
 
 from profileplan.errors import Fault, InputError
 from profileplan.inputs import SetpointSettings
+from profileplan.inputs.files import read_text
+from profileplan.inputs.rules import tidy
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping, Sequence
@@ -37,9 +40,6 @@ ROWS_AT_A_TIME = 16384
 
 MOST_ROWS = 1_000_000_000
 """Longest table that is begun: about 100 GB on disk."""
-
-MOST_FAULTS = 20
-"""Faulty rows of a table that are listed one by one."""
 
 
 class Column(NamedTuple):
@@ -210,10 +210,9 @@ def read_csv(file: Path, machine: Machine) -> SetpointTable:
         their lines.
     """
     try:
-        with file.open(encoding="utf-8-sig", newline="") as stream:
-            rows = list(csv.reader(stream, strict=True))
-    except (OSError, UnicodeDecodeError, csv.Error) as error:
-        raise InputError([Fault("", f"cannot be read: {error}", file)]) from error
+        rows = list(csv.reader(io.StringIO(read_text(file), newline=""), strict=True))
+    except csv.Error as error:
+        raise InputError([Fault("", f"is no valid CSV: {error}", file)]) from error
     names = rows[0] if rows else []
     faults = _header_faults(names, machine)
     if not faults and len(rows) < 2:
@@ -362,9 +361,7 @@ def _parse(rows: Sequence[Sequence[str]], file: Path) -> Array:
             faults.append(Fault(f"line {line}", fault, file))
         numbers.append(values)
     if faults:
-        more = len(faults) - MOST_FAULTS
-        tail = [Fault("", f"and {more} more rows like these", file)] if more > 0 else []
-        raise InputError([*faults[:MOST_FAULTS], *tail])
+        raise InputError(tidy(faults))
     return np.array(numbers)
 
 

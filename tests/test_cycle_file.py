@@ -1,6 +1,5 @@
 """Cycle files: what is read, and every fault at its place."""
 
-import json
 import math
 from collections.abc import Callable
 from pathlib import Path
@@ -9,6 +8,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from junk import junk, toml
 from profileplan.errors import InputError
 from profileplan.inputs import (
     Axis,
@@ -412,34 +412,8 @@ WORDS = (
     "radius place layers law lift"
 )
 KEYS = st.sampled_from([*WORDS.split(), ""])
-SCALARS = (
-    st.booleans()
-    | st.integers(-(2**70), 2**70)
-    | st.floats()
-    | st.sampled_from(["5 mm", "1,5 m/s", "quintic", "no.csv", "a\u0000b", "", "90 deg"])
-)
-JUNK = st.recursive(
-    SCALARS,
-    lambda inner: st.lists(inner, max_size=4) | st.dictionaries(KEYS, inner, max_size=4),
-    max_leaves=15,
-)
-
-
-def toml(value: object) -> str:
-    """Write a value as TOML, all in one line."""
-    match value:
-        case bool():
-            return str(value).lower()
-        case int() | float():
-            return repr(value)
-        case str():
-            return json.dumps(value, ensure_ascii=False)
-        case list():
-            return "[" + ", ".join(toml(item) for item in value) + "]"
-        case dict():
-            pairs = (f"{toml(key)} = {toml(item)}" for key, item in value.items())
-            return "{" + ", ".join(pairs) + "}"
-    raise TypeError(value)
+TEXTS = st.sampled_from(["5 mm", "1,5 m/s", "quintic", "no.csv", "a\u0000b", "", "90 deg"])
+JUNK = junk(KEYS | TEXTS)
 
 
 @given(

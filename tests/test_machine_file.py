@@ -1,6 +1,5 @@
 """Machine files: what is read, and every fault at its place."""
 
-import json
 import math
 import subprocess
 import sys
@@ -11,6 +10,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from junk import junk, toml
 from profileplan.errors import InputError
 from profileplan.inputs import (
     Axis,
@@ -445,53 +445,31 @@ VALID = {
 WORDS = st.sampled_from(
     ["x", "axes", "travel", "up", "kind", "name", "tool", "outline", "dxf", "5 mm", "1,5 m/s", ""]
 ) | st.text("ab\u00e9 .[]\U0001f600", max_size=5)
-SCALARS = st.booleans() | st.integers(-(2**70), 2**70) | st.floats(allow_nan=True) | WORDS
-JUNK = st.recursive(
-    SCALARS,
-    lambda inner: st.lists(inner, max_size=4) | st.dictionaries(WORDS, inner, max_size=4),
-    max_leaves=12,
-)
+JUNK = junk(WORDS)
 
 
-def toml(value: object) -> str:
-    """Write a value as TOML, all in one line."""
-    match value:
-        case bool():
-            return str(value).lower()
-        case int() | float():
-            return repr(value)
-        case str():
-            return json.dumps(value, ensure_ascii=False)
-        case list():
-            return "[" + ", ".join(toml(item) for item in value) + "]"
-        case dict():
-            pairs = (f"{toml(key)} = {toml(item)}" for key, item in value.items())
-            return "{" + ", ".join(pairs) + "}"
-    raise TypeError(value)
-
-
-def with_junk(node: object, place: list[int], junk: object) -> object:
+def with_junk(node: object, place: list[int], thing: object) -> object:
     """Return a structure with junk at one place; the numbers choose the way to it."""
     if not place or not isinstance(node, (dict, list)) or not node:
-        return junk
+        return thing
     chosen = place[0] % len(node)
     if isinstance(node, list):
         return [
-            with_junk(item, place[1:], junk) if index == chosen else item
+            with_junk(item, place[1:], thing) if index == chosen else item
             for index, item in enumerate(node)
         ]
     return {
-        key: with_junk(item, place[1:], junk) if index == chosen else item
+        key: with_junk(item, place[1:], thing) if index == chosen else item
         for index, (key, item) in enumerate(node.items())
     }
 
 
-@given(place=st.lists(st.integers(0, 5), min_size=1, max_size=5), junk=JUNK)
+@given(place=st.lists(st.integers(0, 5), min_size=1, max_size=5), thing=JUNK)
 def test_junk_at_any_place_gives_a_machine_or_input_error(
-    tmp_path_factory: pytest.TempPathFactory, place: list[int], junk: object
+    tmp_path_factory: pytest.TempPathFactory, place: list[int], thing: object
 ) -> None:
     """Whatever stands anywhere in a file, there is no traceback."""
-    structure = with_junk(VALID, place, junk)
+    structure = with_junk(VALID, place, thing)
     assert isinstance(structure, dict)
     path = tmp_path_factory.getbasetemp() / "junk.toml"
     lines = (f"{toml(key)} = {toml(value)}" for key, value in structure.items())
