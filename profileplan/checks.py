@@ -37,11 +37,15 @@ TIME_ROUNDING = 8 * np.finfo(np.float64).eps
 TICK_TOLERANCE = 1e-9
 """Greatest deviation [s] of a row's time from an even period."""
 
-FLOAT_ROUNDING = 4.0
+FLOAT_ROUNDING = 8.0
 """Rounding of a computed position or time, in units of its last binary digit."""
 
 QUANTITIES = {"velocity": 1, "acceleration": 2, "deceleration": 2, "jerk": 3}
 """The limits of an axis, in the order of its record, and the derivatives that they bound."""
+
+
+SHARED = (*QUANTITIES, "speed", "cycle time")
+"""Checks whose limits are used up in part."""
 
 
 @dataclass(frozen=True)
@@ -84,8 +88,12 @@ class Finding:
     @property
     def use(self) -> float | None:
         """Share of the limit that is used, 1 at the limit; None where a share means nothing."""
-        upward = self.margin == self.limit - self.value
-        return self.value / self.limit if upward and self.limit > 0 else None
+        return self.value / self.limit if self.check in SHARED and self.limit > 0 else None
+
+    @property
+    def decided(self) -> bool:
+        """Whether rounding leaves enough of the value to judge it by."""
+        return self.rounding < self.limit or not self.rounding
 
 
 def check(schedule: Schedule) -> tuple[Finding, ...]:
@@ -129,14 +137,14 @@ def check_table(table: SetpointTable, machine: Machine) -> tuple[Finding, ...]:
     -------
     tuple of Finding
         Axis by axis: travel, velocity, acceleration, deceleration and jerk; then the period.
+        Where rounding alone could break a limit the finding is not ``decided``.
     """
     steps = np.diff(table.time)
     period = float(np.median(steps)) if steps.size else machine.setpoints.period
     findings: list[Finding] = []
     for column, axis in enumerate(machine.axes):
         findings += _table_travel(table, axis, table.position[:, column])
-        if period > 0:
-            findings += _differences(table, axis, table.position[:, column], period)
+        findings += _differences(table, axis, table.position[:, column], period)
     uneven = np.abs(steps - period)
     if uneven.size:
         worst = int(uneven.argmax())
@@ -177,6 +185,12 @@ def _upper(worst: _Worst, check: str, limit: float, unit: str, axis: Axis | None
         time=worst.time,
         step=worst.step,
     )
+
+
+def _nearness(axis: Axis) -> float:
+    """Return how near a position counts as reached [mm or deg]: far from 0 none is finer."""
+    spacing = float(np.spacing(max(map(abs, axis.travel))))
+    return max(ARRIVAL_TOLERANCE, FLOAT_ROUNDING * spacing)
 
 
 def _rate_unit(axis: Axis, derivative: int) -> str:
@@ -223,7 +237,7 @@ def _travel_ends(axis: Axis, low: _Worst, high: _Worst) -> list[Finding]:
     upper = _upper(high, "travel, high end", axis.travel[1], axis.unit, axis)
     lower = _upper(low, "travel, low end", axis.travel[0], axis.unit, axis)
     ends = [replace(lower, margin=low.value - axis.travel[0]), upper]
-    return [replace(end, ok=end.margin >= -ARRIVAL_TOLERANCE) for end in ends]
+    return [replace(end, ok=end.margin >= -_nearness(axis)) for end in ends]
 
 
 def _continuity(schedule: Schedule) -> Iterator[list[Finding]]:
@@ -240,7 +254,7 @@ def _continuity(schedule: Schedule) -> Iterator[list[Finding]]:
     longest = max(step.duration for step in schedule.steps)
     for column, axis in enumerate(schedule.job.machine.axes):
         position = _worse(jumps[0][column], between[column])
-        findings = [_upper(position, "position jump", ARRIVAL_TOLERANCE, axis.unit, axis)]
+        findings = [_upper(position, "position jump", _nearness(axis), axis.unit, axis)]
         names = ("velocity jump", "acceleration jump")
         for order, name in enumerate(names[: 2 if np.isfinite(axis.limits.jerk) else 1], start=1):
             # Limits of this derivative and of the next, which rounding of a time multiplies.
@@ -277,7 +291,7 @@ def _arrival(schedule: Schedule) -> Iterator[list[Finding]]:
         step = steps[max(index - 1, 0)]
         time = step.end if index else 0.0
         worst = _Worst(float(missed[index, column]), time, step.name)
-        yield [_upper(worst, "arrival", ARRIVAL_TOLERANCE, axis.unit, axis)]
+        yield [_upper(worst, "arrival", _nearness(axis), axis.unit, axis)]
 
 
 def _paths(schedule: Schedule) -> Iterator[Finding]:
@@ -285,12 +299,13 @@ def _paths(schedule: Schedule) -> Iterator[Finding]:
     missed: list[_Worst] = []
     speeds: list[tuple[float, _Worst, float]] = []
     linear = schedule.job.machine.linear
+    near = max(map(_nearness, schedule.job.machine.axes))
     for index, asked in enumerate(schedule.job.cycle.steps):
         if not isinstance(asked, Line | PathStep):
             continue
         step = schedule.steps[index]
         points, bounds = _points(schedule, index, asked)
-        distance, leads_to = _passes(step.trajectory, points)
+        distance, leads_to = _passes(step.trajectory, points, near)
         missed.append(_Worst(distance, step.end, step.name))
         bound = bounds[np.minimum(leads_to, len(points) - 1)]
         speed = step.trajectory.speeds(linear)
@@ -301,7 +316,7 @@ def _paths(schedule: Schedule) -> Iterator[Finding]:
             found = _Worst(float(speed.value[worst]), time, step.name)
             speeds.append((float(share[worst]), found, float(bound[worst])))
     if missed:
-        yield _upper(_worse(*missed), "waypoints", ARRIVAL_TOLERANCE, "mm or deg")
+        yield _upper(_worse(*missed), "waypoints", near, "mm or deg")
     if speeds:
         _, found, limit = max(speeds, key=lambda speed: speed[0])
         yield _upper(found, "speed", limit, "mm/s")
@@ -317,7 +332,7 @@ def _points(schedule: Schedule, index: int, asked: Line | PathStep) -> tuple[Arr
     return points, np.minimum(own, bound)
 
 
-def _passes(trajectory: Trajectory, points: Array) -> tuple[float, Array]:
+def _passes(trajectory: Trajectory, points: Array, near: float) -> tuple[float, Array]:
     """Follow a motion past points, in order, that it must reach at ends of its pieces.
 
     Returns
@@ -333,14 +348,14 @@ def _passes(trajectory: Trajectory, points: Array) -> tuple[float, Array]:
     for index, end in enumerate(ends):
         while reached < len(points):
             away = float(np.abs(end - points[reached]).max())
-            if away > ARRIVAL_TOLERANCE:
+            if away > near:
                 break
             reached, distance = reached + 1, max(distance, away)
         if index < leads_to.size:
             leads_to[index] = reached
     if reached < len(points):
         away = np.abs(ends - points[reached]).max(axis=-1).min()
-        distance = max(distance, float(away), 2 * ARRIVAL_TOLERANCE)
+        distance = max(distance, float(away), 2 * near)
     return distance, leads_to
 
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import os
 import shutil
+import signal
 import sys
 import time
 from pathlib import Path
@@ -28,6 +29,8 @@ if TYPE_CHECKING:
 
 REQUIREMENT_NOT_MET = 1
 INTERRUPTED = 130
+OUTPUT_LOST = 141
+"""As a shell counts a process that an interrupt, or a closed pipe, has ended."""
 
 NARROW, WIDE = 60, 160
 """Fewest and most columns that tables are fitted to."""
@@ -49,8 +52,15 @@ class _Commands(click.Group):
             click.echo(_lines(error), err=True, color=_color())
             ctx.exit(error.exit_status)
         except KeyboardInterrupt:
-            click.echo("interrupted; no file was changed", err=True)
+            click.echo("interrupted; no file is half-written", err=True)
             ctx.exit(INTERRUPTED)
+        except OSError as error:
+            # Whoever reads the output has closed it, or it has no room: keep Python from trying
+            # to write the rest at its end.
+            sys.stdout = open(os.devnull, "w", encoding="utf-8")  # noqa: PTH123, SIM115 - till the end
+            if not isinstance(error, BrokenPipeError):
+                click.echo(f"error: output cannot be written: {error.strerror}", err=True)
+            ctx.exit(OUTPUT_LOST)
 
 
 class _Measure(click.ParamType[float]):
@@ -98,7 +108,7 @@ class _Progress:
 @click.group(cls=_Commands, context_settings={"help_option_names": ["-h", "--help"]})
 @click.version_option(__version__, prog_name="profileplan")
 def cli() -> None:
-    r"""Plan the motion of Cartesian machines.
+    """Plan the motion of Cartesian machines.
 
     From a machine's limits and a cycle to setpoint tables that a drive can play.
 
@@ -112,7 +122,7 @@ def cli() -> None:
       0  fine
       1  planned or checked, and a requirement is not met
       2  bad input, or a job that cannot be planned
-    """
+    """  # noqa: D301 - click's mark for lines to keep as they are
 
 
 _source = click.argument("source", type=click.Path(path_type=Path))
@@ -155,7 +165,7 @@ def plan(  # noqa: PLR0913 - one parameter an option
     as_json: bool,
     quiet: bool,
 ) -> None:
-    r"""Plan a cycle and tell how long it takes and what limits it.
+    """Plan a cycle and tell how long it takes and what limits it.
 
     SOURCE is a cycle file (.toml), or a waypoint file (.csv) with -m.
 
@@ -167,16 +177,18 @@ def plan(  # noqa: PLR0913 - one parameter an option
 
     The table has a row for each step: when it begins, how long it takes, what limits it (the
     strongest first), and how much of each limit it uses in percent, with the axis that uses most.
-    """
+    """  # noqa: D301 - click's mark for lines to keep as they are
     planned = _planned(_job(source, machine, speed, tolerance), talk=not (as_json or quiet))
     from profileplan import setpoints, summary  # noqa: PLC0415
 
     values = summary.summarise(planned)
     if output is not None:
         _make_folder(output)
+        _keep_sources(planned.job, output / "setpoints.csv", output / "summary.json")
         with _Progress("writing setpoints", wanted=not (as_json or quiet)) as progress:
             setpoints.write_csv(planned, output / "setpoints.csv", progress=progress)
         summary.write_json(values, output / "summary.json")
+        _tell_unplayed(planned, None)
     if as_json:
         click.echo(summary.text(values), nl=False)
     elif quiet:
@@ -204,19 +216,23 @@ def check(
     as_json: bool,
     quiet: bool,
 ) -> None:
-    r"""Judge every requirement, with value, limit and margin.
+    """Judge every requirement, with value, limit and margin.
 
     SOURCE is a cycle file (.toml), a waypoint file (.csv) with -m, or a setpoint table (.csv with
-    a column t_s) with -m: its travel, and the differences of its positions against the limits.
+    a column t_s) with -m: of that the positions are judged, by travel and by their differences
+    against the limits.
 
     \b
     Examples:
       profileplan check samples/kiln-loader/cycle.toml
       profileplan check out/setpoints.csv -m samples/kiln-loader/machine.toml
-    """
+    """  # noqa: D301 - click's mark for lines to keep as they are
     from profileplan import setpoints  # noqa: PLC0415
 
     if source.suffix.lower() == ".csv" and setpoints.is_table(source):
+        if speed is not None or tolerance is not None:
+            message = "--speed and --tolerance are for waypoints; this is a setpoint table"
+            raise InputError([Fault("", message, source)])
         findings = _table_findings(source, machine)
     else:
         job = _job(source, machine, speed, tolerance)
@@ -269,7 +285,7 @@ def export(  # noqa: PLR0913 - one parameter an option
     as_json: bool,
     quiet: bool,
 ) -> None:
-    r"""Write the setpoint table alone.
+    """Write the setpoint table alone.
 
     \b
     Examples:
@@ -277,17 +293,19 @@ def export(  # noqa: PLR0913 - one parameter an option
       profileplan export cycle.toml -o setpoints.csv --period "250 us" --columns pos,vel
 
     The last row is the first tick at or after the end of the motion, at rest and on target.
-    """
+    """  # noqa: D301 - click's mark for lines to keep as they are
     planned = _planned(_job(source, machine, speed, tolerance), talk=not (as_json or quiet))
     from profileplan import setpoints, summary  # noqa: PLC0415
 
     names = [name.strip() for name in columns.split(",") if name.strip()]
+    _keep_sources(planned.job, output)
     with _Progress("writing setpoints", wanted=not (as_json or quiet)) as progress:
         rows = setpoints.write_csv(planned, output, period=period, columns=names, progress=progress)
+    _tell_unplayed(planned, period)
     if as_json:
         click.echo(summary.text({"file": str(output), "rows": rows}), nl=False)
     else:
-        click.echo(f"{output}: {rows} rows")
+        click.echo(f"{output}: {rows} rows; {_verdict(planned)}", color=_color())
         if not quiet:
             click.echo(summary.CAUTION, err=True)
     _finish(all(finding.ok for finding in planned.check()))
@@ -295,6 +313,8 @@ def export(  # noqa: PLR0913 - one parameter an option
 
 def main() -> NoReturn:
     """Run the command line and exit with its status."""
+    # A request to end is an interrupt: what is half-written is taken away.
+    signal.signal(signal.SIGTERM, signal.default_int_handler)
     cli.main(prog_name="profileplan")
     raise SystemExit
 
@@ -350,6 +370,32 @@ def _table_findings(source: Path, machine: Path | None) -> Sequence[Finding]:
         raise InputError([Fault("", message, source)])
     limits = read_machine(machine)
     return checks.check_table(setpoints.read_csv(source, limits), limits)
+
+
+def _keep_sources(job: Job, *outputs: Path) -> None:
+    """Refuse to write over what the job was read from."""
+    from profileplan.inputs import PathStep  # noqa: PLC0415
+
+    files = [job.cycle.source, job.machine.source]
+    files += [step.file for step in job.cycle.steps if isinstance(step, PathStep)]
+    sources = {file.resolve() for file in files if file is not None}
+    for output in outputs:
+        if output.resolve() in sources:
+            message = "the job is read from this file; choose another to write to"
+            raise InputError([Fault("", message, output)])
+
+
+def _tell_unplayed(planned: Plan, period: float | None) -> None:
+    """Say on stderr which signals change back before a row shows them."""
+    from profileplan import setpoints  # noqa: PLC0415
+
+    for event in setpoints.unplayed(planned, period):
+        state = "on" if event.state else "off"
+        click.echo(
+            f"note: {event.signal} goes {state} at {event.time:.6f} s and changes again before "
+            "the next row: the table does not show it",
+            err=True,
+        )
 
 
 def _make_folder(folder: Path) -> None:
@@ -418,19 +464,26 @@ def _verdict(planned: Plan) -> str:
     apart = abs(planned.target - planned.duration)
     if planned.meets_target:
         return f"{taken}; target {planned.target:g} s {_good('met')}, {apart:.3f} s to spare"
-    return f"{taken}; target {planned.target:g} s {_bad('MISSED')} by {apart:.3f} s"
+    short = f"{apart:.3f}" if apart >= 0.0005 else f"{apart:.1g}"
+    return f"{taken}; target {planned.target:.9g} s {_bad('MISSED')} by {short} s"
 
 
 def _requirements(findings: Sequence[Finding]) -> str:
     failed = sum(not finding.ok for finding in findings)
     if failed:
         return f"{_bad('NOT MET')}: {failed} of {len(findings)} requirements"
+    open_ones = sum(not finding.decided for finding in findings)
+    if open_ones:
+        rest = len(findings) - open_ones
+        return (
+            f"{rest} requirements {_good('met')}; {open_ones} cannot be told from so few decimals"
+        )
     return f"all {len(findings)} requirements {_good('met')}"
 
 
 def _levers(planned: Plan) -> str:
     """Return what would shorten the cycle, and the steps by the time that they take."""
-    heads = ["what limits", "10 % more saves s", "steps that it limits"]
+    heads = ["what limits", "saved by 10 % more, s", "steps that it limits"]
     rows = [
         [_name(lever.limit), f"{lever.limit.saves:.3f}", "; ".join(lever.steps)]
         for lever in planned.levers
@@ -438,8 +491,10 @@ def _levers(planned: Plan) -> str:
     ]
     longest = sorted(planned.steps, key=lambda step: -step.duration)[:5]
     asked = sum(step.duration for step in planned.steps if _asks_for_time(step))
-    table = _table(heads, rows, text=(heads[0], heads[2]))
-    lines = ["", "What would shorten the cycle:", "", table]
+    lines = []
+    if rows:
+        table = _table(heads, rows, text=(heads[0], heads[2]))
+        lines = ["", "What would shorten the cycle:", "", table]
     if asked:
         lines.append(f"\nWaits and times asked for take {asked:.3f} s.")
     names = "; ".join(f"{step.name} {step.duration:.3f} s" for step in longest if step.duration)
@@ -461,16 +516,23 @@ def _findings_table(findings: Sequence[Finding]) -> str:
         [
             _required(finding),
             _short(finding.value),
-            f"{finding.limit:.6g}",
+            _short(finding.limit),
             _short(finding.margin, 3),
             finding.unit,
             "" if finding.use is None else f"{100 * finding.use:.1f}",
             _at(finding),
-            _good("yes") if finding.ok else _bad("NO"),
+            _met(finding),
         ]
         for finding in findings
     ]
     return _table(heads, rows, text=("requirement", "unit", "where", "met"))
+
+
+def _met(finding: Finding) -> str:
+    """Return whether a requirement is met; "?" where the table is too coarse to tell."""
+    if not finding.decided:
+        return "?"
+    return _good("yes") if finding.ok else _bad("NO")
 
 
 def _required(finding: Finding) -> str:

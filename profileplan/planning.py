@@ -13,6 +13,7 @@ To add a kind of step, write a function that turns its ``_Task`` into a ``_Motio
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 from functools import cached_property
 from pathlib import Path
@@ -268,7 +269,8 @@ class _Task:
         if time is None:
             return least
         if time < least * (1 - DURATION_TOLERANCE):
-            message = f"{time:g} s asked for; the least time within the limits is {least:.6g} s"
+            shown = math.ceil(least * 1e6) / 1e6
+            message = f"{time:g} s asked for; the least time within the limits is {shown:.6f} s"
             raise self.error("time", message)
         return max(time, least)
 
@@ -453,7 +455,7 @@ def _events(job: Job, steps: Sequence[PlannedStep]) -> tuple[SignalEvent, ...]:
         time = step.start - asked.lead
         place = f"{job.cycle.source or 'cycle'}: steps[{index + 1}].lead: {asked.lead:g} s"
         if time < -EVENT_ROUNDING or time > duration + EVENT_ROUNDING:
-            message = f"{place} makes it switch at {time:.6g} s; the cycle ends at {duration:.6g} s"
+            message = f"{place} puts it at {time:.6g} s; the cycle lasts from 0 to {duration:.6g} s"
             raise PlanError(message)
         for signal, state in asked.states.items():
             event = SignalEvent(min(max(time, 0.0), duration), signal, state)

@@ -13,6 +13,7 @@ import os
 import tempfile
 from contextlib import contextmanager
 from dataclasses import dataclass
+from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING, NamedTuple
 
@@ -21,7 +22,7 @@ import numpy as np
 from profileplan.errors import Fault, InputError
 from profileplan.inputs import SetpointSettings
 from profileplan.inputs.files import read_text
-from profileplan.inputs.rules import tidy
+from profileplan.inputs.rules import PERIOD, POSITION, tidy
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping, Sequence
@@ -29,11 +30,14 @@ if TYPE_CHECKING:
 
     from profileplan.inputs import Machine
     from profileplan.motion.polynomials import Array
-    from profileplan.motion.schedule import Schedule
+    from profileplan.motion.schedule import Schedule, SignalEvent
 
 TICK_TOLERANCE = 1e-6
 """Share of a period by which an end or a signal may miss a tick and still count as on it. Less
 than the nanosecond that periods are counted in, more than the rounding of times."""
+
+MOST_DECIMALS = 12
+"""Decimals of a position that are told apart: more are below the rounding of numbers."""
 
 ROWS_AT_A_TIME = 16384
 """Rows that are sampled and written together: more cost memory, fewer cost time."""
@@ -137,6 +141,17 @@ def sample(
     )
 
 
+def unplayed(schedule: Schedule, period: float | None = None) -> tuple[SignalEvent, ...]:
+    """Return the signal events that no row shows, for the signal changes again before the next."""
+    period = _period(schedule, period)
+    row = {id(event): np.ceil(event.time / period - TICK_TOLERANCE) for event in schedule.events}
+    lost = []
+    for name in schedule.signals:
+        events = [event for event in schedule.events if event.signal == name]
+        lost += [one for one, other in pairwise(events) if row[id(one)] == row[id(other)]]
+    return tuple(lost)
+
+
 def header(machine: Machine, columns: Sequence[str], signals: Sequence[str]) -> list[str]:
     """Return the names of a table's columns: time, the axes in file order, the signals."""
     names = ["t_s"]
@@ -209,17 +224,19 @@ def read_csv(file: Path, machine: Machine) -> SetpointTable:
         The file cannot be read, lacks a column, or has rows that are no numbers: all of them, with
         their lines.
     """
+    text = read_text(file)
+    end = text.find("\n") + 1 or len(text)
     try:
-        rows = list(csv.reader(io.StringIO(read_text(file), newline=""), strict=True))
+        names = [name.strip() for name in next(csv.reader([text[:end]], strict=True), [])]
     except csv.Error as error:
-        raise InputError([Fault("", f"is no valid CSV: {error}", file)]) from error
-    names = rows[0] if rows else []
-    faults = _header_faults(names, machine)
-    if not faults and len(rows) < 2:
-        faults = ["has no rows below its header"]
+        raise InputError([Fault("line 1", f"is no valid CSV: {error}", file)]) from error
+    if missing := _header_faults(names, machine):
+        raise InputError(Fault("line 1", fault, file) for fault in missing)
+    numbers = _parse(text[end:], len(names), file)
+    faults = _number_faults(names, numbers, machine)
     if faults:
-        raise InputError(Fault("line 1", fault, file) for fault in faults)
-    return _table(names, _parse(rows, file), machine, _decimals(names, rows[1], machine))
+        raise InputError(Fault(place, fault, file) for place, fault in faults)
+    return _table(names, numbers, machine)
 
 
 def is_table(file: Path) -> bool:
@@ -240,7 +257,16 @@ def replacing(file: Path) -> Iterator[TextIO]:
     InputError
         The file cannot be written.
     """
+    file = file.resolve()
+    mode = 0o666 & ~_umask()
     try:
+        if file.exists():
+            mode = file.stat().st_mode & 0o777
+            if not file.is_file():
+                # A device or a pipe holds nothing that could be half-written.
+                with file.open("w", encoding="utf-8", newline="") as stream:
+                    yield stream
+                return
         handle, name = tempfile.mkstemp(dir=file.parent, prefix=f".{file.name}.", suffix=".part")
     except OSError as error:
         raise _not_written(file, error) from error
@@ -248,7 +274,7 @@ def replacing(file: Path) -> Iterator[TextIO]:
     try:
         with os.fdopen(handle, "w", encoding="utf-8", newline="") as stream:
             yield stream
-        temporary.chmod(0o666 & ~_umask())
+        temporary.chmod(mode)
         temporary.replace(file)
     except OSError as error:
         raise _not_written(file, error) from error
@@ -342,36 +368,71 @@ def _header_faults(names: Sequence[str], machine: Machine) -> list[str]:
     return list(dict.fromkeys(faults))
 
 
-def _parse(rows: Sequence[Sequence[str]], file: Path) -> Array:
+def _parse(body: str, width: int, file: Path) -> Array:
     """Return the numbers below the header: (n, columns)."""
-    width = len(rows[0])
+    if not body.strip():
+        raise InputError([Fault("line 1", "has no rows below its header", file)])
+    try:
+        numbers = np.loadtxt(
+            io.StringIO(body), delimiter=",", ndmin=2, quotechar='"', comments=None
+        )
+    except ValueError:
+        numbers = np.empty((0, 0))
+    if numbers.shape[1] == width:
+        return numbers
+    # Only a faulty table is looked at row by row.
     faults = []
-    numbers = []
-    for line, row in enumerate(rows[1:], start=2):
-        fault = f"{len(row)} cells; the header has {width}" if len(row) != width else None
-        values: list[float] = []
-        for cell in row if fault is None else ():
-            try:
-                values.append(float(cell))
-            except ValueError:
-                fault = f'"{cell}" is not a number'
-        if fault is None and not np.all(np.isfinite(values)):
-            fault = "a number is not finite"
-        if fault is not None:
+    for line, row in enumerate(body.splitlines(), start=2):
+        if row.strip() and (fault := _row_fault(row, width)):
             faults.append(Fault(f"line {line}", fault, file))
-        numbers.append(values)
-    if faults:
-        raise InputError(tidy(faults))
-    return np.array(numbers)
+    raise InputError(tidy(faults or [Fault("", "is no table of numbers", file)]))
 
 
-def _decimals(names: Sequence[str], row: Sequence[str], machine: Machine) -> int:
-    """Return how many decimals the positions of a table have, at least, by its first row."""
-    cells = [row[names.index(axis.column("pos"))] for axis in machine.axes]
-    return min(len(cell.partition(".")[2]) for cell in cells)
+def _row_fault(row: str, width: int) -> str | None:
+    """Return what is wrong with a row of a table."""
+    cells = next(csv.reader([row]), [])
+    if len(cells) != width:
+        return f"{len(cells)} cells; the header has {width}"
+    for cell in cells:
+        try:
+            float(cell)
+        except ValueError:
+            return f'"{cell}" is not a number'
+    return None
 
 
-def _table(names: Sequence[str], numbers: Array, machine: Machine, decimals: int) -> SetpointTable:
+def _number_faults(names: Sequence[str], numbers: Array, machine: Machine) -> list[tuple[str, str]]:
+    """Return places and faults of numbers that no motion can have."""
+    row = np.argwhere(~np.isfinite(numbers))
+    if row.size:
+        return [(f"line {row[0, 0] + 2}", f'column "{names[row[0, 1]]}" is not a finite number')]
+    for axis in machine.axes:
+        position = numbers[:, names.index(axis.column("pos"))]
+        far = np.flatnonzero(np.abs(position) > POSITION.high)
+        if far.size:
+            value = position[far[0]]
+            message = f"{axis.column('pos')} {value:g}; allowed: {POSITION.describe(axis.unit)}"
+            return [(f"line {far[0] + 2}", message)]
+    steps = np.diff(numbers[:, names.index("t_s")])
+    backward = np.flatnonzero(steps <= 0)
+    if backward.size:
+        return [(f"line {backward[0] + 3}", "t_s does not rise from the row before")]
+    # To the picosecond: differences of times are rounded.
+    if steps.size and not PERIOD.holds(period := round(float(np.median(steps)), 12)):
+        return [("t_s", f"rows {period:g} s apart; allowed: {PERIOD.describe('s')}")]
+    return []
+
+
+def _last_digit(position: Array) -> float:
+    """Return what the last decimal of positions stands for: that of the finest of them."""
+    for decimals in range(MOST_DECIMALS):
+        scaled = position * 10.0**decimals
+        if np.all(np.abs(scaled - np.rint(scaled)) <= 2 * np.spacing(np.abs(scaled))):
+            return 10.0**-decimals
+    return 10.0**-MOST_DECIMALS
+
+
+def _table(names: Sequence[str], numbers: Array, machine: Machine) -> SetpointTable:
     """Return the table that named columns of numbers make."""
     found: dict[str, Array] = {}
     taken = {"t_s"}
@@ -390,5 +451,5 @@ def _table(names: Sequence[str], numbers: Array, machine: Machine, decimals: int
         signals={
             name: numbers[:, column] for column, name in enumerate(names) if name not in taken
         },
-        position_step=10.0**-decimals,
+        position_step=_last_digit(found["pos"]),
     )

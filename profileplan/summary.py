@@ -70,6 +70,7 @@ def finding_values(finding: checks.Finding) -> dict[str, object]:
         "use": finding.use,
         "ok": finding.ok,
         "rounding": finding.rounding,
+        "decided": finding.decided,
         "time_s": finding.time,
         "step": finding.step,
     }

@@ -158,7 +158,7 @@ def test_a_gap_between_steps_is_a_jump() -> None:
 def test_a_step_that_ends_with_a_velocity_is_a_jump() -> None:
     """Steps begin and end at rest."""
     motion = GOOD.steps[0].trajectory
-    cut = replace(motion, durations=motion.durations[:-1], coefficients=motion.coefficients[:-1])
+    cut = replace(motion, durations=motion.durations[:1], coefficients=motion.coefficients[:1])
     assert {("velocity jump", "x"), ("acceleration jump", "x")} <= failed(spoiled(0, cut))
 
 

@@ -254,3 +254,71 @@ def test_an_interrupt_leaves_nothing_half_written(
     assert result.exit_code == 130
     assert file.read_text() == "old"
     assert [file] == list(tmp_path.iterdir())
+
+
+@pytest.mark.parametrize("name", ["bead.csv", "machine.toml"])
+def test_what_a_job_is_read_from_is_not_written_over(tmp_path: Path, name: str) -> None:
+    """A slip of the hand must not cost the waypoints."""
+    for file in (BEAD, PORTAL):
+        (tmp_path / Path(file).name).write_bytes(Path(file).read_bytes())
+    before = (tmp_path / name).read_bytes()
+    words = [str(tmp_path / "bead.csv"), "-m", str(tmp_path / "machine.toml")]
+    result = run("export", *words, "-o", str(tmp_path / name))
+    assert result.exit_code == 2
+    assert "the job is read from this file" in result.stderr
+    assert (tmp_path / name).read_bytes() == before
+
+
+def test_the_least_time_told_is_accepted(tmp_path: Path) -> None:
+    """It is rounded up, so that it can be typed back."""
+    cycle = tmp_path / "cycle.toml"
+    text = f'machine = "{PORTAL}"\n[start]\nx = 0\ny = 0\nz = 80\n[[steps]]\nmove = {{ x = 700 }}\n'
+    cycle.write_text(text + "time = 0.2\n")
+    told = run("plan", str(cycle)).stderr.split("limits is ")[1].split(" s")[0]
+    cycle.write_text(text + f"time = {told}\n")
+    assert run("plan", str(cycle)).exit_code == 0
+
+
+def test_export_of_a_missed_target_says_why_it_ends_with_1(tmp_path: Path) -> None:
+    """An exit status without a reason helps nobody."""
+    result = run("export", TURNER, "-o", str(tmp_path / "table.csv"), "-q")
+    assert result.exit_code == 1
+    assert "MISSED" in result.stdout
+
+
+def test_a_table_too_coarse_to_judge_is_said_to_be(tmp_path: Path) -> None:
+    """Two decimals at 1 ms are a jerk of 40 million mm/s³ by rounding alone."""
+    table = tmp_path / "table.csv"
+    rows = "".join(f"{0.001 * row:.3f},{100 + 0.01 * row:.2f},5,5\n" for row in range(3))
+    table.write_text("t_s,x_pos_mm,y_pos_mm,z_pos_mm\n" + rows)
+    result = run("check", str(table), "-m", PORTAL)
+    assert "cannot be told from so few decimals" in result.stdout
+    found = json.loads(run("check", str(table), "-m", PORTAL, "--json").stdout)["checks"]
+    assert [f["decided"] for f in found if f["check"] == "jerk" and f["axis"] == "x"] == [False]
+
+
+def test_a_table_takes_no_speed(tmp_path: Path) -> None:
+    """An option that would be ignored is refused."""
+    run("export", BEAD, "-m", PORTAL, "-o", str(tmp_path / "t.csv"))
+    result = run("check", str(tmp_path / "t.csv"), "-m", PORTAL, "--speed", "5")
+    assert result.exit_code == 2
+    assert "for waypoints" in result.stderr
+
+
+def test_help_keeps_its_lines() -> None:
+    """Examples are copied line by line."""
+    lines = run("--help").stdout.splitlines()
+    assert "    profileplan plan samples/kiln-loader/cycle.toml -o out" in lines
+    assert not any("\b" in line or "\\b" in line for line in lines)
+
+
+@pytest.mark.parametrize("target", ["closed", "/dev/full"])
+def test_output_that_is_lost_is_no_missed_requirement(target: str) -> None:
+    """A closed pipe or a full disk is told apart from exit status 1; no traceback."""
+    command = f"{sys.executable} -m profileplan plan {LOADER}"
+    tail = "| true; exit ${PIPESTATUS[0]}" if target == "closed" else f"> {target}"
+    result = subprocess.run(
+        ["/bin/bash", "-c", f"{command} {tail}"], capture_output=True, text=True, check=False
+    )
+    assert result.returncode in {0, 141} if target == "closed" else result.returncode == 141
+    assert "Traceback" not in result.stderr

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 import pytest
@@ -195,7 +195,10 @@ def test_signals_switch_by_their_lead() -> None:
     ("steps", "words"),
     [
         ((pp.Signal({"v": True}, lead=0.1), pp.Wait(1.0)), r"steps\[1\]\.lead: 0\.1 s.*-0\.1 s"),
-        ((pp.Wait(1.0), pp.Signal({"v": True}, lead=-0.1)), r"steps\[2\].*1\.1 s; the cycle ends"),
+        (
+            (pp.Wait(1.0), pp.Signal({"v": True}, lead=-0.1)),
+            r"steps\[2\].*1\.1 s; the cycle lasts from 0 to 1 s",
+        ),
         (
             (
                 pp.Wait(1.0),
@@ -315,3 +318,48 @@ def test_a_rate_is_never_beyond_its_limit_between_rows() -> None:
         times = np.linspace(0.0, step.duration, 5001)
         sampled = np.abs(step.trajectory.at(times, 1)).max(axis=0)
         assert_array_less(sampled, step.trajectory.peaks.velocity.value * (1 + 1e-12) + 1e-12)
+
+
+@pytest.mark.parametrize("arrival", ["together", "earliest"])
+def test_short_phases_late_in_long_moves_keep_their_limits(
+    arrival: Literal["together", "earliest"],
+) -> None:
+    """A phase of 50 µs after 2000 s: differences of times would have lost its last digits."""
+    axes = (
+        pp.Axis("x", travel=(0.0, 8000.0), velocity=1.0, acceleration=50.0, jerk=1e6),
+        pp.Axis("y", travel=(0.0, 8000.0), velocity=300.0, acceleration=1000.0, jerk=2e4),
+    )
+    machine = pp.Machine(name="slow", axes=axes)
+    for way in (2000.0, 1777.3, 333.21):
+        steps = (pp.Move({"x": way, "y": 3.7}, arrival=arrival),)
+        plan = pp.plan(machine, pp.Cycle(steps=steps, start={"x": 0.0, "y": 0.0}))
+        assert [f for f in plan.check() if not f.ok] == []
+
+
+@pytest.mark.parametrize("law", LAW_NAMES)
+@pytest.mark.parametrize("travel", [1e6, 1e7])
+def test_long_travels_arrive(law: LawName, travel: float) -> None:
+    """Up to the longest travel that is taken, an end is met as finely as numbers are."""
+    axis = pp.Axis("x", travel=(-travel, travel), velocity=3000.0, acceleration=9000.0)
+    machine = pp.Machine(name="long", axes=(axis,))
+    random = np.random.default_rng(3)
+    for _ in range(20):
+        steps = tuple(pp.Move({"x": float(random.uniform(-travel, travel))}, law=law) for _ in "ab")
+        plan = pp.plan(machine, pp.Cycle(steps=steps, start={"x": 0.0}))
+        assert [f for f in plan.check() if not f.ok] == []
+
+
+def test_ways_smaller_than_any_machines_are_none() -> None:
+    """A way of 1e-300 mm is a slip of arithmetic, no motion."""
+    plan = pp.plan(loader(), cycle(pp.Line({"x": 100.0 + 1e-13, "c": 1e-300}), pp.Wait(0.1)))
+    assert plan.steps[0].duration == 0.0
+
+
+@pytest.mark.parametrize("wrong", [np.nan, 0.0, -1.0])
+def test_laws_refuse_limits_that_are_none(wrong: float) -> None:
+    """A limit is above 0; a distance is a number."""
+    for law in pp.LAWS.values():
+        with pytest.raises(ValueError, match="limits above 0"):
+            law.solve(1.0, pp.Limits(wrong, 1.0, 1.0, 1.0))
+        with pytest.raises(ValueError, match="finite"):
+            law.solve(np.nan, pp.Limits(1.0, 1.0, 1.0, 1.0))

@@ -29,7 +29,7 @@ QUINTIC_VELOCITY = [0.0, 0.0, 30.0, -60.0, 30.0]
 EXAMPLES = st.lists(
     st.lists(
         st.one_of(
-            st.floats(-1, 1),
+            st.floats(-1, 1).map(lambda number: round(number, 12)),
             st.integers(-3, 3).map(float),
             st.floats(-18, 0).map(lambda exponent: 10.0**exponent),
         ),

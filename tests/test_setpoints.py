@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import math
+import os
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -228,9 +229,13 @@ GOOD = "t_s,x_pos_mm,c_pos_deg\r\n0,0,0\r\n0.001,0,0\r\n"
         ("t_s,x_pos_mm,c_pos_deg,t_s\n0,0,0,0\n", 'column "t_s" stands twice'),
         (GOOD + "0.002,0\n", "line 4: 2 cells; the header has 3"),
         (GOOD + "0.002,zero,0\n", 'line 4: "zero" is not a number'),
-        (GOOD + "0.002,nan,0\n", "line 4: a number is not finite"),
+        (GOOD + "0.002,nan,0\n", 'line 4: column "x_pos_mm" is not a finite number'),
+        (GOOD + "0.002,1e306,0\n", "line 4: x_pos_mm 1e+306; allowed: -1e+07 to 1e+07 mm"),
+        (GOOD + "0.001,0,0\n", "line 4: t_s does not rise"),
+        ("t_s,x_pos_mm,c_pos_deg\n0.002,0,0\n0.001,9,0\n", "line 3: t_s does not rise"),
+        ("t_s,x_pos_mm,c_pos_deg\n0,0,0\n5e-324,9,0\n", "rows 4.94066e-324 s apart"),
         (GOOD + "x,0,0\n" * 50, "and 30 more"),
-        ('t_s,x_pos_mm,c_pos_deg\n"0,0,0\n', "is no valid CSV"),
+        ('t_s,"x_pos_mm,c_pos_deg\n0,0,0\n', "is no valid CSV"),
     ],
 )
 def test_faulty_tables_are_refused_with_line_and_reason(
@@ -264,3 +269,53 @@ def test_names_with_commas_and_quotes_are_quoted(tmp_path: Path) -> None:
     pp.write_csv(plan, file)
     assert rows_of(file)[0][-1] == name
     assert list(pp.read_csv(file, MACHINE).signals) == [name]
+
+
+def test_spaces_in_a_header_and_blank_lines_are_no_fault(tmp_path: Path) -> None:
+    """Other programs write them."""
+    file = tmp_path / "table.csv"
+    file.write_text("t_s, x_pos_mm, c_pos_deg\n0,1.5,0\n\n0.001,1.25,0\n\n")
+    assert_array_equal(pp.read_csv(file, MACHINE).position[:, 0], [1.5, 1.25])
+
+
+def test_the_last_decimal_is_that_of_the_finest_position(tmp_path: Path) -> None:
+    """A first row of whole numbers says nothing of the others."""
+    file = tmp_path / "table.csv"
+    file.write_text("t_s,x_pos_mm,c_pos_deg\n0,0,0\n0.001,1.25e-3,0\n0.002,0.5,0\n")
+    assert_allclose(pp.read_csv(file, MACHINE).position_step, 1e-5)
+
+
+def test_a_signal_that_no_row_shows_is_named() -> None:
+    """A pulse of 0.3 ms is not in a table of 1 ms."""
+    on, off = pp.Signal({"puff": True}), pp.Signal({"puff": False})
+    steps = (pp.Wait(0.0005), on, pp.Wait(0.0003), off, pp.Wait(0.1))
+    plan = pp.plan(MACHINE, pp.Cycle(steps=steps, start={"x": 0.0, "c": 0.0}))
+    assert [event.state for event in setpoints.unplayed(plan, 0.001)] == [True]
+    assert setpoints.unplayed(plan, 0.0001) == ()
+
+
+def test_a_link_stays_a_link_and_a_mode_stays(tmp_path: Path) -> None:
+    """Writing a table changes the file's content, not what it is."""
+    target, link = tmp_path / "target.csv", tmp_path / "link.csv"
+    target.write_text("old")
+    target.chmod(0o600)
+    link.symlink_to(target)
+    pp.write_csv(PLAN, link)
+    assert link.is_symlink()
+    assert target.stat().st_mode & 0o777 == 0o600
+    assert target.read_text() != "old"
+
+
+def test_a_pipe_is_written_to_as_it_is(tmp_path: Path) -> None:
+    """A device or a pipe is not replaced by a file."""
+    pipe = tmp_path / "pipe"
+    os.mkfifo(pipe)
+    reader = os.open(pipe, os.O_RDONLY | os.O_NONBLOCK)
+    try:
+        steps = (pp.Wait(0.002),)
+        plan = pp.plan(MACHINE, pp.Cycle(steps=steps, start={"x": 0.0, "c": 0.0}))
+        pp.write_csv(plan, pipe)
+        assert os.read(reader, 3) == b"t_s"
+    finally:
+        os.close(reader)
+    assert not pipe.is_file()

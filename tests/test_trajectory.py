@@ -362,12 +362,17 @@ def test_a_stack_moves_every_axis_as_its_part_does(
 
 
 def test_a_stack_cuts_every_axis_at_every_break() -> None:
-    """Each piece is one polynomial on every axis; breaks that differ by rounding are one."""
+    """Each piece is one polynomial on every axis, also where breaks differ by rounding."""
     short, late = travel(duration=1.0), travel(duration=2.0)
     nearly = Trajectory(("z",), late.durations * (1 + 2e-16), late.coefficients)
     stack = Trajectory.stack([short, renamed(late, "y"), nearly])
-    assert_allclose(stack.breaks, [0.0, 0.5, 1.0, 2.0], rtol=1e-15)
+    nanoseconds = np.unique(np.rint(stack.breaks * 1e9))
+    assert_array_equal(nanoseconds, [0.0, 0.5e9, 1e9, 2e9])
     assert_allclose(stack.last, [8.0, 8.0, 8.0], rtol=1e-14)
+    assert_allclose(stack.jumps(0).value, 0, atol=1e-14)
+    assert_allclose(stack.jumps(1).value, 0, atol=1e-13)
+    for peak, expected in zip(stack.peaks, ([16, 8, 8], [32, 8, 8], [32, 8, 8], 0), strict=True):
+        assert_allclose(peak.value, expected, rtol=1e-14)
 
 
 def test_a_stack_of_stays_that_take_no_time_is_one() -> None:

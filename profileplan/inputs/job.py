@@ -36,6 +36,10 @@ if TYPE_CHECKING:
     from profileplan.inputs.rules import Positions
 
 
+NO_WAY = 1e-12
+"""Distance [mm or deg] below which an axis is there already."""
+
+
 @dataclass(frozen=True)
 class Job:
     """A cycle on a machine, each checked against the other.
@@ -78,7 +82,7 @@ class Job:
         result = [tuple(now[name] for name in names)]
         for step in self.cycle.steps:
             for stop in _stops(step):
-                now.update(stop)
+                _go(now, stop)
             result.append(tuple(now[name] for name in names))
         return tuple(result)
 
@@ -99,7 +103,7 @@ class Job:
         now = dict(zip(names, self.positions()[index], strict=True))
         result = []
         for stop in _stops(self.cycle.steps[index]):
-            now.update(stop)
+            _go(now, stop)
             result.append(tuple(now[name] for name in names))
         return tuple(result)
 
@@ -254,6 +258,13 @@ def _height_faults(machine: Machine, height: float) -> Iterator[Fault]:
             )
 
 
+def _go(now: dict[str, float], stop: Positions) -> None:
+    """Change positions to those that a stop names; a smaller way than any machine's is none."""
+    for name, position in stop.items():
+        if abs(position - now[name]) >= NO_WAY:
+            now[name] = position
+
+
 def _stops(step: Step) -> tuple[Positions, ...]:
     """Return the positions that a step names, in order."""
     match step:
@@ -287,7 +298,7 @@ def _moves(cycle: Cycle) -> bool:
         return True
     # the first position that differs from the start is a motion, whatever lies between
     return any(
-        position != cycle.start[name]
+        abs(position - cycle.start[name]) >= NO_WAY
         for step in cycle.steps
         for stop in _stops(step)
         for name, position in stop.items()

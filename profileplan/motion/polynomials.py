@@ -15,6 +15,9 @@ Array = npt.NDArray[np.float64]
 Flags = npt.NDArray[np.bool_]
 """An array of truth values."""
 
+Indices = npt.NDArray[np.intp]
+"""An array of whole numbers that count something."""
+
 ITERATION_LIMIT = 200
 """Steps of the bracketed root search; every third halves the bracket: 180 reach the last bit."""
 

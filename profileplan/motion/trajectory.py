@@ -7,8 +7,11 @@ are (n, d): pieces or times first, axes last. Units are those of the axes: mm or
 
 from __future__ import annotations
 
+from bisect import bisect_right
 from dataclasses import dataclass
+from fractions import Fraction
 from functools import cached_property
+from itertools import accumulate, pairwise
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
@@ -27,8 +30,8 @@ VELOCITY_FLOOR = 1e-10
 """Share of an axis's greatest speed below which it counts as standing, when its acceleration is
 called speeding up or slowing down: rounding decides the direction of a slower motion."""
 
-BREAK_TOLERANCE = 4 * np.finfo(np.float64).eps
-"""Distance, as a share of the end time, at which breaks of two axes count as one."""
+TIME_ROUNDING = 4 * np.finfo(np.float64).eps
+"""Rounding of a time, as a share of the duration."""
 
 
 class Peak(NamedTuple):
@@ -174,7 +177,7 @@ class Trajectory:
         """
         velocity = self._magnitude(1)
         # Durations are rounded as the time of their break is: so far off is the velocity there.
-        rounding = BREAK_TOLERANCE * self.duration * self._magnitude(2).value
+        rounding = TIME_ROUNDING * self.duration * self._magnitude(2).value
         floor = np.maximum(VELOCITY_FLOOR * velocity.value, rounding)
         acceleration, deceleration = self._speeding_and_slowing(floor)
         return Peaks(velocity, acceleration, deceleration, self._magnitude(3))
@@ -254,26 +257,30 @@ class Trajectory:
         """Return one trajectory of all axes of trajectories that are played at the same time.
 
         All begin together; one that ends before the others rests where it ended. Breaks are the
-        union of theirs, so every piece is one polynomial on every axis.
+        union of theirs, so every piece is one polynomial on every axis. Their differences are
+        taken from exact sums: a short phase late in a long motion would lose its last digits.
         """
         if len(parts) == 1:
             return parts[0]
-        breaks = np.unique(np.concatenate([part.breaks for part in parts]))
-        apart = np.diff(breaks) > BREAK_TOLERANCE * breaks[-1]
-        breaks = np.concatenate([[0.0], breaks[1:][apart]])
-        if breaks.size == 1:
-            breaks = np.zeros(2)
-        coefficients = np.concatenate([part._expanded(breaks) for part in parts], axis=-1)  # noqa: SLF001 - the same class
+        sums = [list(accumulate(map(Fraction, part.durations.tolist()))) for part in parts]
+        breaks = sorted({Fraction(0), *(time for own in sums for time in own)})
+        if len(breaks) == 1:
+            breaks *= 2
+        durations = np.array([float(after - before) for before, after in pairwise(breaks)])
+        coefficients = [
+            part._expanded(breaks[:-1], [Fraction(0), *own])  # noqa: SLF001 - the same class
+            for part, own in zip(parts, sums, strict=True)
+        ]
         axes = tuple(axis for part in parts for axis in part.axes)
-        return cls(axes, np.diff(breaks), coefficients)
+        return cls(axes, durations, np.concatenate(coefficients, axis=-1))
 
-    def _expanded(self, breaks: Array) -> Array:
-        """Return the coefficients about other breaks that include this trajectory's own."""
-        middles = 0.5 * (breaks[:-1] + breaks[1:])
-        pieces = np.searchsorted(self.breaks, middles, side="right") - 1
+    def _expanded(self, starts: Sequence[Fraction], own: Sequence[Fraction]) -> Array:
+        """Return the coefficients about other times, given the exact times of the own breaks."""
+        pieces = np.array([bisect_right(own, start) - 1 for start in starts])
         inside = pieces < self.durations.size
+        offsets = [float(start - own[piece]) for start, piece in zip(starts, pieces, strict=True)]
         pieces = np.minimum(pieces, self.durations.size - 1)
-        offset = np.where(inside, breaks[:-1] - self.breaks[pieces], 0.0)[:, np.newaxis]
+        offset = np.where(inside, offsets, 0.0)[:, np.newaxis]
         expanded = self.coefficients[pieces].copy()
         # Taylor shift by repeated synthetic division: Knuth, The Art of Computer Programming,
         # volume 2, section 4.6.4 (from memory).
