@@ -13,14 +13,16 @@ from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 
+from profileplan.geometry.corridor import tubes
 from profileplan.inputs import Line, PathStep, Payload, Signal, Wait
 
 if TYPE_CHECKING:
     from collections.abc import Iterator, Sequence
 
+    from profileplan.geometry.corridor import Followed
     from profileplan.inputs import Axis, Machine, Step
     from profileplan.motion.polynomials import Array
-    from profileplan.motion.schedule import Schedule
+    from profileplan.motion.schedule import Schedule, ScheduledStep
     from profileplan.motion.trajectory import Peak, Trajectory
     from profileplan.setpoints import SetpointTable
 
@@ -30,6 +32,9 @@ LIMIT_TOLERANCE = 1e-9
 ARRIVAL_TOLERANCE = 1e-9
 """Greatest distance [mm or deg] from a commanded position that counts as arrival, and greatest jump
 of a position between two pieces."""
+
+PATH_TOLERANCE = 1e-6
+"""Distance [mm or deg] by which a path's tolerance may be passed."""
 
 TIME_ROUNDING = 8 * np.finfo(np.float64).eps
 """Rounding of the time of a break, as a share of the duration of its step."""
@@ -44,7 +49,14 @@ QUANTITIES = {"velocity": 1, "acceleration": 2, "deceleration": 2, "jerk": 3}
 """The limits of an axis, in the order of its record, and the derivatives that they bound."""
 
 
-SHARED = (*QUANTITIES, "speed", "cycle time")
+SHARED = (
+    *QUANTITIES,
+    "speed",
+    "cycle time",
+    "tolerance",
+    "tolerance at corners",
+    "angle tolerance",
+)
 """Checks whose limits are used up in part."""
 
 
@@ -305,9 +317,16 @@ def _paths(schedule: Schedule) -> Iterator[Finding]:
             continue
         step = schedule.steps[index]
         points, bounds = _points(schedule, index, asked)
-        distance, leads_to = _passes(step.trajectory, points, near)
-        missed.append(_Worst(distance, step.end, step.name))
-        bound = bounds[np.minimum(leads_to, len(points) - 1)]
+        if isinstance(asked, PathStep) and asked.tolerance:
+            followed = _followed(schedule, index, asked)
+            yield from _tolerances(step, asked, followed)
+            # Where two segments meet a piece may count to either: the faster speed is allowed.
+            ahead = np.minimum(followed.region + 1, bounds.size - 1)
+            bound = np.maximum(bounds[followed.region], bounds[ahead])
+        else:
+            distance, leads_to = _passes(step.trajectory, points, near)
+            missed.append(_Worst(distance, step.end, step.name))
+            bound = bounds[np.minimum(leads_to, len(points) - 1)]
         speed = step.trajectory.speeds(linear)
         share = speed.value / bound
         worst = int(share.argmax())
@@ -320,6 +339,37 @@ def _paths(schedule: Schedule) -> Iterator[Finding]:
     if speeds:
         _, found, limit = max(speeds, key=lambda speed: speed[0])
         yield _upper(found, "speed", limit, "mm/s")
+
+
+def _followed(schedule: Schedule, index: int, asked: PathStep) -> Followed:
+    """Follow a path step's motion through the tubes round its segments."""
+    start = schedule.job.positions()[index]
+    points = np.array([start, *schedule.job.points(index)])
+    # A point that stands where the last one did makes a segment of no length: a ball.
+    corridor = tubes(
+        points,
+        tolerance=asked.tolerance,
+        linear=schedule.job.machine.linear,
+        angle_tolerance=asked.angle_tolerance,
+    )
+    return corridor.follow(schedule.steps[index].trajectory.hulls())
+
+
+def _tolerances(step: ScheduledStep, asked: PathStep, followed: Followed) -> Iterator[Finding]:
+    """Judge a path's tolerance both ways: motion to path, and the path's corners to the motion."""
+    out = int(followed.share.argmax())
+    ends = step.trajectory.breaks[1:] + step.start
+    away = _Worst(float(followed.share[out]) * asked.tolerance, float(ends[out]), step.name)
+    corners = _Worst(float(followed.gates.max(initial=0.0)) * asked.tolerance, step.end, step.name)
+    for worst, name in ((away, "tolerance"), (corners, "tolerance at corners")):
+        finding = _upper(worst, name, asked.tolerance, "mm")
+        yield replace(finding, ok=finding.margin >= -PATH_TOLERANCE)
+    turned = int(followed.failed.argmax())
+    over = float(followed.failed[turned])
+    if np.isfinite(over):
+        worst = _Worst(asked.angle_tolerance + over, float(ends[turned]), step.name)
+        finding = _upper(worst, "angle tolerance", asked.angle_tolerance, "deg")
+        yield replace(finding, ok=finding.margin >= -PATH_TOLERANCE)
 
 
 def _points(schedule: Schedule, index: int, asked: Line | PathStep) -> tuple[Array, Array]:

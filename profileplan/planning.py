@@ -38,6 +38,7 @@ from profileplan.inputs import (
 from profileplan.motion.laws import DURATION_TOLERANCE, LAWS, Limits
 from profileplan.motion.schedule import Schedule, ScheduledStep, SignalEvent
 from profileplan.motion.synchronisation import (
+    Way,
     line_durations,
     line_limits,
     lines,
@@ -51,6 +52,7 @@ if TYPE_CHECKING:
 
     from profileplan.inputs import LawName, Step
     from profileplan.motion.laws import Law
+    from profileplan.motion.paths import Run
     from profileplan.motion.polynomials import Array, Flags
 
 PROBE = 0.01
@@ -62,6 +64,9 @@ RAISE = 0.10
 SLOWER = 1e-9
 """Share by which a step must become longer before a lowered limit counts as one that holds it."""
 
+
+COUNTS = 2e-3
+"""Seconds that a bound must give for each share of it, as a share of the step, to be named."""
 
 EVENT_ROUNDING = 1e-9
 """Time [s] by which rounding may put a signal outside the cycle."""
@@ -87,6 +92,15 @@ class Limit:
     saves: float = 0.0
 
 
+@dataclass(frozen=True)
+class HeldStretch:
+    """What holds the motion back from one time of the cycle to another [s]."""
+
+    start: float
+    end: float
+    limit: Limit
+
+
 @dataclass(frozen=True, eq=False)
 class PlannedStep(ScheduledStep):
     """A step of a cycle as it is played, and why it takes as long as it does.
@@ -97,10 +111,13 @@ class PlannedStep(ScheduledStep):
         What holds the step back, the strongest first; empty for a step that takes no time.
     least_time : float, optional [s]
         A time that no motion under the step's limits can be shorter than; None: none is known.
+    stretches : tuple of HeldStretch
+        What holds the step back where, for a step through a corridor.
     """
 
     limited_by: tuple[Limit, ...] = ()
     least_time: float | None = None
+    stretches: tuple[HeldStretch, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -219,6 +236,7 @@ def plan(
     limits = Limits.of(job.machine)
     positions = job.positions()
     steps: list[PlannedStep] = []
+    notes: list[str] = []
     start = 0.0
     for index, step in enumerate(job.cycle.steps):
         ends = (np.array(positions[index]), np.array(positions[index + 1]))
@@ -234,12 +252,17 @@ def plan(
                 limited_by=motion.limited_by,
                 # Rounding may put the bound above a motion that reaches it.
                 least_time=None if least is None else min(least, duration),
+                stretches=tuple(
+                    replace(held, start=start + held.start, end=start + held.end)
+                    for held in motion.stretches
+                ),
             )
         )
         start = steps[-1].end
+        notes += [motion.note] if motion.note else []
         if progress:
             progress(index + 1, len(job.cycle.steps))
-    return Plan(job, tuple(steps), _events(job, steps), notes=_notes(job))
+    return Plan(job, tuple(steps), _events(job, steps), notes=(*_notes(job), *notes))
 
 
 @dataclass(frozen=True, eq=False)
@@ -282,6 +305,8 @@ class _Motion:
     trajectory: Trajectory
     limited_by: tuple[Limit, ...] = ()
     least_time: float | None = 0.0
+    stretches: tuple[HeldStretch, ...] = ()
+    note: str = ""
 
 
 def _job(source: str | Path | Job | Machine, cycle: Cycle | None) -> Job:
@@ -334,7 +359,7 @@ def _move(task: _Task, step: Move) -> _Motion:
 
 def _line(task: _Task, step: Line) -> _Motion:
     speed = np.array([np.inf if step.speed is None else step.speed])
-    return _straight(task, _Way(np.stack(task.ends), speed, np.zeros(2)), step)
+    return _straight(task, Way(np.stack(task.ends), speed, np.zeros(2)), step)
 
 
 def _path(task: _Task, step: PathStep) -> _Motion:
@@ -342,22 +367,77 @@ def _path(task: _Task, step: PathStep) -> _Motion:
     bound = np.inf if step.speed is None else step.speed
     own = [np.inf if point.speed is None else point.speed for point in step.points]
     waits = np.array([0.0, *(point.wait for point in step.points)])
-    motion = _straight(task, _Way(points, np.minimum(own, bound), waits), step)
-    if step.tolerance:
-        # Inside a tolerance faster motions than the straight lines exist; how fast is not known.
-        return replace(motion, least_time=None)
-    return motion
+    way = Way(points, np.minimum(own, bound), waits)
+    return _tolerant(task, way, step) if step.tolerance else _straight(task, way, step)
 
 
-class _Way(NamedTuple):
-    """Straight lines: points (m + 1, d) [mm], speed limits (m,) [mm/s], rests (m + 1,) [s]."""
+def _tolerant(task: _Task, way: Way, step: PathStep) -> _Motion:
+    """Plan a path inside its tolerance: from each rest to the next in least time."""
+    # scipy and the solver cost more start-up than all else: only such a path pays for them.
+    from profileplan.motion.paths import plan_run  # noqa: PLC0415
 
-    points: Array
-    speeds: Array
-    waits: Array
+    parts = list(way.parts())
+    runs = [
+        plan_run(
+            part,
+            task.limits,
+            linear=np.array(task.job.machine.linear),
+            tolerance=step.tolerance,
+            angle_tolerance=step.angle_tolerance,
+        )
+        for part in parts
+    ]
+    least, waits = sum(run.duration for run in runs), float(way.waits.sum())
+    duration = task.asked(least + waits, step.time)
+    slower = (duration - waits) / least if least else 1.0
+    rests = [Trajectory.rest(task.axes, part.points[0], float(part.waits[0])) for part in parts]
+    end = Trajectory.rest(task.axes, way.points[-1], float(way.waits[-1]))
+    motions = [run.trajectory(task.axes, duration=run.duration * slower) for run in runs]
+    chain = Trajectory.chain([m for pair in zip(rests, motions, strict=True) for m in pair] + [end])
+    bound = sum(run.least for run in runs) + waits
+    if slower > 1 + DURATION_TOLERANCE:
+        return _Motion(chain, (Limit(None, "time"),), bound)
+    held, stretches = _held_runs(task, runs)
+    return _Motion(chain, held, bound, stretches, _settled(runs, task))
 
 
-def _straight(task: _Task, way: _Way, step: Line | PathStep) -> _Motion:
+def _held_runs(
+    task: _Task, runs: Sequence[Run]
+) -> tuple[tuple[Limit, ...], tuple[HeldStretch, ...]]:
+    """Return what holds the runs of a path back: in all, and where."""
+    names = [*task.axes, None]
+    gains: dict[tuple[str, int], float] = {}
+    held, start = [], 0.0
+    for run in runs:
+        for name, gain in run.gains().items():
+            gains[name] = gains.get(name, 0.0) + gain
+        start += float(run.way.waits[0])
+        held += [
+            HeldStretch(start + s.start, start + s.end, Limit(names[s.axis], s.quantity))
+            for s in run.stretches()
+        ]
+        start += run.duration
+    order = sorted(gains.items(), key=lambda item: -item[1])
+    limits = [
+        Limit(names[axis], quantity, RAISE * gain)
+        for (quantity, axis), gain in order
+        if gain > COUNTS * start
+    ]
+    return tuple(limits), tuple(held)
+
+
+def _settled(runs: Sequence[Run], task: _Task) -> str:
+    """Return a note on runs that may not be the fastest found, and by what they still hold."""
+    name = task.job.cycle.step_label(task.index)
+    stops = sum(run.passage is None and not run.single for run in runs)
+    if stops:
+        return f"{name}: {stops} of {len(runs)} runs stop at every point; nothing faster was found"
+    if any(run.passage is not None and not run.passage.settled for run in runs):
+        return f"{name}: the search ended before it settled; limits and tolerance are kept"
+    return ""
+
+
+def _straight(task: _Task, way: Way, step: Line | PathStep) -> _Motion:
     """Plan straight lines from point to point with a stop at every point."""
     law, linear = task.law(step.law), task.job.machine.linear
     distance = np.diff(way.points, axis=0)
@@ -480,6 +560,4 @@ def _notes(job: Job) -> tuple[str, ...]:
         notes.append("loads on motors and mechanics are not checked (axes with mechanics)")
     if any(isinstance(step, Payload) for step in steps):
         notes.append("payloads are recorded; their mass and size do not enter the plan")
-    if any(isinstance(step, PathStep) and step.tolerance for step in steps):
-        notes.append("paths stop at every point; their tolerance is not used to go faster")
     return tuple(notes)

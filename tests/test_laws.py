@@ -468,3 +468,20 @@ def test_unlike_shapes_are_refused() -> None:
     """Three distances cannot meet the limits of two axes."""
     with pytest.raises(ValueError, match="shape mismatch"):
         solve_trapezoidal(np.ones(3), Limits(np.ones(2), 1.0, 1.0, 1.0))
+
+
+@LAWS_BY_NAME
+@pytest.mark.parametrize("distance", [np.nan, np.inf, -np.inf, [1.0, np.nan]])
+def test_a_distance_that_is_none_is_refused(law: LawName, distance: float | list[float]) -> None:
+    """Otherwise the whole plan would turn into nothing without a word."""
+    with pytest.raises(ValueError, match="distances are finite"):
+        LAWS[law].solve(np.array(distance), Limits(1.0, 1.0, 1.0, 1.0))
+
+
+@LAWS_BY_NAME
+@pytest.mark.parametrize("limit", [0.0, -1.0, np.nan])
+@pytest.mark.parametrize("name", Limits._fields)
+def test_a_limit_that_is_not_above_zero_is_refused(law: LawName, name: str, limit: float) -> None:
+    """Nothing could move under it, or it is none."""
+    with pytest.raises(ValueError, match="limits above 0"):
+        LAWS[law].solve(1.0, Limits(1.0, 1.0, 1.0, 1.0)._replace(**{name: limit}))

@@ -28,8 +28,8 @@ if TYPE_CHECKING:
     from profileplan.motion.polynomials import Array
     from profileplan.motion.trajectory import Trajectory
 
-LIMIT_TOLERANCE = 1e-9
-"""Share by which a limit may be passed, as the checks allow."""
+LIMIT_TOLERANCE = 1e-12
+"""Share by which rounding may pass a limit: a thousandth of what the checks allow."""
 
 TIME_TOLERANCE = 1e-13
 """Relative: rounding of a sum of durations."""
@@ -166,6 +166,9 @@ def test_all_axes_take_the_time_of_the_slowest(
     assert_allclose(motion.first, case.start, rtol=0, atol=0)
     size = np.abs(case.start) + np.abs(case.end)
     assert_allclose(motion.last, case.end, rtol=1e-13, atol=1e-13 * size.max())
+    fastest = motion.peaks.velocity.value
+    assert_allclose(motion.jumps(0).value, 0, atol=1e-13 * size.max())
+    assert np.all(motion.jumps(1).value <= 1e-12 * fastest), "the velocity jumps"
     just_before = motion.at([motion.duration * (1 - 1e-3)], 1)[0]
     assert_array_equal(just_before != 0, case.distance != 0)
 
@@ -181,7 +184,7 @@ def test_peaks_fall_by_the_powers_of_the_slowing(law: LawName, drawn: list[Axis]
         alone = case.alone(law, axis)
         c = alone.duration / duration if duration else 1.0
         for peak, own, power in zip(motion.peaks, alone.peaks, (1, 2, 2, 3), strict=True):
-            assert_allclose(peak.value[axis], own.value[0] * c**power, rtol=1e-9)
+            assert_allclose(peak.value[axis], own.value[0] * c**power, rtol=LIMIT_TOLERANCE)
 
 
 @LAWS_BY_NAME

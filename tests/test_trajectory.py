@@ -148,27 +148,18 @@ def test_no_sample_lies_beyond_the_extremes(trajectory: Trajectory, derivative: 
 def test_an_extreme_is_taken_at_its_time(trajectory: Trajectory) -> None:
     """The time of a peak is where the reader of a report will look."""
     for derivative in range(4):
+        slope = bound(trajectory, derivative + 1).max() * trajectory.duration
+        atol = ROUNDING * (bound(trajectory, derivative).max() + slope)
         for peak in trajectory.extremes(derivative):
             for axis, (value, time) in enumerate(zip(*peak, strict=True)):
-                piece = np.searchsorted(trajectory.breaks, time, side="right") - 1
-                pieces = range(max(piece - 1, 0), min(piece + 1, trajectory.durations.size))
                 # At a break either side may have the extreme.
-                nearest = min(
-                    abs(curve(time - trajectory.breaks[index]) - value)
-                    for index, curve in enumerate(curves(trajectory, axis, derivative))
-                    if index in {*pieces, piece}
-                )
-                slope = bound(trajectory, derivative + 1).max() * trajectory.duration
-                size = bound(trajectory, derivative).max() + slope
-                assert_allclose(nearest, 0, atol=ROUNDING * size)
-
-
-def curves(trajectory: Trajectory, axis: int, derivative: int) -> list[np.polynomial.Polynomial]:
-    """Return numpy's polynomials of an axis's pieces."""
-    return [
-        np.polynomial.Polynomial(piece).deriv(derivative)
-        for piece in trajectory.coefficients[:, :, axis]
-    ]
+                local = time - trajectory.breaks[:-1]
+                near = (local >= -1e-9) & (local <= trajectory.durations + 1e-9)
+                there = [
+                    np.polynomial.Polynomial(piece[:, axis]).deriv(derivative)(at)
+                    for piece, at in zip(trajectory.coefficients[near], local[near], strict=True)
+                ]
+                assert_allclose(np.abs(np.array(there) - value).min(), 0, atol=atol)
 
 
 @given(trajectories(decades=2))
@@ -371,8 +362,10 @@ def test_a_stack_cuts_every_axis_at_every_break() -> None:
     assert_allclose(stack.last, [8.0, 8.0, 8.0], rtol=1e-14)
     assert_allclose(stack.jumps(0).value, 0, atol=1e-14)
     assert_allclose(stack.jumps(1).value, 0, atol=1e-13)
-    for peak, expected in zip(stack.peaks, ([16, 8, 8], [32, 8, 8], [32, 8, 8], 0), strict=True):
-        assert_allclose(peak.value, expected, rtol=1e-14)
+    velocity, acceleration, deceleration, _ = stack.peaks
+    assert_allclose(velocity.value, [16.0, 8.0, 8.0], rtol=1e-14)
+    for peak in (acceleration, deceleration):
+        assert_allclose(peak.value, [32.0, 8.0, 8.0], rtol=1e-14)
 
 
 def test_a_stack_of_stays_that_take_no_time_is_one() -> None:

@@ -16,7 +16,8 @@ axis with time to spare would still run to its limits.
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from itertools import pairwise
+from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 
@@ -24,10 +25,27 @@ from profileplan.motion.laws import Limits
 from profileplan.motion.trajectory import ORDER, Trajectory
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Iterator, Sequence
 
     from profileplan.motion.laws import Law, Moves
     from profileplan.motion.polynomials import Array
+
+
+class Way(NamedTuple):
+    """A path: points (m + 1, d) [mm], speed limits (m,) [mm/s], rests (m + 1,) [s]."""
+
+    points: Array
+    speeds: Array
+    waits: Array
+
+    def parts(self) -> Iterator[Way]:
+        """Yield the parts between the rests, without points that stand where the last one did."""
+        stops = [0, *(np.flatnonzero(self.waits[1:-1] > 0) + 1), len(self.points) - 1]
+        for first, last in pairwise(stops):
+            points = self.points[first : last + 1]
+            moves = np.any(np.diff(points, axis=0) != 0, axis=1)
+            kept = np.concatenate([[True], moves])
+            yield Way(points[kept], self.speeds[first:last][moves], self.waits[[first, last]])
 
 
 def move_duration(distance: Array, limits: Limits, law: Law) -> Array:

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from fractions import Fraction
 from functools import cached_property
 from itertools import accumulate, pairwise
+from math import comb
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
@@ -220,6 +221,27 @@ class Trajectory:
         _, high, _, high_at = polynomials.extremes(squared, self.durations)
         return Peak(np.sqrt(np.maximum(high, 0.0)), self.breaks[:-1] + high_at)
 
+    def hulls(self) -> Array:
+        """Return the Bezier points of every piece, whose hull holds it: (n, k, d) [mm].
+
+        The first and the last are its ends.
+
+        Source: Farin: Curves and Surfaces for CAGD (2002), chapter 5 (from memory).
+        """
+        coefficients = polynomials.trimmed(self.coefficients.transpose(0, 2, 1))
+        degree = max(coefficients.shape[-1] - 1, 1)
+        scaled = coefficients * self.durations[:, np.newaxis, np.newaxis] ** np.arange(
+            coefficients.shape[-1]
+        )
+        weights = np.array(
+            [
+                [comb(point, power) / comb(degree, power) for power in range(scaled.shape[-1])]
+                for point in range(degree + 1)
+            ]
+        )
+        hulls: Array = np.einsum("kp,ndp->nkd", weights, scaled)
+        return hulls
+
     def stretched(self, duration: float) -> Trajectory:
         """Return the same positions in another time.
 
@@ -281,7 +303,7 @@ class Trajectory:
         offsets = [float(start - own[piece]) for start, piece in zip(starts, pieces, strict=True)]
         pieces = np.minimum(pieces, self.durations.size - 1)
         offset = np.where(inside, offsets, 0.0)[:, np.newaxis]
-        expanded = self.coefficients[pieces].copy()
+        expanded: Array = self.coefficients[pieces].copy()
         # Taylor shift by repeated synthetic division: Knuth, The Art of Computer Programming,
         # volume 2, section 4.6.4 (from memory).
         for first in range(ORDER - 1):

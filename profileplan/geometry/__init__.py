@@ -1,0 +1,1 @@
+"""Where the tool may go, without time: corridors."""

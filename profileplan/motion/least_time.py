@@ -1,0 +1,315 @@
+"""How soon can a motion be through a corridor, and what holds it back?
+
+``least_time`` begins with spans guessed from the closed forms of stops at every gate, refits, and
+then goes in turns of ``step`` and ``refit``: after each turn the motion keeps every limit and every
+region at every instant, and a turn that does not shorten it is not taken. Twice as many intervals
+then give the jerk more places to switch. At last ``calm`` takes out what time does not need.
+
+Rounds are bounded and deterministic. Where none is found at all there is no motion, and the caller
+has the closed forms.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from itertools import pairwise
+from typing import TYPE_CHECKING, NamedTuple
+
+import numpy as np
+
+from profileplan.motion import rounds
+from profileplan.motion.laws import LAWS, Limits
+from profileplan.motion.spline import Group, Spline, inner_points
+from profileplan.motion.synchronisation import line_limits
+
+if TYPE_CHECKING:
+    from profileplan.geometry.corridor import Corridor
+    from profileplan.motion.polynomials import Array, Indices
+    from profileplan.motion.rounds import Bounds, Price
+
+INTERVALS = 6
+"""Least number of intervals of a region: as many as a start and a stop need, and some."""
+
+FEW_INTERVALS = 3
+"""The same for a region that is passed in a fraction of the time of a stop, in a long chain."""
+
+LONG_CHAIN = 12
+"""Regions from which on the number of intervals sets the cost."""
+
+PASSED_SOON = 3.0
+"""How many times longer than passing a region a start and a stop in it take, for few intervals."""
+
+SMALLEST_SPAN = 0.03
+"""Least span of a start, as a share of its region's duration."""
+
+FIRST_TRUST, WIDEST_TRUST, LEAST_TRUST = 0.3, 0.5, 2e-3
+"""Relative changes of a span that one step may make."""
+
+COARSE_GAIN, FINE_GAIN = 2e-3, 3e-4
+"""Share of the duration that a step must promise for the rounds to go on."""
+
+COARSE_ROUNDS, FINE_ROUNDS = 25, 8
+"""Most turns before and after the intervals are cut in two."""
+
+REFITS, SETTLED = 6, 0.05
+"""Most refits in a row, and the gain at which another is not worth it."""
+
+HEADROOM = 2e-6
+"""Share of time given up, so that the last round has room for its accuracy."""
+
+INSIDE = 1e-6
+"""Share of a region's size by which rounding may put a point outside before a motion is refused."""
+
+
+@dataclass(frozen=True, eq=False)
+class Passage:
+    """A motion of least time through a corridor.
+
+    Parameters
+    ----------
+    spline : Spline
+    prices : tuple of Price
+        Multipliers of the last step: what each bound costs, by interval.
+    settled : bool
+        Whether the last step promised no more than the gain asked for; else it may be improved.
+    """
+
+    spline: Spline
+    prices: tuple[Price, ...]
+    settled: bool
+
+
+class Stretch(NamedTuple):
+    """What holds a motion back from one time to another [s]: a quantity, and an axis or -1."""
+
+    start: float
+    end: float
+    quantity: str
+    axis: int
+
+
+def least_time(corridor: Corridor, bounds: Bounds) -> Passage | None:
+    """Return the fastest motion found through a corridor, at rest at both ends.
+
+    Parameters
+    ----------
+    corridor : Corridor
+    bounds : Bounds
+        Limits of the corridor's axes.
+
+    Returns
+    -------
+    Passage or None
+        None where no motion was found: stop at every gate instead.
+    """
+    first = _start(corridor, bounds)
+    if first is None:
+        return None
+    coarse = _descend(
+        Passage(first, (), settled=False), corridor, bounds, COARSE_ROUNDS, COARSE_GAIN
+    )
+    halves = np.full(coarse.spline.spans.size, 2)
+    finer = replace(coarse, spline=coarse.spline.split(halves))
+    fine = _descend(finer, corridor, bounds, FINE_ROUNDS, FINE_GAIN)
+    spline = _calmed(fine.spline, corridor, bounds)
+    return None if spline is None else replace(fine, spline=spline)
+
+
+def in_time(passage: Passage, corridor: Corridor, bounds: Bounds, *, duration: float) -> Spline:
+    """Return a motion through a corridor in a longer time, with the least mean square of jerk.
+
+    Jerk, and not acceleration, for it is what a frame answers to. The spans keep their ratios.
+    """
+    slower = passage.spline.scaled(duration / passage.spline.duration)
+    found = rounds.calm(slower, corridor, bounds).spline
+    if found is not None and rounds.overrun(found, bounds) <= 1 and _inside(found, corridor):
+        return found
+    return slower
+
+
+def lower_bound(corridor: Corridor, bounds: Bounds, *, tolerance: float) -> float:
+    """Return a time [s] that no motion through tubes of a tolerance [mm] can be shorter than.
+
+    An axis must come as near as the tolerance to each of its own turning points, in order, and
+    stand still between two of them. From one standstill to the next it takes at least the least
+    time for the distance without jerk limit; alone from start to end, with it.
+    """
+    limits = Limits(bounds.velocity, bounds.acceleration, bounds.deceleration, bounds.jerk)
+    free = limits._replace(jerk=np.full_like(bounds.jerk, np.inf))
+    law = LAWS["trapezoidal"]
+    least = law.solve(corridor.points[-1] - corridor.points[0], limits).duration.max()
+    for axis in np.flatnonzero(bounds.linear):
+        own = corridor.points[:, axis]
+        steps = np.diff(own)
+        own = own[np.concatenate([[True], steps != 0])]
+        turns = np.flatnonzero(np.diff(np.sign(np.diff(own)))) + 1
+        ends = own[np.concatenate([[0], turns, [own.size - 1]])]
+        room = np.full(ends.size, tolerance)
+        room[0] = room[-1] = 0.0
+        way = np.maximum(np.abs(np.diff(ends)) - room[1:] - room[:-1], 0.0)
+        single = Limits(*np.array(free)[:, axis])
+        least = max(least, float(law.solve(way, single).duration.sum()))
+    return float(least)
+
+
+def stretches(passage: Passage) -> tuple[Stretch, ...]:
+    """Return what holds the motion back, stretch by stretch: the bound of the highest price."""
+    spline = passage.spline
+    names = list(dict.fromkeys((price.quantity, price.axis) for price in passage.prices))
+    if not names:
+        return ()
+    costs = np.zeros((len(names), spline.spans.size))
+    for price in passage.prices:
+        np.add.at(costs[names.index((price.quantity, price.axis))], price.interval, price.value)
+    highest = costs.argmax(axis=0)
+    cuts = np.concatenate([[0], np.flatnonzero(np.diff(highest)) + 1, [highest.size]])
+    times = np.concatenate([[0.0], np.cumsum(spline.spans)])
+    return tuple(
+        Stretch(float(times[one]), float(times[other]), *names[highest[one]])
+        for one, other in pairwise(cuts)
+    )
+
+
+def gains(passage: Passage) -> dict[tuple[str, int], float]:
+    """Return how much sooner the motion ends for each share that a bound is loosened [s]."""
+    found: dict[tuple[str, int], float] = {}
+    for price in passage.prices:
+        name = (price.quantity, price.axis)
+        share = float(price.value.sum())
+        found[name] = found.get(name, 0.0) + share * passage.spline.duration
+    return found
+
+
+def _start(corridor: Corridor, bounds: Bounds) -> Spline | None:
+    """Return a motion inside all limits: spans as for stops at the gates, and what they allow."""
+    spline = _guess(corridor, bounds)
+    for slower in (1.0, 2.0, 4.0):
+        found = _refitted(spline.scaled(slower), corridor, bounds)
+        if found is not None:
+            return found
+    return None
+
+
+def _guess(corridor: Corridor, bounds: Bounds) -> Spline:
+    """Return a spline along the points of a corridor, with spans as for a stop at every gate."""
+    way = np.diff(corridor.points, axis=0)
+    limits = Limits(bounds.velocity, bounds.acceleration, bounds.deceleration, bounds.jerk)
+    own = line_limits(way, limits, linear=bounds.linear.tolist(), speed=bounds.speed)
+    moves = LAWS["trapezoidal"].solve(np.ones(len(way)), own)
+    passing = (np.abs(way) / bounds.velocity).max(axis=-1)
+    few = (len(way) >= LONG_CHAIN) & (moves.duration > PASSED_SOON * passing)
+    spans = [
+        _spans(phases, FEW_INTERVALS if short else INTERVALS)
+        for phases, short in zip(moves.phases, few, strict=True)
+    ]
+    region = np.repeat(np.arange(len(way)), [len(own) for own in spans])
+    joined = np.concatenate(spans)
+    # Where each interval's middle lies on the way through its region.
+    first = np.concatenate([[0.0], np.cumsum(moves.duration)])[region]
+    middle = (np.cumsum(joined) - 0.5 * joined - first) / moves.duration[region]
+    along = corridor.points[region] + np.clip(middle, 0, 1)[:, np.newaxis] * way[region]
+    groups = []
+    for degree, axes in _degrees(bounds):
+        points = np.empty((joined.size + degree, axes.size))
+        points[degree:-degree] = along[degree - 1 : joined.size - 1][:, axes]
+        points[:degree], points[-degree:] = corridor.points[0, axes], corridor.points[-1, axes]
+        groups.append(Group(degree, axes, points))
+    return Spline(joined, region, tuple(groups))
+
+
+def _degrees(bounds: Bounds) -> list[tuple[int, Indices]]:
+    """Return the columns of the axes with jerk limit (degree 3) and of those without (2).
+
+    The speed along the path needs one degree for all axes that it counts: then a linear axis
+    without jerk limit has acceleration that is continuous where another's must be.
+    """
+    smooth = np.isfinite(bounds.jerk)
+    if np.isfinite(bounds.speed).any() and smooth[bounds.linear].any():
+        smooth = smooth | bounds.linear
+    pairs = ((3, np.flatnonzero(smooth)), (2, np.flatnonzero(~smooth)))
+    return [(degree, axes) for degree, axes in pairs if axes.size]
+
+
+def _spans(phases: Array, count: int) -> Array:
+    """Return spans that begin and end with the phases of a law, at least so many."""
+    whole = float(phases.sum())
+    if count < INTERVALS:
+        return np.full(count, whole / count)
+    spans = phases[phases > 1e-9 * whole].tolist()
+    while len(spans) < count:
+        longest = int(np.argmax(spans))
+        spans[longest : longest + 1] = [0.5 * spans[longest]] * 2
+    bounded = np.maximum(spans, SMALLEST_SPAN * whole)
+    scaled: Array = bounded * (whole / bounded.sum())
+    return scaled
+
+
+def _refitted(spline: Spline, corridor: Corridor, bounds: Bounds) -> Spline | None:
+    """Return the fastest motion with a spline's ratios of spans, or None."""
+    best: Spline | None = None
+    scale = rounds.overrun(spline, bounds)
+    spline = spline.scaled(max(scale, 1e-3))
+    for _ in range(REFITS):
+        found = rounds.refit(spline, corridor, bounds).spline
+        if found is None:
+            return best
+        found = found.scaled(rounds.overrun(found, bounds))
+        gain = 1 - found.duration / spline.duration
+        if best is None or found.duration < best.duration:
+            best = found
+        spline = found
+        if gain < SETTLED:
+            break
+    return best
+
+
+def _descend(
+    passage: Passage, corridor: Corridor, bounds: Bounds, most: int, least_gain: float
+) -> Passage:
+    """Return the passage after turns of step and refit, each taken only if it shortens it."""
+    spline, trust, prices = passage.spline, FIRST_TRUST, passage.prices
+    for _ in range(most):
+        outcome = rounds.step(spline, corridor, bounds, trust=trust)
+        promised, reached = least_gain, 0.0
+        if outcome.spline is not None:
+            promised = 1 - outcome.spline.duration / spline.duration
+            prices = outcome.prices
+            found = _refitted(outcome.spline, corridor, bounds)
+            if found is not None and found.duration < spline.duration:
+                reached = 1 - found.duration / spline.duration
+                spline = found
+        if reached > 0.7 * promised:
+            trust = min(1.6 * trust, WIDEST_TRUST)
+        elif reached < 0.35 * promised:
+            trust *= 0.4
+        if promised < least_gain or 0 < reached < 0.5 * least_gain:
+            return Passage(spline, prices, settled=True)
+        if trust < LEAST_TRUST:
+            break
+    return Passage(spline, prices, settled=False)
+
+
+def _calmed(spline: Spline, corridor: Corridor, bounds: Bounds) -> Spline | None:
+    """Return a motion as fast, but for the headroom, without needless jerk and wandering."""
+    roomy = spline.scaled(1 + HEADROOM)
+    for found in (rounds.calm(roomy, corridor, bounds).spline, roomy):
+        if found is None:
+            continue
+        kept = found.scaled(max(1.0, rounds.overrun(found, bounds) * (1 + 1e-12)))
+        if kept.duration < spline.duration * (1 + 10 * HEADROOM) and _inside(kept, corridor):
+            return kept
+    return None
+
+
+def _inside(spline: Spline, corridor: Corridor) -> bool:
+    """Return whether every point of a motion is in its region."""
+    axes = corridor.points.shape[1]
+    sets = corridor.regions.at(spline.region)
+    for which in range(2):
+        positions = np.zeros((spline.spans.size, axes))
+        for group in spline.groups:
+            positions[:, group.axes] = inner_points(group, spline.spans)[which].values
+        if (sets.excess(positions) > INSIDE).any():
+            return False
+    nodes = spline.states()[0][spline.gates]
+    return not len(nodes) or not (corridor.gates.excess(nodes) > INSIDE).any()

@@ -1,0 +1,476 @@
+"""What is the next better motion inside a corridor?
+
+Least time is sought in convex rounds. ``step`` shortens the spans, all limits and regions being
+linear in control points and spans about the last motion. ``refit`` then holds the ratios of the
+spans and finds the control points that allow the least common scale: limits and regions are exact
+there, so that its result keeps them at every instant. ``calm`` holds the spans and takes out what
+time does not need. Unknowns are changes: of control points, and of spans relative to their length.
+
+Source: cone programs, Boyd, Vandenberghe: Convex Optimization (2004), chapter 4 (from memory);
+clarabel solves them. ``refit`` is derived: with a common scale c of all spans the limits on a
+derivative of order k grow as c^k, and 1 + k (c - 1) <= c^k keeps it convex and safe.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, NamedTuple
+
+import clarabel
+import numpy as np
+import scipy.sparse as sp
+
+from profileplan.motion.spline import Group, Spline, inner_points, node_points
+
+if TYPE_CHECKING:
+    from profileplan.geometry.corridor import Corridor, Regions
+    from profileplan.motion.polynomials import Array, Flags, Indices
+    from profileplan.motion.spline import Level, Points
+
+REST = 1e-9
+"""Share of its velocity limit below which an axis counts as standing."""
+
+MOST_ITERATIONS = 80
+"""Iterations of the interior-point solver in one round."""
+
+WIDEST_SCALE = (0.7, 2.0)
+"""Least and greatest common scale of the spans in one ``refit``."""
+
+ACCURACY = 1e-7
+"""Relative accuracy to which a round is solved; what it leaves over is scaled away."""
+
+CENTRING = 0.05
+"""Weight of the distance from a region's middle, against the jerk, in ``calm``."""
+
+
+@dataclass(frozen=True, eq=False)
+class Bounds:
+    """What bounds the motion.
+
+    Parameters
+    ----------
+    velocity, acceleration, deceleration, jerk : (d,) arrays
+        Limits of the axes; a jerk of infinity is none.
+    speed : (m,) array [mm/s]
+        Limit of the speed along the path in each region; infinity is none.
+    linear : (d,) array of bool
+        The axes along which the speed is counted.
+    """
+
+    velocity: Array
+    acceleration: Array
+    deceleration: Array
+    jerk: Array
+    speed: Array
+    linear: Flags
+
+
+class Price(NamedTuple):
+    """How much the least time falls if a bound is loosened: its multiplier.
+
+    quantity : "velocity", "acceleration", "deceleration", "jerk", "speed" or "tolerance"
+    axis : column of the axis, or -1
+    interval : (n,) array, the intervals of the spline
+    value : (n,) array, share of the duration for each share of the bound
+    """
+
+    quantity: str
+    axis: int
+    interval: Indices
+    value: Array
+
+
+class Outcome(NamedTuple):
+    """What a round found: no spline where it found nothing."""
+
+    spline: Spline | None
+    prices: tuple[Price, ...] = ()
+
+
+class _Mark(NamedTuple):
+    """Rows whose multipliers are prices: every ``stride``-th from ``first`` on, times a weight."""
+
+    price: Price
+    first: int
+    stride: int
+
+
+class Sides(NamedTuple):
+    """Bounds of velocity and acceleration control values by direction, as shares of ``scale``.
+
+    Slowing down has a limit of its own, so what an acceleration may be depends on the direction in
+    which the axis moves: it is kept where the limits differ.
+    """
+
+    scale: Array
+    velocity: tuple[Array, Array]
+    acceleration: tuple[Array, Array]
+
+
+def sides(group: Group, velocity: Array, bounds: Bounds) -> Sides:
+    """Return what bounds the axes of a group, given their velocity control values."""
+    up, down = bounds.acceleration[group.axes], bounds.deceleration[group.axes]
+    scale = np.maximum(up, down)
+    small = REST * bounds.velocity[group.axes]
+    windows = np.lib.stride_tricks.sliding_window_view(velocity, group.degree, axis=0)
+    forward = windows.min(axis=-1) >= -small
+    backward = (windows.max(axis=-1) <= small) & ~forward
+    either = np.minimum(up, down)
+    high = np.where(forward, up, np.where(backward, down, either)) / scale
+    low = np.where(forward, down, np.where(backward, up, either)) / scale
+    asks = up != down
+    floor, ceiling = np.ones_like(velocity), np.ones_like(velocity)
+    for offset in range(group.degree):
+        rows = slice(offset, offset + len(windows))
+        floor[rows][forward & asks] = 0.0
+        ceiling[rows][backward & asks] = 0.0
+    if group.degree == 3:
+        # A node belongs to two intervals.
+        high, low = _least_of_neighbours(high), _least_of_neighbours(low)
+    return Sides(scale, (floor, ceiling), (low, high))
+
+
+def overrun(spline: Spline, bounds: Bounds) -> float:
+    """Return the scale of time at which a spline's limits on derivatives are just kept."""
+    least = 0.0
+    for group in spline.groups:
+        levels = group.levels(spline.spans)
+        velocity = levels[0].values
+        least = max(least, float((np.abs(velocity) / bounds.velocity[group.axes]).max()))
+        side = sides(group, velocity, bounds)
+        values = levels[1].values / side.scale
+        low, high = side.acceleration
+        least = max(least, float(np.sqrt(np.maximum(values / high, -values / low).max())))
+        if group.degree == 3:
+            jerk = np.abs(levels[2].values) / bounds.jerk[group.axes]
+            least = max(least, float(np.cbrt(jerk.max())))
+        members = bounds.linear[group.axes]
+        if members.any() and np.isfinite(bounds.speed).any():
+            speed = np.linalg.norm(velocity[:, members], axis=1)
+            least = max(least, float((speed / speed_bounds(group, spline, bounds)).max()))
+    return least
+
+
+def step(spline: Spline, corridor: Corridor, bounds: Bounds, *, trust: float) -> Outcome:
+    """Return the motion of least time under limits linear about a spline.
+
+    Parameters
+    ----------
+    trust : float
+        Greatest relative change of a span.
+    """
+    spans = spline.spans
+    program = _Program(spline, times=spans.size)
+    program.cost[program.time] = spans / spline.duration
+    columns = program.time.start + np.arange(spans.size)
+    for sign in (1.0, -1.0):
+        program.rows(np.full(spans.size, trust))
+        program.entries(np.arange(spans.size), columns, np.full(spans.size, sign))
+    program.constrain(corridor, bounds)
+    return program.solve()
+
+
+def refit(spline: Spline, corridor: Corridor, bounds: Bounds) -> Outcome:
+    """Return the fastest motion with a spline's ratios of spans, exactly inside the limits."""
+    program = _Program(spline, times=1)
+    program.cost[program.time] = 1.0
+    program.rows(np.array([WIDEST_SCALE[1] - 1, 1 - WIDEST_SCALE[0]]))
+    program.entries(np.arange(2), np.full(2, program.time.start), np.array([1.0, -1.0]))
+    program.constrain(corridor, bounds)
+    return program.solve()
+
+
+def calm(spline: Spline, corridor: Corridor, bounds: Bounds) -> Outcome:
+    """Return the motion with a spline's spans, the least jerk and the most central way."""
+    program = _Program(spline, times=0)
+    program.constrain(corridor, bounds)
+    program.quieten(bounds)
+    return program.solve()
+
+
+class _Program:
+    """A convex program about a spline: entries x + slack = right side, the slack in a cone.
+
+    Parameters
+    ----------
+    times : int
+        Unknown times: all N spans; 1, a common scale, as whose powers limits grow; or none.
+    """
+
+    def __init__(self, spline: Spline, *, times: int) -> None:
+        self.spline = spline
+        self.scales = times == 1
+        self.column: list[Indices] = []
+        self.unit = 1e-300
+        count = 0
+        for group in spline.groups:
+            columns = np.full(group.points.shape, -1)
+            free = columns[group.degree : -group.degree]
+            free[:] = count + np.arange(free.size).reshape(free.shape)
+            count += free.size
+            self.column.append(columns)
+            self.unit = max(self.unit, float(np.abs(np.diff(group.points, axis=0)).mean()))
+        self.time = slice(count, count + times)
+        self.way = count + times
+        self.cost = np.zeros(self.way + 2 * spline.spans.size)
+        self.quadratic = sp.csc_matrix((self.cost.size, self.cost.size))
+        self.count = self.first = 0
+        self.parts: list[tuple[Indices, Indices, Array]] = []
+        self.right: list[Array] = []
+        self.cones: list[object] = []
+        self.marks: list[_Mark] = []
+        self.velocity = [group.levels(spline.spans)[0].values for group in spline.groups]
+
+    def constrain(self, corridor: Corridor, bounds: Bounds) -> None:
+        """Add the limits, the regions and the gates."""
+        spline = self.spline
+        for number, group in enumerate(spline.groups):
+            levels = group.levels(spline.spans)
+            side = sides(group, levels[0].values, bounds)
+            limit = bounds.velocity[group.axes]
+            self._rates(number, 0, levels[0], limit, side.velocity)
+            self._rates(number, 1, levels[1], side.scale, side.acceleration)
+            if group.degree == 3:
+                both = np.ones_like(levels[2].values)
+                self._rates(number, 2, levels[2], bounds.jerk[group.axes], (both, both))
+            if bounds.linear[group.axes].any() and np.isfinite(bounds.speed).any():
+                self._speed(number, levels[0], bounds)
+        ways = np.arange(2 * spline.spans.size)
+        for sign, right in ((-1.0, 0.0), (1.0, 1.0)):
+            self.rows(np.full(ways.size, right))
+            self.entries(ways, self.way + ways, np.full(ways.size, sign))
+        inner = [inner_points(group, spline.spans) for group in spline.groups]
+        intervals = np.arange(spline.spans.size)
+        regions = corridor.regions.at(spline.region)
+        for which in range(2):
+            way = self.way + which * intervals.size + intervals
+            self._inside(regions, [pair[which] for pair in inner], way, intervals)
+        gates = spline.gates
+        if gates.size:
+            points = [node_points(group, spline.spans, gates) for group in spline.groups]
+            self._inside(corridor.gates, points, np.full(gates.size, -1), gates)
+
+    def quieten(self, bounds: Bounds) -> None:
+        """Let the cost be the mean square of jerk (or acceleration) over its limit."""
+        spline = self.spline
+        blocks = []
+        for number, group in enumerate(spline.groups):
+            level = group.levels(spline.spans)[-1]
+            limit = bounds.jerk if group.degree == 3 else bounds.acceleration
+            weight = np.sqrt(spline.spans / spline.duration)
+            for axis, column in enumerate(group.axes):
+                own = min(float(limit[column]), float(np.abs(level.values).max()) + 1.0)
+                rows = np.arange(len(level.values))[:, np.newaxis]
+                points = rows + np.arange(level.by_points.shape[1])
+                columns = self.column[number][points, axis]
+                values = self.unit / own * weight[:, np.newaxis] * level.by_points
+                kept = columns >= 0
+                entries = (
+                    values[kept],
+                    (np.broadcast_to(rows, columns.shape)[kept], columns[kept]),
+                )
+                block = sp.csc_matrix(entries, shape=(len(rows), self.cost.size))
+                blocks.append(block)
+                self.cost += block.T @ (weight * level.values[:, axis] / own)
+        stacked = sp.vstack(blocks)
+        self.quadratic = sp.triu(stacked.T @ stacked, format="csc")
+
+    def rows(self, right: Array, *, cone: int = 0) -> None:
+        """Begin rows with these right sides; a cone has so many of them, 0: each its own."""
+        self.first = self.count
+        self.count += right.size
+        self.right.append(right.reshape(-1))
+        if cone:
+            self.cones += [clarabel.SecondOrderConeT(cone)] * (right.size // cone)
+        else:
+            self.cones.append(clarabel.NonnegativeConeT(right.size))
+
+    def priced(self, quantity: str, axis: int, interval: Indices, weight: Array) -> None:
+        """Let the multipliers of the last rows, times a weight, be prices of intervals."""
+        last = self.spline.spans.size - 1
+        price = Price(quantity, axis, np.clip(interval, 0, last), weight)
+        self.marks.append(_Mark(price, self.first, (self.count - self.first) // interval.size))
+
+    def entries(self, rows: Indices, columns: Indices, values: Array) -> None:
+        """Add entries in rows counted from the last first one; columns below 0 are no unknowns."""
+        shape = np.broadcast_shapes(rows.shape, columns.shape, values.shape)
+        kept = np.broadcast_to(columns, shape) >= 0
+        self.parts.append(
+            (
+                np.broadcast_to(rows, shape)[kept] + self.first,
+                np.broadcast_to(columns, shape)[kept],
+                np.broadcast_to(values, shape)[kept],
+            )
+        )
+
+    def solve(self) -> Outcome:
+        """Return the spline that the solution stands for, with the multipliers."""
+        rows, columns, values = (np.concatenate(part) for part in zip(*self.parts, strict=True))
+        matrix = sp.csc_matrix((values, (rows, columns)), shape=(self.count, self.cost.size))
+        settings = clarabel.DefaultSettings()
+        settings.verbose = False
+        settings.presolve_enable = False
+        settings.max_iter = MOST_ITERATIONS
+        settings.max_threads = 1
+        settings.tol_gap_abs = settings.tol_gap_rel = settings.tol_feas = ACCURACY
+        solution = clarabel.DefaultSolver(
+            self.quadratic, self.cost, matrix, np.concatenate(self.right), self.cones, settings
+        ).solve()
+        if str(solution.status) not in {"Solved", "AlmostSolved"}:
+            return Outcome(None)
+        multipliers = np.array(solution.z)
+        prices = [
+            mark.price._replace(
+                value=mark.price.value
+                * multipliers[mark.first + mark.stride * np.arange(mark.price.interval.size)]
+            )
+            for mark in self.marks
+        ]
+        return Outcome(self._moved(np.array(solution.x)), tuple(prices))
+
+    def _moved(self, found: Array) -> Spline:
+        """Return the spline with the changes found."""
+        groups = []
+        for group, columns in zip(self.spline.groups, self.column, strict=True):
+            points = group.points.copy()
+            free = columns >= 0
+            points[free] += self.unit * found[columns[free]]
+            groups.append(Group(group.degree, group.axes, points))
+        spans = self.spline.spans
+        if self.time.stop > self.time.start:
+            spans = spans * (1 + found[self.time])
+        return Spline(spans, self.spline.region, tuple(groups))
+
+    def _span_entries(self, rows: Indices, first: Indices, values: Array) -> None:
+        """Add entries for relative changes of spans from ``first`` on: values are per second."""
+        if self.scales or self.time.stop == self.time.start:
+            return
+        spans = self.spline.spans
+        index = first[:, np.newaxis] + np.arange(values.shape[1])
+        inside = (index >= 0) & (index < spans.size)
+        held = np.clip(index, 0, spans.size - 1)
+        columns = np.where(inside, self.time.start + held, -1)
+        self.entries(rows[:, np.newaxis], columns, values * spans[held])
+
+    def _scale_entries(self, rows: Indices, values: Array) -> None:
+        """Add entries for the common scale of all spans, where it is an unknown."""
+        if self.scales:
+            self.entries(rows, np.full(rows.size, self.time.start), values)
+
+    def _rates(
+        self, number: int, order: int, level: Level, limit: Array, side: tuple[Array, Array]
+    ) -> None:
+        """Add the rows that keep a derivative between its bounds, shares of a limit."""
+        group = self.spline.groups[number]
+        index = np.arange(len(level.values))
+        points = index[:, np.newaxis] + np.arange(level.by_points.shape[1])
+        for axis, own in enumerate(limit):
+            if not np.isfinite(own):
+                continue
+            columns = self.column[number][points, axis]
+            for sign, share in ((-1.0, side[0][:, axis]), (1.0, side[1][:, axis])):
+                self.rows(share - sign * level.values[:, axis] / own)
+                self._price_rates(number, axis, order, sign * share)
+                weight = sign * self.unit / own
+                self.entries(index[:, np.newaxis], columns, weight * level.by_points)
+                self._scale_entries(index, -(order + 1) * share)
+                if order:
+                    by_spans = sign * level.by_spans[..., axis] / own
+                else:
+                    # Multiplied by the sum of spans, the bound on a velocity is linear as it is.
+                    by_spans = np.repeat(-(share / level.total)[:, np.newaxis], group.degree, 1)
+                self._span_entries(index, index - group.degree + 1, by_spans)
+
+    def _price_rates(self, number: int, axis: int, order: int, signed: Array) -> None:
+        """Mark the last rows as prices of a limit; an acceleration's by the axis's direction."""
+        group = self.spline.groups[number]
+        column = int(group.axes[axis])
+        # A velocity's row i is that of the interval before, in the middle of which it counts.
+        index = np.arange(signed.size) - (group.degree - 2 if order == 0 else 0)
+        if order != 1:
+            self.priced(("velocity", "", "jerk")[order], column, index, np.abs(signed))
+            return
+        velocity = self.velocity[number][:, axis]
+        there = 0.5 * (velocity[: signed.size] + velocity[1 : 1 + signed.size])
+        slows = there * signed < 0
+        self.priced("deceleration", column, index, np.where(slows, np.abs(signed), 0.0))
+        self.priced("acceleration", column, index, np.where(slows, 0.0, np.abs(signed)))
+
+    def _speed(self, number: int, level: Level, bounds: Bounds) -> None:
+        """Add the cones that keep the speed along the path."""
+        group = self.spline.groups[number]
+        members = np.flatnonzero(bounds.linear[group.axes])
+        limit = speed_bounds(group, self.spline, bounds)
+        index = np.flatnonzero(np.isfinite(limit))
+        limit, size = limit[index, np.newaxis], members.size + 1
+        right = np.ones((index.size, size))
+        right[:, 1:] = level.values[index][:, members] / limit
+        self.rows(right, cone=size)
+        self.priced("speed", -1, index - 1, np.ones(index.size))
+        rows = np.arange(index.size) * size
+        self._scale_entries(rows, -np.ones(index.size))
+        by_spans = np.repeat(-1 / level.total[index, np.newaxis], group.degree, 1)
+        self._span_entries(rows, index - group.degree + 1, by_spans)
+        for row, axis in enumerate(members, start=1):
+            columns = self.column[number][index[:, np.newaxis] + np.arange(2), axis]
+            weights = -self.unit / limit * level.by_points[index]
+            self.entries(rows[:, np.newaxis] + row, columns, weights)
+
+    def _inside(
+        self, regions: Regions, points: list[Points], way: Indices, interval: Indices
+    ) -> None:
+        """Add the cones and rows that keep points, one in each region, inside."""
+        values = self._values(points)
+        index = np.arange(len(values))
+        size = regions.ball.shape[1] + 1
+        if size > 1:
+            right = np.ones((index.size, size))
+            right[:, 1:] = np.einsum("nqd,nd->nq", regions.ball, values) - regions.centre
+            self.rows(right, cone=size)
+            self.priced("tolerance", -1, interval, np.ones(index.size))
+            for row in range(1, size):
+                rows = index * size + row
+                self.entries(rows, way, -regions.ball_way[:, row - 1])
+                self._point_entries(rows, points, -regions.ball[:, row - 1])
+        for row in range(regions.rows.shape[1]):
+            normal = regions.rows[:, row]
+            self.rows(regions.bound[:, row] - np.einsum("nd,nd->n", normal, values))
+            self.entries(index, way, regions.rows_way[:, row])
+            self._point_entries(index, points, normal)
+
+    def _values(self, points: list[Points]) -> Array:
+        """Return the positions of all axes: (n, d)."""
+        size = sum(len(group.axes) for group in self.spline.groups)
+        values = np.zeros((len(points[0].values), size))
+        for group, own in zip(self.spline.groups, points, strict=True):
+            values[:, group.axes] = own.values
+        return values
+
+    def _point_entries(self, rows: Indices, points: list[Points], normal: Array) -> None:
+        """Add the entries of positions times a normal, (n, d)."""
+        for number, (group, own) in enumerate(zip(self.spline.groups, points, strict=True)):
+            for axis, column in enumerate(group.axes):
+                factor = normal[:, column, np.newaxis]
+                if not factor.any():
+                    continue
+                first = own.first[:, np.newaxis] + np.arange(own.by_points.shape[1])
+                columns = self.column[number][first, axis]
+                self.entries(rows[:, np.newaxis], columns, self.unit * factor * own.by_points)
+                self._span_entries(rows, own.span, factor * own.by_spans[..., axis])
+
+
+def speed_bounds(group: Group, spline: Spline, bounds: Bounds) -> Array:
+    """Return the speed that each velocity control value of a group is allowed."""
+    by_interval = bounds.speed[spline.region]
+    padded = np.concatenate([np.full(group.degree - 1, np.inf), by_interval])
+    padded = np.concatenate([padded, np.full(group.degree - 1, np.inf)])
+    least: Array = np.lib.stride_tricks.sliding_window_view(padded, group.degree).min(axis=-1)
+    return least
+
+
+def _least_of_neighbours(values: Array) -> Array:
+    """Return for every node the least of the intervals beside it: (N, g) → (N + 1, g)."""
+    before = np.concatenate([values[:1], values])
+    after = np.concatenate([values, values[-1:]])
+    least: Array = np.minimum(before, after)
+    return least
