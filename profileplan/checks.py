@@ -311,20 +311,21 @@ def _paths(schedule: Schedule) -> Iterator[Finding]:
     missed: list[_Worst] = []
     speeds: list[tuple[float, _Worst, float]] = []
     linear = schedule.job.machine.linear
-    near = max(map(_nearness, schedule.job.machine.axes))
+    reached = max(map(_nearness, schedule.job.machine.axes))
     for index, asked in enumerate(schedule.job.cycle.steps):
         if not isinstance(asked, Line | PathStep):
             continue
         step = schedule.steps[index]
         points, bounds = _points(schedule, index, asked)
         if isinstance(asked, PathStep) and asked.tolerance:
-            followed = _followed(schedule, index, asked)
-            yield from _tolerances(step, asked, followed)
+            near = _near_points(asked)
+            followed = _followed(schedule, index, asked, near)
+            yield from _tolerances(step, asked, followed, near)
             # Where two segments meet a piece may count to either: the faster speed is allowed.
             ahead = np.minimum(followed.region + 1, bounds.size - 1)
             bound = np.maximum(bounds[followed.region], bounds[ahead])
         else:
-            distance, leads_to = _passes(step.trajectory, points, near)
+            distance, leads_to = _passes(step.trajectory, points, reached)
             missed.append(_Worst(distance, step.end, step.name))
             bound = bounds[np.minimum(leads_to, len(points) - 1)]
         speed = step.trajectory.speeds(linear)
@@ -335,13 +336,19 @@ def _paths(schedule: Schedule) -> Iterator[Finding]:
             found = _Worst(float(speed.value[worst]), time, step.name)
             speeds.append((float(share[worst]), found, float(bound[worst])))
     if missed:
-        yield _upper(_worse(*missed), "waypoints", near, "mm or deg")
+        yield _upper(_worse(*missed), "waypoints", reached, "mm or deg")
     if speeds:
         _, found, limit = max(speeds, key=lambda speed: speed[0])
         yield _upper(found, "speed", limit, "mm/s")
 
 
-def _followed(schedule: Schedule, index: int, asked: PathStep) -> Followed:
+def _near_points(asked: PathStep) -> Array:
+    """Return how near a path's motion passes its inner points: (m - 1,) [mm]."""
+    own = [np.inf if point.tolerance is None else point.tolerance for point in asked.points[:-1]]
+    return np.clip(own, PATH_TOLERANCE, asked.tolerance)
+
+
+def _followed(schedule: Schedule, index: int, asked: PathStep, near: Array) -> Followed:
     """Follow a path step's motion through the tubes round its segments."""
     start = schedule.job.positions()[index]
     points = np.array([start, *schedule.job.points(index)])
@@ -351,18 +358,25 @@ def _followed(schedule: Schedule, index: int, asked: PathStep) -> Followed:
         tolerance=asked.tolerance,
         linear=schedule.job.machine.linear,
         angle_tolerance=asked.angle_tolerance,
+        gate_tolerance=near,
     )
     return corridor.follow(schedule.steps[index].trajectory.hulls())
 
 
-def _tolerances(step: ScheduledStep, asked: PathStep, followed: Followed) -> Iterator[Finding]:
+def _tolerances(
+    step: ScheduledStep, asked: PathStep, followed: Followed, near: Array
+) -> Iterator[Finding]:
     """Judge a path's tolerance both ways: motion to path, and the path's corners to the motion."""
     out = int(followed.share.argmax())
     ends = step.trajectory.breaks[1:] + step.start
     away = _Worst(float(followed.share[out]) * asked.tolerance, float(ends[out]), step.name)
-    corners = _Worst(float(followed.gates.max(initial=0.0)) * asked.tolerance, step.end, step.name)
-    for worst, name in ((away, "tolerance"), (corners, "tolerance at corners")):
-        finding = _upper(worst, name, asked.tolerance, "mm")
+    cases = [(away, "tolerance", asked.tolerance)]
+    if near.size:
+        corner = int(followed.gates.argmax())
+        passed = float(followed.gates[corner] * near[corner])
+        cases.append((_Worst(passed, step.end, step.name), "tolerance at corners", near[corner]))
+    for worst, name, limit in cases:
+        finding = _upper(worst, name, limit, "mm")
         yield replace(finding, ok=finding.margin >= -PATH_TOLERANCE)
     turned = int(followed.failed.argmax())
     over = float(followed.failed[turned])

@@ -91,11 +91,11 @@ class _Progress:
         self._due = time.monotonic() + PROGRESS_AFTER
         self._shown = False
 
-    def __call__(self, done: int, total: int) -> None:
+    def __call__(self, done: float, total: int) -> None:
         if self._wanted and time.monotonic() >= self._due:
             self._due = time.monotonic() + 0.1
             self._shown = True
-            click.echo(f"\r{self._task} {100 * done // total:3d} %", err=True, nl=False)
+            click.echo(f"\r{self._task} {100 * done / total:3.0f} %", err=True, nl=False)
 
     def __enter__(self) -> Self:
         return self

@@ -212,7 +212,7 @@ def plan(
     source: str | Path | Job | Machine,
     cycle: Cycle | None = None,
     *,
-    progress: Callable[[int, int], None] | None = None,
+    progress: Callable[[float, int], None] | None = None,
 ) -> Plan:
     """Plan a cycle.
 
@@ -223,7 +223,7 @@ def plan(
     cycle : Cycle, optional
         With a machine only.
     progress : callable, optional
-        Called with the steps planned so far and the steps in all.
+        Called with the steps planned so far, with parts of one, and the steps in all.
 
     Raises
     ------
@@ -240,7 +240,8 @@ def plan(
     start = 0.0
     for index, step in enumerate(job.cycle.steps):
         ends = (np.array(positions[index]), np.array(positions[index + 1]))
-        task = _Task(job, index, step, ends, limits)
+        within = None if progress is None else _within(progress, index, len(job.cycle.steps))
+        task = _Task(job, index, step, ends, limits, within)
         motion = _motion(task)
         duration, least = motion.trajectory.duration, motion.least_time
         steps.append(
@@ -274,6 +275,12 @@ class _Task:
     step: Step
     ends: tuple[Array, Array]
     limits: Limits
+    progress: Callable[[float], None] | None = None
+
+    def part_progress(self, number: int, count: int) -> Callable[[float], None] | None:
+        """Return what takes the progress of one of the step's parts."""
+        report = self.progress
+        return None if report is None else lambda share: report((number + share) / count)
 
     @property
     def axes(self) -> tuple[str, ...]:
@@ -322,6 +329,13 @@ def _job(source: str | Path | Job | Machine, cycle: Cycle | None) -> Job:
     return source if isinstance(source, Job) else load_job(Path(source))
 
 
+def _within(
+    progress: Callable[[float, int], None], index: int, count: int
+) -> Callable[[float], None]:
+    """Return what takes the progress inside a step, as a share of it."""
+    return lambda share: progress(index + share, count)
+
+
 def _motion(task: _Task) -> _Motion:
     step = task.step
     if isinstance(step, Move):
@@ -359,7 +373,7 @@ def _move(task: _Task, step: Move) -> _Motion:
 
 def _line(task: _Task, step: Line) -> _Motion:
     speed = np.array([np.inf if step.speed is None else step.speed])
-    return _straight(task, Way(np.stack(task.ends), speed, np.zeros(2)), step)
+    return _straight(task, Way(np.stack(task.ends), speed, np.zeros(2), np.zeros(2)), step)
 
 
 def _path(task: _Task, step: PathStep) -> _Motion:
@@ -367,14 +381,15 @@ def _path(task: _Task, step: PathStep) -> _Motion:
     bound = np.inf if step.speed is None else step.speed
     own = [np.inf if point.speed is None else point.speed for point in step.points]
     waits = np.array([0.0, *(point.wait for point in step.points)])
-    way = Way(points, np.minimum(own, bound), waits)
+    near = [step.tolerance if p.tolerance is None else p.tolerance for p in step.points]
+    way = Way(points, np.minimum(own, bound), waits, np.array([0.0, *near]))
     return _tolerant(task, way, step) if step.tolerance else _straight(task, way, step)
 
 
 def _tolerant(task: _Task, way: Way, step: PathStep) -> _Motion:
     """Plan a path inside its tolerance: from each rest to the next in least time."""
     # scipy and the solver cost more start-up than all else: only such a path pays for them.
-    from profileplan.motion.paths import plan_run  # noqa: PLC0415
+    from profileplan.motion.paths import Near, plan_run  # noqa: PLC0415
 
     parts = list(way.parts())
     runs = [
@@ -382,10 +397,10 @@ def _tolerant(task: _Task, way: Way, step: PathStep) -> _Motion:
             part,
             task.limits,
             linear=np.array(task.job.machine.linear),
-            tolerance=step.tolerance,
-            angle_tolerance=step.angle_tolerance,
+            near=Near(step.tolerance, step.angle_tolerance, part.near[1:-1]),
+            progress=task.part_progress(number, len(parts)),
         )
-        for part in parts
+        for number, part in enumerate(parts)
     ]
     least, waits = sum(run.duration for run in runs), float(way.waits.sum())
     duration = task.asked(least + waits, step.time)

@@ -190,6 +190,34 @@ def test_nothing_jumps_where_another_limit_takes_over(limits: Limits) -> None:
     assert np.all(growth >= 2 / 3 * steps / moves.velocity[1:] - rounding)
 
 
+BORDERS = {
+    "velocity just reached, no jerk limit": (2.5, Limits(5.0, 10.0, 10.0, np.inf)),
+    "velocity just reached": (25 / 6, Limits(5.0, 10.0, 10.0, 30.0)),
+    "acceleration just reached": (20 / 9, Limits(5.0, 10.0, 10.0, 30.0)),
+    "both just reached": (20 / 9, Limits(10 / 3, 10.0, 10.0, 30.0)),
+    "velocity just reached, acceleration not": (
+        2 * 2 * (2 / 30) ** 0.5,
+        Limits(2.0, 10.0, 10.0, 30.0),
+    ),
+}
+
+
+@pytest.mark.parametrize(("distance", "limits"), BORDERS.values(), ids=BORDERS)
+@pytest.mark.parametrize("off", [0.0, 1e-16, 1e-12, 1e-8, 1e-5])
+@pytest.mark.parametrize("side", [-1, 1])
+def test_a_hair_beside_a_border_no_limit_is_passed(
+    distance: float, limits: Limits, off: float, side: int
+) -> None:
+    """Where one case ends and the next begins, rounding must not choose a wrong one."""
+    beside = distance * (1 + side * off)
+    moves = solve_trapezoidal(beside, limits)
+    told = [moves.velocity, moves.acceleration, moves.deceleration, moves.jerk]
+    assert np.all(np.array(told) <= np.array(limits) * (1 + LIMIT_TOLERANCE)), f"{told}"
+    velocity, acceleration, _, jerk = map(float, limits)
+    expected = closed_form(beside, velocity, acceleration, jerk)
+    assert_allclose(moves.duration, expected, rtol=TIME_TOLERANCE)
+
+
 # Properties of every law.
 
 

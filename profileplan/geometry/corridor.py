@@ -118,6 +118,14 @@ class Corridor:
     gates: Regions
     points: Array
 
+    def part(self, first: int, last: int) -> Corridor:
+        """Return the regions from ``first`` to ``last``, without ``last`` itself."""
+        return Corridor(
+            self.regions.at(slice(first, last)),
+            self.gates.at(slice(first, last - 1)),
+            self.points[first : last + 1],
+        )
+
     def follow(self, hulls: Array) -> Followed:
         """Follow a motion through the regions, piece by piece.
 

@@ -195,6 +195,9 @@ class Waypoint:
         Highest speed on the way to this point [mm/s].
     wait : float
         How long the motion stops here [s].
+    tolerance : float, optional
+        How near the motion passes [mm], at most as the path's own; 0: it stops here. None: as the
+        path's own.
     name : str, optional
         What reports call the point.
     line : int, optional
@@ -205,6 +208,7 @@ class Waypoint:
     _: KW_ONLY
     speed: float | None = None
     wait: float = 0.0
+    tolerance: float | None = None
     name: str | None = None
     line: int | None = field(default=None, compare=False)
 
@@ -213,6 +217,7 @@ class Waypoint:
         object.__setattr__(self, "to", judge.positions("", self.to))
         judge.optional("speed", self.speed, LIMIT, "mm/s")
         judge.number("wait", self.wait, PAUSE, "s")
+        judge.optional("tolerance", self.tolerance, EXTENT, "mm")
         judge.optional_name("name", self.name)
         judge.finish()
 
@@ -386,7 +391,7 @@ class Trace:
 Step: TypeAlias = Move | Line | Wait | Signal | Payload | PathStep | Transfer | Trace
 STEP_TYPES = (Move, Line, Wait, Signal, Payload, PathStep, Transfer, Trace)
 
-POINT_KEYS = ("speed", "wait", "name")
+POINT_KEYS = ("speed", "wait", "tolerance", "name")
 """The keys that a point may have besides the names of axes."""
 
 STEP_KEYS = {

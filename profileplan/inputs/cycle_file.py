@@ -275,6 +275,7 @@ def _waypoint(table: Table, kinds: Kinds) -> Waypoint | None:
             to,
             speed=table.optional_number("speed", Quantity.VELOCITY),
             wait=table.number("wait", Quantity.TIME, default=Waypoint.wait),
+            tolerance=table.optional_number("tolerance", Quantity.LENGTH),
             name=table.optional_text("name"),
         ),
         lambda: Waypoint(_harmless(to)),

@@ -67,7 +67,7 @@ MASS = Range(0, 1e6)
 
 AXIS_UNIT = "mm or deg"  # where a record does not know its axes' kinds
 
-RESERVED_WORDS = ("speed", "wait", "name", "t_s")
+RESERVED_WORDS = ("speed", "wait", "tolerance", "name", "t_s")
 """Columns of a waypoint file or of a setpoint table: no name for an axis or a signal."""
 
 ROWS_SHOWN = 20  # a slip is often repeated in every row of a table: beyond these it is counted

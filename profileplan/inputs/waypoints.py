@@ -163,9 +163,10 @@ def _point(row: Row, columns: Columns, faults: list[Fault]) -> Waypoint | None:
         return None
     speed = to.pop("speed", None)
     wait = to.pop("wait", 0.0)
+    tolerance = to.pop("tolerance", None)
     name = None if columns.name is None else cells[columns.name].strip() or None
     try:
-        return Waypoint(to, speed=speed, wait=wait, name=name, line=line)
+        return Waypoint(to, speed=speed, wait=wait, tolerance=tolerance, name=name, line=line)
     except InputError as error:
         for fault in error.faults:
             place = f"line {line}, column {fault.place}" if fault.place else f"line {line}"

@@ -11,6 +11,8 @@ has the closed forms.
 
 from __future__ import annotations
 
+import os
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from itertools import pairwise
 from typing import TYPE_CHECKING, NamedTuple
@@ -23,6 +25,8 @@ from profileplan.motion.spline import Group, Spline, inner_points
 from profileplan.motion.synchronisation import line_limits
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from profileplan.geometry.corridor import Corridor
     from profileplan.motion.polynomials import Array, Indices
     from profileplan.motion.rounds import Bounds, Price
@@ -57,6 +61,18 @@ REFITS, SETTLED = 6, 0.05
 HEADROOM = 2e-6
 """Share of time given up, so that the last round has room for its accuracy."""
 
+WINDOW = 48
+"""Regions of a part that is planned at a time."""
+
+HELD_SPANS = 2
+"""Spans beside a node on which the state there depends."""
+
+ACCEPTED = 1e-6
+"""Share by which limits may be passed before all is scaled at the end."""
+
+ROUNDING = 1e-12
+"""Share of the time given up for the rounding of the trajectory's coefficients."""
+
 INSIDE = 1e-6
 """Share of a region's size by which rounding may put a point outside before a motion is refused."""
 
@@ -88,31 +104,49 @@ class Stretch(NamedTuple):
     axis: int
 
 
-def least_time(corridor: Corridor, bounds: Bounds) -> Passage | None:
+def least_time(
+    corridor: Corridor, bounds: Bounds, *, progress: Callable[[float], None] | None = None
+) -> Passage | None:
     """Return the fastest motion found through a corridor, at rest at both ends.
+
+    A long corridor is planned in parts: first in parts that begin and end at rest, then in parts
+    from the middle of each of those to the middle of the next, which keep the state that the motion
+    has there. Parts do not depend on each other, so all cores are used, with the same result.
 
     Parameters
     ----------
     corridor : Corridor
     bounds : Bounds
         Limits of the corridor's axes.
+    progress : callable, optional
+        Called with the share of the work that is done.
 
     Returns
     -------
     Passage or None
         None where no motion was found: stop at every gate instead.
     """
-    first = _start(corridor, bounds)
-    if first is None:
-        return None
-    coarse = _descend(
-        Passage(first, (), settled=False), corridor, bounds, COARSE_ROUNDS, COARSE_GAIN
-    )
-    halves = np.full(coarse.spline.spans.size, 2)
-    finer = replace(coarse, spline=coarse.spline.split(halves))
-    fine = _descend(finer, corridor, bounds, FINE_ROUNDS, FINE_GAIN)
-    spline = _calmed(fine.spline, corridor, bounds)
-    return None if spline is None else replace(fine, spline=spline)
+    count = len(corridor.regions)
+    number = max(round(count / WINDOW), 1)
+    cuts = [count * part // number for part in range(number + 1)]
+    with ThreadPoolExecutor(os.cpu_count()) as pool:
+        rough: list[Spline] = []
+        sections = (_section(corridor, bounds, ends) for ends in pairwise(cuts))
+        for part in pool.map(lambda section: _coarse(*section), sections):
+            if part is None:
+                return None
+            rough.append(part)
+            if progress:
+                progress(0.5 * len(rough) / number)
+        whole = Spline.chain(rough)
+        middles = [(one + other) // 2 for one, other in pairwise(cuts)] if number > 1 else []
+        windows = list(pairwise([0, *middles, count]))
+        passages: list[Passage] = []
+        for passage in pool.map(lambda ends: _fine(whole, corridor, bounds, ends), windows):
+            passages.append(passage)
+            if progress:
+                progress(0.5 + 0.5 * len(passages) / len(windows))
+    return _joined(passages, corridor, bounds)
 
 
 def in_time(passage: Passage, corridor: Corridor, bounds: Bounds, *, duration: float) -> Spline:
@@ -178,6 +212,58 @@ def gains(passage: Passage) -> dict[tuple[str, int], float]:
         share = float(price.value.sum())
         found[name] = found.get(name, 0.0) + share * passage.spline.duration
     return found
+
+
+def _section(corridor: Corridor, bounds: Bounds, ends: tuple[int, int]) -> tuple[Corridor, Bounds]:
+    """Return some regions of a corridor, and the bounds there."""
+    return corridor.part(*ends), replace(bounds, speed=bounds.speed[slice(*ends)])
+
+
+def _coarse(corridor: Corridor, bounds: Bounds) -> Spline | None:
+    """Return a first motion, with few intervals, at rest at both ends."""
+    first = _start(corridor, bounds)
+    if first is None:
+        return None
+    free = np.ones(first.spans.size)
+    turns = _Turns(COARSE_ROUNDS, COARSE_GAIN)
+    return _descend(Passage(first, (), settled=False), corridor, bounds, free, turns).spline
+
+
+def _fine(whole: Spline, corridor: Corridor, bounds: Bounds, ends: tuple[int, int]) -> Passage:
+    """Return the motion from one region to another, with twice the intervals, and calm.
+
+    Where the motion goes on beyond, the state there is kept, and the spans that it depends on.
+    """
+    first, last = np.searchsorted(whole.region, ends)
+    spline = whole.part(int(first), int(last))
+    spline = spline.split(np.full(spline.spans.size, 2))
+    free = np.ones(spline.spans.size)
+    if ends[0] > 0:
+        free[:HELD_SPANS] = 0.0
+    if ends[1] < len(corridor.regions):
+        free[-HELD_SPANS:] = 0.0
+    own = _section(corridor, bounds, ends)
+    start = Passage(spline, (), settled=False)
+    found = _descend(start, *own, free, _Turns(FINE_ROUNDS, FINE_GAIN))
+    return replace(found, spline=_calmed(found.spline, *own, free))
+
+
+def _joined(passages: list[Passage], corridor: Corridor, bounds: Bounds) -> Passage | None:
+    """Return passages that follow each other as one, inside all limits."""
+    whole = Spline.chain([passage.spline for passage in passages])
+    prices, offset = [], 0
+    for passage in passages:
+        weight = passage.spline.duration / whole.duration
+        prices += [
+            price._replace(interval=price.interval + offset, value=price.value * weight)
+            for price in passage.prices
+        ]
+        offset += passage.spline.spans.size
+    # What the accuracy of the rounds has left over is scaled away.
+    kept = whole.scaled(max(1.0, rounds.overrun(whole, bounds) * (1 + ROUNDING)))
+    if not _inside(kept, corridor):
+        return None
+    return Passage(kept, tuple(prices), all(passage.settled for passage in passages))
 
 
 def _start(corridor: Corridor, bounds: Bounds) -> Spline | None:
@@ -263,18 +349,40 @@ def _refitted(spline: Spline, corridor: Corridor, bounds: Bounds) -> Spline | No
     return best
 
 
+class _Turns(NamedTuple):
+    """How many turns are made at most, and the gain that a step must promise."""
+
+    most: int
+    least_gain: float
+
+
+def _fitted(spline: Spline, corridor: Corridor, bounds: Bounds, free: Array) -> Spline | None:
+    """Return a motion inside all limits with a spline's spans, the free ones longer if need be."""
+    if free.all():
+        return _refitted(spline, corridor, bounds)
+    for _ in range(REFITS):
+        found = rounds.refit(spline, corridor, bounds).spline
+        if found is None:
+            return None
+        excess = found.spans[0] / spline.spans[0] - 1
+        if excess <= ACCEPTED:
+            return replace(found, spans=spline.spans)
+        spline = replace(spline, spans=spline.spans * (1 + 1.5 * excess * free))
+    return None
+
+
 def _descend(
-    passage: Passage, corridor: Corridor, bounds: Bounds, most: int, least_gain: float
+    passage: Passage, corridor: Corridor, bounds: Bounds, free: Array, turns: _Turns
 ) -> Passage:
     """Return the passage after turns of step and refit, each taken only if it shortens it."""
     spline, trust, prices = passage.spline, FIRST_TRUST, passage.prices
-    for _ in range(most):
-        outcome = rounds.step(spline, corridor, bounds, trust=trust)
-        promised, reached = least_gain, 0.0
+    for _ in range(turns.most):
+        outcome = rounds.step(spline, corridor, bounds, trust=trust * free)
+        promised, reached = turns.least_gain, 0.0
         if outcome.spline is not None:
             promised = 1 - outcome.spline.duration / spline.duration
             prices = outcome.prices
-            found = _refitted(outcome.spline, corridor, bounds)
+            found = _fitted(outcome.spline, corridor, bounds, free)
             if found is not None and found.duration < spline.duration:
                 reached = 1 - found.duration / spline.duration
                 spline = found
@@ -282,23 +390,20 @@ def _descend(
             trust = min(1.6 * trust, WIDEST_TRUST)
         elif reached < 0.35 * promised:
             trust *= 0.4
-        if promised < least_gain or 0 < reached < 0.5 * least_gain:
+        if promised < turns.least_gain or 0 < reached < 0.5 * turns.least_gain:
             return Passage(spline, prices, settled=True)
         if trust < LEAST_TRUST:
             break
     return Passage(spline, prices, settled=False)
 
 
-def _calmed(spline: Spline, corridor: Corridor, bounds: Bounds) -> Spline | None:
+def _calmed(spline: Spline, corridor: Corridor, bounds: Bounds, free: Array) -> Spline:
     """Return a motion as fast, but for the headroom, without needless jerk and wandering."""
-    roomy = spline.scaled(1 + HEADROOM)
-    for found in (rounds.calm(roomy, corridor, bounds).spline, roomy):
-        if found is None:
-            continue
-        kept = found.scaled(max(1.0, rounds.overrun(found, bounds) * (1 + 1e-12)))
-        if kept.duration < spline.duration * (1 + 10 * HEADROOM) and _inside(kept, corridor):
-            return kept
-    return None
+    roomy = replace(spline, spans=spline.spans * (1 + HEADROOM * free))
+    found = rounds.calm(roomy, corridor, bounds).spline
+    if found is None or rounds.overrun(found, bounds) > 1 + ACCEPTED:
+        return spline
+    return found if _inside(found, corridor) else spline
 
 
 def _inside(spline: Spline, corridor: Corridor) -> bool:

@@ -8,7 +8,7 @@ found, or none that is faster, the run stops at every point, which is always pos
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 
@@ -20,7 +20,7 @@ from profileplan.motion.synchronisation import line_durations, line_limits, line
 from profileplan.motion.trajectory import ORDER, Trajectory
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Callable, Mapping
 
     from profileplan.geometry.corridor import Corridor
     from profileplan.motion.least_time import Passage, Stretch
@@ -135,8 +135,21 @@ class Run:
         return max(self.duration - float(durations.sum()), 0.0) / NUDGE
 
 
+class Near(NamedTuple):
+    """How near a motion stays: tolerances [mm, deg], and how near it passes each point [mm]."""
+
+    tolerance: float
+    angle_tolerance: float
+    at_points: Array
+
+
 def plan_run(
-    way: Way, limits: Limits, *, linear: Flags, tolerance: float, angle_tolerance: float
+    way: Way,
+    limits: Limits,
+    *,
+    linear: Flags,
+    near: Near,
+    progress: Callable[[float], None] | None = None,
 ) -> Run:
     """Plan the motion from one stop to the next.
 
@@ -146,10 +159,11 @@ def plan_run(
         Neighbouring points differ.
     limits : Limits of (d,) arrays
     linear : (d,) array of bool
-    tolerance : float [mm]
-        Above 0.
-    angle_tolerance : float [deg]
-        Where it is 0 and a rotary axis moves, the run stops at every point.
+    near : Near
+        The tolerance is above 0. Where the angle tolerance is 0 and a rotary axis moves, the run
+        stops at every point.
+    progress : callable, optional
+        Called with the share of the work that is done.
     """
     moving = np.flatnonzero(np.ptp(way.points, axis=0) > 0)
     velocity, acceleration, deceleration, jerk = np.array(limits)[:, moving]
@@ -158,19 +172,20 @@ def plan_run(
     )
     corridor = tubes(
         way.points[:, moving],
-        tolerance=tolerance * (1 - INSET),
+        tolerance=near.tolerance * (1 - INSET),
         linear=linear[moving].tolist(),
-        angle_tolerance=angle_tolerance * (1 - INSET),
+        angle_tolerance=near.angle_tolerance * (1 - INSET),
+        gate_tolerance=near.at_points * (1 - INSET),
     )
     stops = Run(way, limits, linear, None, corridor, bounds, 0.0, 0.0)
     _, durations = stops._lines()  # noqa: SLF001 - of this module
     duration = float(durations.sum())
     if len(way.points) <= 2:
         return Run(way, limits, linear, None, corridor, bounds, duration, duration)
-    least = search.lower_bound(corridor, bounds, tolerance=tolerance)
+    least = search.lower_bound(corridor, bounds, tolerance=near.tolerance)
     passage = None
-    if angle_tolerance > 0 or linear[moving].all():
-        passage = search.least_time(corridor, bounds)
+    if near.angle_tolerance > 0 or linear[moving].all():
+        passage = search.least_time(corridor, bounds, progress=progress)
     if passage is None or passage.spline.duration > duration:
         return Run(way, limits, linear, None, corridor, bounds, duration, min(least, duration))
     found = passage.spline.duration

@@ -151,20 +151,20 @@ def overrun(spline: Spline, bounds: Bounds) -> float:
     return least
 
 
-def step(spline: Spline, corridor: Corridor, bounds: Bounds, *, trust: float) -> Outcome:
+def step(spline: Spline, corridor: Corridor, bounds: Bounds, *, trust: Array) -> Outcome:
     """Return the motion of least time under limits linear about a spline.
 
     Parameters
     ----------
-    trust : float
-        Greatest relative change of a span.
+    trust : (N,) array
+        Greatest relative change of each span.
     """
     spans = spline.spans
     program = _Program(spline, times=spans.size)
     program.cost[program.time] = spans / spline.duration
     columns = program.time.start + np.arange(spans.size)
     for sign in (1.0, -1.0):
-        program.rows(np.full(spans.size, trust))
+        program.rows(trust)
         program.entries(np.arange(spans.size), columns, np.full(spans.size, sign))
     program.constrain(corridor, bounds)
     return program.solve()

@@ -24,6 +24,8 @@ import numpy as np
 from profileplan.motion.trajectory import ORDER, Trajectory
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
     from profileplan.motion.polynomials import Array, Indices
 
 
@@ -186,22 +188,64 @@ class Spline:
         """Return the same positions in another time."""
         return Spline(self.spans * factor, self.region, self.groups)
 
+    def nodes(self) -> tuple[Array, Array, Array]:
+        """Return positions, velocities and accelerations at all nodes: three (N + 1, d) arrays.
+
+        Where an acceleration jumps, that after the node.
+        """
+        states = self.states()
+        return (
+            np.concatenate([states[0], _end(states, self.spans, 0)]),
+            np.concatenate([states[1], _end(states, self.spans, 1)]),
+            np.concatenate([2 * states[2], _end(states, self.spans, 2)]),
+        )
+
+    def part(self, first: int, last: int) -> Spline:
+        """Return the motion from one node to another; its regions are counted from its first."""
+        position, velocity, acceleration = (state[first : last + 1] for state in self.nodes())
+        region = self.region[first:last] - self.region[first]
+        states = (position, velocity, acceleration)
+        return from_states(states, self.spans[first:last], region, self._degrees)
+
+    @classmethod
+    def chain(cls, parts: Sequence[Spline]) -> Spline:
+        """Return motions one after the other: each begins in the state in which the last ended."""
+        nodes = [part.nodes() for part in parts]
+        joined = [
+            np.concatenate([*(own[order][:-1] for own in nodes), nodes[-1][order][-1:]])
+            for order in range(3)
+        ]
+        regions, offset = [], 0
+        for part in parts:
+            regions.append(part.region + offset)
+            offset += int(part.region[-1]) + 1
+        return from_states(
+            (joined[0], joined[1], joined[2]),
+            np.concatenate([part.spans for part in parts]),
+            np.concatenate(regions),
+            parts[0]._degrees,  # noqa: SLF001 - the same class
+        )
+
+    @property
+    def _degrees(self) -> list[tuple[int, Indices]]:
+        return [(group.degree, group.axes) for group in self.groups]
+
     def split(self, parts: Indices) -> Spline:
         """Return the same motion with interval i cut into ``parts[i]`` equal ones."""
-        states = self.states()
+        cubics = self.states()
         interval = np.repeat(np.arange(self.spans.size), parts)
         first = np.cumsum(parts) - parts
         span = (self.spans / parts)[interval]
         local = (np.arange(interval.size) - first[interval]) * span
         cut = []
         for order in range(3):
-            value = np.zeros((interval.size, states[0].shape[1]))
+            value = np.zeros((interval.size, cubics[0].shape[1]))
             for power in range(3 - order, -1, -1):
                 falling = np.prod(np.arange(power + 1, power + order + 1))
-                value = value * local[:, np.newaxis] + falling * states[power + order][interval]
-            cut.append(np.concatenate([value, _end(states, self.spans, order)]))
-        degrees = [(group.degree, group.axes) for group in self.groups]
-        return from_states((cut[0], cut[1], cut[2]), span, self.region[interval], degrees)
+                value = value * local[:, np.newaxis] + falling * cubics[power + order][interval]
+            cut.append(np.concatenate([value, _end(cubics, self.spans, order)]))
+        states = (cut[0], cut[1], cut[2])
+        return from_states(states, span, self.region[interval], self._degrees)
 
     def states(self) -> tuple[Array, Array, Array, Array]:
         """Return the coefficients of every interval's cubic, ascending: four (N, d) arrays."""

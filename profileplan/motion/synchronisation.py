@@ -32,20 +32,30 @@ if TYPE_CHECKING:
 
 
 class Way(NamedTuple):
-    """A path: points (m + 1, d) [mm], speed limits (m,) [mm/s], rests (m + 1,) [s]."""
+    """A path: points (m + 1, d) [mm], speed limits (m,) [mm/s], rests (m + 1,) [s].
+
+    ``near``, (m + 1,) [mm]: how near the motion passes each point; 0: it stops there.
+    """
 
     points: Array
     speeds: Array
     waits: Array
+    near: Array
 
     def parts(self) -> Iterator[Way]:
-        """Yield the parts between the rests, without points that stand where the last one did."""
-        stops = [0, *(np.flatnonzero(self.waits[1:-1] > 0) + 1), len(self.points) - 1]
+        """Yield the parts between the stops, without points that stand where the last one did."""
+        stopping = (self.waits > 0) | (self.near <= 0)
+        stops = [0, *(np.flatnonzero(stopping[1:-1]) + 1), len(self.points) - 1]
         for first, last in pairwise(stops):
             points = self.points[first : last + 1]
             moves = np.any(np.diff(points, axis=0) != 0, axis=1)
             kept = np.concatenate([[True], moves])
-            yield Way(points[kept], self.speeds[first:last][moves], self.waits[[first, last]])
+            yield Way(
+                points[kept],
+                self.speeds[first:last][moves],
+                self.waits[[first, last]],
+                self.near[first : last + 1][kept],
+            )
 
 
 def move_duration(distance: Array, limits: Limits, law: Law) -> Array:
