@@ -443,12 +443,14 @@ def _most(shares: dict[str, float]) -> str:
 
 def _held(step: PlannedStep) -> str:
     """Return what limits a step, axis by axis, the strongest first."""
-    by_axis: dict[str | None, list[str]] = {}
+    by_axis: dict[str, list[str]] = {}
     for limit in step.limited_by:
-        by_axis.setdefault(limit.axis, []).append(SHORT.get(limit.quantity, limit.quantity))
+        word = SHORT.get(limit.quantity, limit.quantity)
+        by_axis.setdefault(limit.axis or _plain(limit.quantity), []).append(
+            word if limit.axis else ""
+        )
     return "; ".join(
-        f"{axis} {', '.join(quantities)}" if axis else _plain(quantities[0])
-        for axis, quantities in by_axis.items()
+        f"{name} {', '.join(quantities)}".strip() for name, quantities in by_axis.items()
     )
 
 

@@ -118,20 +118,23 @@ def _step(plan: Plan, step: PlannedStep) -> dict[str, object]:
         "duration_s": step.duration,
         "least_time_s": step.least_time,
         "limited_by": [_limit(limit) for limit in step.limited_by],
-        **_stretches(step),
+        **_corridor(step),
         "peaks": _peaks(plan, step),
     }
 
 
-def _stretches(step: PlannedStep) -> dict[str, object]:
-    """Return what holds a step back where, for a step through a corridor."""
+def _corridor(step: PlannedStep) -> dict[str, object]:
+    """Return what holds a step back where, and what loosening helps, for one through a corridor."""
     if not step.stretches:
         return {}
     return {
+        "gains": [
+            {**_limit(limit), "saved_by_10_percent_s": limit.saves} for limit in step.limited_by
+        ],
         "stretches": [
             {"start_s": held.start, "end_s": held.end, "limited_by": _limit(held.limit)}
             for held in step.stretches
-        ]
+        ],
     }
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -19,7 +20,7 @@ if TYPE_CHECKING:
 ROUNDING = 1e-9
 """Share of a radius, or degree: what a dozen operations may lose."""
 
-WAYS = 2001
+WAYS = 501
 """Shares of the way at which brute force looks."""
 
 SEEDS = st.integers(0, 2**32 - 1)
@@ -54,7 +55,7 @@ def by_brute_force(regions: Regions, positions: Array) -> Array:
         rows = np.einsum("mkd,md->mk", regions.rows, positions) + regions.rows_way * share
         failed = (rows - regions.bound).max(axis=1, initial=-np.inf)
         excess = np.minimum(excess, np.maximum(out, failed))
-    return np.maximum(excess, 0.0)
+    return np.asarray(np.maximum(excess, 0.0))
 
 
 @pytest.mark.parametrize(
@@ -117,10 +118,10 @@ def test_a_gate_lies_in_both_of_its_regions(seed: int) -> None:
         away *= (np.minimum(near, 2.0) / np.linalg.norm(away, axis=1))[:, np.newaxis]
         turned = random.uniform(-3, 3, (4, 1))
         inside = points[1:-1] + 0.999 * np.concatenate([away, turned], axis=1)
-        assert_array_equal(corridor.gates.excess(inside), 0.0)
+        assert_allclose(corridor.gates.excess(inside), 0.0, atol=ROUNDING)
         for first in (0, 1):
             regions = corridor.regions.at(slice(first, first + 4))
-            assert_array_equal(regions.excess(inside), 0.0)
+            assert_allclose(regions.excess(inside), 0.0, atol=ROUNDING)
         outside = points[1:-1] + 1.001 * np.concatenate([away, 0 * turned], axis=1)
         assert (corridor.gates.excess(outside) > 0).all()
 
@@ -130,10 +131,11 @@ def test_a_rotary_axis_turns_in_proportion_to_the_way() -> None:
     points = np.array([[0.0, 0.0], [100.0, 90.0]])
     tube = tubes(points, tolerance=2.0, linear=(True, False), angle_tolerance=1.0).regions
     # 2 mm of way may lie between the motion and its place, in which c turns by 1.8 degrees.
-    allowed = np.array([[50.0, 45.0], [50.0, 47.7], [50.0, 42.3], [-2.0, -1.0], [100.0, 89.0]])
-    assert_array_equal([tube.excess(own[np.newaxis])[0] for own in allowed], 0.0)
-    refused = np.array([[50.0, 47.9], [50.0, 42.1], [-2.0, -1.1], [100.0, 91.1], [-2.1, 0.0]])
-    assert all(tube.excess(own[np.newaxis])[0] > 0 for own in refused)
+    allowed = [[50.0, 45.0], [50.0, 47.7], [50.0, 42.3], [-1.9, -0.9], [100.0, 89.0]]
+    assert_array_equal([tube.excess(np.array([own]))[0] for own in allowed], 0.0)
+    refused = [[50.0, 47.9], [50.0, 42.1], [100.0, 91.1], [-2.1, 0.0], [0.0, -1.1]]
+    found = [float(tube.excess(np.array([own]))[0]) for own in refused]
+    assert min(found) > 0, dict(zip(map(str, refused), found, strict=True))
 
 
 CORNER: list[tuple[float, ...]] = [(0.0, 0.0), (100.0, 0.0), (100.0, 100.0)]
@@ -166,23 +168,22 @@ def test_a_corner_may_be_passed_anywhere_in_its_gate(nodes: tuple[tuple[float, .
         ((0.0, 0.0), (100.0, 100.0)),
         ((0.0, 0.0), (101.2, 0.0), (100.0, 0.0), (100.0, 100.0)),
         ((0.0, 0.0), (50.0, 1.1), (100.0, 0.0), (100.0, 100.0)),
-        ((0.0, 0.0), (100.0, 0.0)),
+        ((0.0, 0.0), (98.0, 0.0)),
         ((0.0, 0.0), (100.0, 0.0), (100.0, 50.0), (98.9, 50.0), (100.0, 100.0)),
     ],
-    ids=["corner cut", "straight across", "beyond", "beside", "not all", "beside later"],
+    ids=["corner cut", "straight across", "beyond", "beside", "corner not reached", "beside later"],
 )
 def test_what_leaves_the_tolerance_is_found(nodes: tuple[tuple[float, ...], ...]) -> None:
     """A judge that never objects is none. The end alone is judged elsewhere: by arrival."""
     found = plane(CORNER).follow(pieces(*nodes))
-    whole = found.region[-1] == 1 and np.abs(np.array(nodes[-1]) - CORNER[-1]).max() < 1e-9
-    assert not kept(plane(CORNER), pieces(*nodes)) or not whole, found
+    assert not kept(plane(CORNER), pieces(*nodes)), found
 
 
 def test_how_far_out_is_told_as_a_share_of_the_tolerance() -> None:
     """The value of a finding: distance over tolerance, for the motion and for each corner."""
-    motion = pieces((0.0, 0.0), (50.0, 0.5), (99.4, 0.0), (100.0, 2.0), (100.0, 100.0))
+    motion = pieces((0.0, 0.0), (50.0, 0.5), (99.4, 0.0), (100.0, 100.0))
     found = plane(CORNER, tolerance=2.0).follow(motion)
-    assert_allclose(found.share.max(), 0.3, atol=0.06)
+    assert_allclose(found.share.max(), 0.3, rtol=1e-12)
     assert_allclose(found.gates, [0.3], atol=1e-12)
     out = plane(CORNER, tolerance=0.25).follow(motion)
     assert_allclose(out.share[:2], [2.0, 2.0], rtol=1e-12)
@@ -206,7 +207,7 @@ def test_the_path_itself_is_always_inside(points: list[tuple[float, ...]], betwe
     """Also where regions lie upon each other, so that a position does not tell which is meant."""
     corner = np.array(points)
     shares = np.linspace(0, 1, between + 1)[:-1, np.newaxis]
-    inner = [one + shares * (other - one) for one, other in zip(corner, corner[1:], strict=False)]
+    inner = [one + shares * (other - one) for one, other in pairwise(corner)]
     nodes = np.concatenate([*inner, corner[-1:]])
     hulls = np.stack([nodes[:-1], nodes[1:]], axis=1)
     corridor = plane(points, tolerance=5.0)
@@ -214,7 +215,7 @@ def test_the_path_itself_is_always_inside(points: list[tuple[float, ...]], betwe
 
 
 @given(seed=SEEDS)
-@settings(max_examples=60)
+@settings(max_examples=40)
 def test_a_motion_near_the_path_is_inside(seed: int) -> None:
     """Corners on a coarse grid: many paths turn back, cross themselves or run beside themselves."""
     random = np.random.default_rng(seed)
@@ -225,7 +226,7 @@ def test_a_motion_near_the_path_is_inside(seed: int) -> None:
         return
     tolerance = float(random.choice([0.5, 3.0, 12.0]))
     nodes = [points[0]]
-    for one, other in zip(points, points[1:], strict=False):
+    for one, other in pairwise(points):
         shares = np.sort(random.uniform(0, 1, (random.integers(0, 4), 1)), axis=0)
         nodes += [*(one + shares * (other - one)), other]
     motion = np.array(nodes)

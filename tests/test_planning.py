@@ -280,7 +280,7 @@ def test_wrong_arguments_are_told() -> None:
 
 def test_progress_reports_every_step() -> None:
     """A long job shows how far it is."""
-    seen: list[tuple[int, int]] = []
+    seen: list[tuple[float, int]] = []
     pp.plan(
         loader(),
         cycle(pp.Wait(1.0), pp.Wait(2.0)),

@@ -122,6 +122,26 @@ def test_roots_agree_with_those_of_a_companion_matrix(degree: int) -> None:
 
 
 @pytest.mark.parametrize("length", LENGTHS)
+@pytest.mark.parametrize(
+    ("row", "expected"),
+    [
+        ([0.0, 1.0], [0]),
+        ([-1.0, 1.0], [1]),
+        ([0.0, 1.0, -1.0], [0, 1]),
+        ([0.0, 1.0, -3.0, 2.0], [0, 0.5, 1]),
+        ([0.0, -1.0, 4.0, -5.0, 2.0], [0, 0.5]),
+    ],
+)
+def test_a_simple_root_at_an_end_is_found(
+    row: list[float], expected: list[float], length: float
+) -> None:
+    """There an acceleration begins or ends, and a part with another limit with it."""
+    found = roots_of(row, length)
+    for root in expected:
+        assert_allclose(np.abs(found - root).min(), 0, atol=1e-15, err_msg=f"{root}: {found}")
+
+
+@pytest.mark.parametrize("length", LENGTHS)
 def test_a_double_root_at_an_end_gives_no_root_inside(length: float) -> None:
     """The velocity of the quintic law vanishes at its ends only, and rounding adds nothing."""
     found = roots_of(QUINTIC_VELOCITY, length)

@@ -282,8 +282,7 @@ def _guess(corridor: Corridor, bounds: Bounds) -> Spline:
     limits = Limits(bounds.velocity, bounds.acceleration, bounds.deceleration, bounds.jerk)
     own = line_limits(way, limits, linear=bounds.linear.tolist(), speed=bounds.speed)
     moves = LAWS["trapezoidal"].solve(np.ones(len(way)), own)
-    passing = (np.abs(way) / bounds.velocity).max(axis=-1)
-    few = (len(way) >= LONG_CHAIN) & (moves.duration > PASSED_SOON * passing)
+    few = (len(way) >= LONG_CHAIN) & (moves.duration > PASSED_SOON / np.asarray(own.velocity))
     spans = [
         _spans(phases, FEW_INTERVALS if short else INTERVALS)
         for phases, short in zip(moves.phases, few, strict=True)
