@@ -121,7 +121,7 @@ def test_roots_agree_with_those_of_a_companion_matrix(degree: int) -> None:
         assert_allclose(roots_of(list(row)), inside, rtol=0, atol=1e-9, err_msg=f"{row}")
 
 
-@pytest.mark.parametrize("length", LENGTHS)
+@pytest.mark.parametrize("length", [2.0**-30, 1.0, 2.0**20])  # scaling by them rounds nothing
 @pytest.mark.parametrize(
     ("row", "expected"),
     [
