@@ -36,6 +36,9 @@ of a position between two pieces."""
 PATH_TOLERANCE = 1e-6
 """Distance [mm or deg] by which a path's tolerance may be passed."""
 
+REST_TOLERANCE = 1e-9
+"""Time [s] by which a rest at a point may be too short."""
+
 TIME_ROUNDING = 8 * np.finfo(np.float64).eps
 """Rounding of the time of a break, as a share of the duration of its step."""
 
@@ -49,14 +52,7 @@ QUANTITIES = {"velocity": 1, "acceleration": 2, "deceleration": 2, "jerk": 3}
 """The limits of an axis, in the order of its record, and the derivatives that they bound."""
 
 
-SHARED = (
-    *QUANTITIES,
-    "speed",
-    "cycle time",
-    "tolerance",
-    "tolerance at corners",
-    "angle tolerance",
-)
+SHARED = (*QUANTITIES, "speed", "cycle time", "tolerance")
 """Checks whose limits are used up in part."""
 
 
@@ -310,6 +306,7 @@ def _paths(schedule: Schedule) -> Iterator[Finding]:
     """Judge points and speeds of straight lines and paths, the worst of all steps."""
     missed: list[_Worst] = []
     speeds: list[tuple[float, _Worst, float]] = []
+    rests: list[_Worst] = []
     linear = schedule.job.machine.linear
     reached = max(map(_nearness, schedule.job.machine.axes))
     for index, asked in enumerate(schedule.job.cycle.steps):
@@ -318,16 +315,15 @@ def _paths(schedule: Schedule) -> Iterator[Finding]:
         step = schedule.steps[index]
         points, bounds = _points(schedule, index, asked)
         if isinstance(asked, PathStep) and asked.tolerance:
-            near = _near_points(asked)
-            followed = _followed(schedule, index, asked, near)
-            yield from _tolerances(step, asked, followed, near)
-            # Where two segments meet a piece may count to either: the faster speed is allowed.
-            ahead = np.minimum(followed.region + 1, bounds.size - 1)
-            bound = np.maximum(bounds[followed.region], bounds[ahead])
+            followed = _followed(schedule, index, asked, bounds)
+            yield _tolerances(step, asked, followed)
+            bound = bounds[followed.region]
         else:
             distance, leads_to = _passes(step.trajectory, points, reached)
             missed.append(_Worst(distance, step.end, step.name))
             bound = bounds[np.minimum(leads_to, len(points) - 1)]
+        if isinstance(asked, PathStep) and any(point.wait for point in asked.points):
+            rests.append(_Worst(_rest_missing(step, asked, points, reached), step.end, step.name))
         speed = step.trajectory.speeds(linear)
         share = speed.value / bound
         worst = int(share.argmax())
@@ -335,11 +331,31 @@ def _paths(schedule: Schedule) -> Iterator[Finding]:
             time = step.start + float(speed.time[worst])
             found = _Worst(float(speed.value[worst]), time, step.name)
             speeds.append((float(share[worst]), found, float(bound[worst])))
+    if rests:
+        yield _upper(_worse(*rests), "rest at points", REST_TOLERANCE, "s")
     if missed:
         yield _upper(_worse(*missed), "waypoints", reached, "mm or deg")
     if speeds:
         _, found, limit = max(speeds, key=lambda speed: speed[0])
         yield _upper(found, "speed", limit, "mm/s")
+
+
+def _rest_missing(step: ScheduledStep, asked: PathStep, points: Array, reached: float) -> float:
+    """Return the most that a path's motion lacks of a rest at a point that asks for one [s]."""
+    motion = step.trajectory
+    still = np.abs(motion.coefficients[:, 1:]).max(axis=(1, 2)) == 0
+    at = motion.coefficients[:, 0]
+    lacking, piece = 0.0, 0
+    for point, wanted in zip(points, asked.points, strict=True):
+        if not wanted.wait:
+            continue
+        rest = 0.0
+        while piece < still.size and rest < wanted.wait - REST_TOLERANCE:
+            if still[piece] and np.abs(at[piece] - point).max() <= reached:
+                rest += float(motion.durations[piece])
+            piece += 1
+        lacking = max(lacking, wanted.wait - rest)
+    return lacking
 
 
 def _near_points(asked: PathStep) -> Array:
@@ -348,8 +364,8 @@ def _near_points(asked: PathStep) -> Array:
     return np.clip(own, PATH_TOLERANCE, asked.tolerance)
 
 
-def _followed(schedule: Schedule, index: int, asked: PathStep, near: Array) -> Followed:
-    """Follow a path step's motion through the tubes round its segments."""
+def _followed(schedule: Schedule, index: int, asked: PathStep, speeds: Array) -> Followed:
+    """Follow a path step's motion through the tubes round its segments, at speeds allowed there."""
     start = schedule.job.positions()[index]
     points = np.array([start, *schedule.job.points(index)])
     # A point that stands where the last one did makes a segment of no length: a ball.
@@ -358,32 +374,22 @@ def _followed(schedule: Schedule, index: int, asked: PathStep, near: Array) -> F
         tolerance=asked.tolerance,
         linear=schedule.job.machine.linear,
         angle_tolerance=asked.angle_tolerance,
-        gate_tolerance=near,
+        gate_tolerance=_near_points(asked),
     )
-    return corridor.follow(schedule.steps[index].trajectory.hulls())
+    trajectory = schedule.steps[index].trajectory
+    found = trajectory.speeds(schedule.job.machine.linear).value
+    load = None if np.isinf(speeds).all() else found[:, np.newaxis] / speeds
+    return corridor.follow(trajectory.hulls(), load)
 
 
-def _tolerances(
-    step: ScheduledStep, asked: PathStep, followed: Followed, near: Array
-) -> Iterator[Finding]:
-    """Judge a path's tolerance both ways: motion to path, and the path's corners to the motion."""
-    out = int(followed.share.argmax())
-    ends = step.trajectory.breaks[1:] + step.start
-    away = _Worst(float(followed.share[out]) * asked.tolerance, float(ends[out]), step.name)
-    cases = [(away, "tolerance", asked.tolerance)]
-    if near.size:
-        corner = int(followed.gates.argmax())
-        passed = float(followed.gates[corner] * near[corner])
-        cases.append((_Worst(passed, step.end, step.name), "tolerance at corners", near[corner]))
-    for worst, name, limit in cases:
-        finding = _upper(worst, name, limit, "mm")
-        yield replace(finding, ok=finding.margin >= -PATH_TOLERANCE)
-    turned = int(followed.failed.argmax())
-    over = float(followed.failed[turned])
-    if np.isfinite(over):
-        worst = _Worst(asked.angle_tolerance + over, float(ends[turned]), step.name)
-        finding = _upper(worst, "angle tolerance", asked.angle_tolerance, "deg")
-        yield replace(finding, ok=finding.margin >= -PATH_TOLERANCE)
+def _tolerances(step: ScheduledStep, asked: PathStep, followed: Followed) -> Finding:
+    """Judge a path's tolerance both ways: motion to path, and the path's corners to the motion.
+
+    Rotary axes count by their own tolerance, and points by theirs: the share that is used of it.
+    """
+    worst = _Worst(followed.out * asked.tolerance, step.end, step.name)
+    finding = _upper(worst, "tolerance", asked.tolerance, "mm")
+    return replace(finding, ok=finding.margin >= -PATH_TOLERANCE)
 
 
 def _points(schedule: Schedule, index: int, asked: Line | PathStep) -> tuple[Array, Array]:

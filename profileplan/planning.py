@@ -392,12 +392,13 @@ def _tolerant(task: _Task, way: Way, step: PathStep) -> _Motion:
     from profileplan.motion.paths import Near, plan_run  # noqa: PLC0415
 
     parts = list(way.parts())
+    travel = np.array([axis.travel for axis in task.job.machine.axes]).T
     runs = [
         plan_run(
             part,
             task.limits,
             linear=np.array(task.job.machine.linear),
-            near=Near(step.tolerance, step.angle_tolerance, part.near[1:-1]),
+            near=Near(step.tolerance, step.angle_tolerance, part.near[1:-1], travel),
             progress=task.part_progress(number, len(parts)),
         )
         for number, part in enumerate(parts)

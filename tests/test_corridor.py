@@ -41,9 +41,7 @@ def pieces(*nodes: tuple[float, ...]) -> Array:
 
 def kept(corridor: Corridor, hulls: Array) -> bool:
     """Return whether a motion stays in the regions and passes every gate."""
-    found = corridor.follow(hulls)
-    inside = (found.share <= 1 + ROUNDING).all() and (found.failed <= ROUNDING).all()
-    return bool(inside and (found.gates <= 1 + ROUNDING).all())
+    return corridor.follow(hulls).out <= 1 + ROUNDING
 
 
 def by_brute_force(regions: Regions, positions: Array) -> Array:
@@ -78,7 +76,7 @@ def test_a_tube_holds_what_some_share_of_the_way_explains(
     found, expected = regions.excess(positions), by_brute_force(regions, positions)
     steepest = np.abs(np.diff(points, axis=0)).sum(axis=1).max() * max(1.0, 1 / tolerance)
     missed = steepest / (WAYS - 1)
-    assert_array_equal(found[expected == 0], 0.0, "inside by brute force")
+    assert_allclose(found[expected == 0], 0.0, atol=ROUNDING, err_msg="inside by brute force")
     assert (found[expected > missed] > 0).all(), "outside by brute force"
     assert (found >= expected - missed).all(), "no share of the way is better than the best"
 
@@ -183,10 +181,9 @@ def test_how_far_out_is_told_as_a_share_of_the_tolerance() -> None:
     """The value of a finding: distance over tolerance, for the motion and for each corner."""
     motion = pieces((0.0, 0.0), (50.0, 0.5), (99.4, 0.0), (100.0, 100.0))
     found = plane(CORNER, tolerance=2.0).follow(motion)
-    assert_allclose(found.share.max(), 0.3, rtol=1e-12)
-    assert_allclose(found.gates, [0.3], atol=1e-12)
-    out = plane(CORNER, tolerance=0.25).follow(motion)
-    assert_allclose(out.share[:2], [2.0, 2.0], rtol=1e-12)
+    assert_allclose(found.out, 0.3, rtol=1e-12)
+    outside = plane(CORNER, tolerance=0.25).follow(motion)
+    assert_allclose(outside.out, 2.4, rtol=1e-12)
 
 
 TURNING_BACK = [

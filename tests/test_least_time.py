@@ -1,4 +1,4 @@
-"""Paths with a tolerance: how soon, inside what, and what holds them back.
+"""Paths with a tolerance: how soon, and inside what.
 
 Two plans of the same problem, seen from another side, differ by the search's own gap: ``GAP``.
 """
@@ -7,144 +7,39 @@ from __future__ import annotations
 
 import json
 from dataclasses import replace
-from functools import cache
 from itertools import pairwise
 from pathlib import Path
-from typing import TYPE_CHECKING, TypeAlias
+from typing import TYPE_CHECKING
 
 import numpy as np
 import pytest
-import shapely
 from numpy.testing import assert_allclose, assert_array_equal, assert_array_less
 
 import profileplan as pp
+from portal import (
+    GAP,
+    PORTAL,
+    SLACK,
+    STEPPED,
+    assert_within,
+    failures,
+    job,
+    machine,
+    planned,
+    raised,
+    spoilt,
+    through,
+)
 from profileplan.geometry.corridor import tubes
 from profileplan.motion.least_time import lower_bound
 from profileplan.motion.rounds import Bounds
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
-
+    from portal import Points
     from profileplan.motion.polynomials import Array
-
-    Points: TypeAlias = Sequence[tuple[float, ...]]
-
-GAP = 5e-3
-"""Share of a duration by which two searches for the same least time may differ."""
-
-SLACK = 1e-6
-"""Distance [mm or deg] by which a tolerance may be passed."""
-
-SAMPLES = 4001
-
-NAMES = "xyzc"
 
 BEST_FOUND = 1.005
 """Greatest duration over the best found by an earlier search on a finer grid: the project's aim."""
-
-
-def machine(
-    velocity: Sequence[float],
-    acceleration: Sequence[float],
-    jerk: Sequence[float | None] | None,
-    *,
-    slowing: float | None = None,
-    rotary: str = "",
-) -> pp.Machine:
-    """Return a machine with much room; ``slowing`` is deceleration over acceleration."""
-    axes = [
-        pp.Axis(
-            name,
-            kind="rotary" if name in rotary else "linear",
-            travel=(-1e5, 1e5),
-            velocity=own_velocity,
-            acceleration=own_acceleration,
-            deceleration=None if slowing is None else slowing * own_acceleration,
-            jerk=own_jerk,
-        )
-        for name, own_velocity, own_acceleration, own_jerk in zip(
-            NAMES, velocity, acceleration, jerk or [None] * len(velocity), strict=False
-        )
-    ]
-    return pp.Machine(name="portal", axes=tuple(axes))
-
-
-PORTAL = machine([2000, 1500], [12000, 9000], [200000, 150000])
-STEPPED: Points = ((0, 0), (100, 0), (100, 100), (300, 50))
-
-
-def job(points: Points, step: pp.PathStep) -> pp.Cycle:
-    """Return a cycle of one path, with its first point as the start."""
-    return pp.Cycle(steps=(step,), start=dict(zip(NAMES, map(float, points[0]), strict=False)))
-
-
-def through(points: Points) -> tuple[pp.Waypoint, ...]:
-    """Return the points of a path, without the first."""
-    return tuple(
-        pp.Waypoint(dict(zip(NAMES, map(float, point), strict=False))) for point in points[1:]
-    )
-
-
-@cache
-def planned(
-    points: Points = STEPPED,
-    tolerance: float = 2.0,
-    of: pp.Machine = PORTAL,
-    speed: float | None = None,
-    time: float | None = None,
-) -> pp.Plan:
-    """Return the plan of a path; many tests ask for the same."""
-    step = pp.PathStep(through(points), tolerance=tolerance, speed=speed, time=time)
-    return pp.plan(of, job(points, step))
-
-
-def failures(schedule: pp.Plan) -> list[str]:
-    """Return the findings that are not met, as text."""
-    return [
-        f"{f.check} of {f.axis}: {f.value!r} of {f.limit!r} {f.unit}"
-        for f in pp.check(schedule)
-        if not f.ok
-    ]
-
-
-def spoilt(plan: pp.Plan, trajectory: pp.Trajectory) -> list[str]:
-    """Return what is found when another motion is played than the one planned."""
-    step = replace(plan.steps[0], trajectory=trajectory)
-    return failures(pp.Plan(plan.job, (step,), ()))
-
-
-def to_segments(positions: Array, points: Array) -> Array:
-    """Return the distances from positions to every segment: (n, m)."""
-    found = []
-    for one, other in pairwise(points):
-        way = other - one
-        square = float(way @ way)
-        share = np.clip((positions - one) @ way / square, 0, 1) if square else 0 * positions[:, 0]
-        found.append(np.linalg.norm(positions - one - share[:, np.newaxis] * way, axis=1))
-    return np.stack(found, axis=1)
-
-
-def assert_within(plan: pp.Plan, points: Points, tolerance: float) -> None:
-    """Compare motion and path both ways, on dense samples; in the plane by shapely.
-
-    Between two samples the motion leaves its chord by at most a dt² / 8, which is allowed for at
-    the corners; the motion's own distance needs no allowance, for samples lie on it.
-    """
-    drawn = np.array(points, dtype=np.float64)
-    times = np.linspace(0, plan.duration, SAMPLES)
-    sampled = plan.trajectory.at(times)[:, : drawn.shape[1]]
-    if drawn.shape[1] == 2:
-        line = shapely.LineString(drawn)
-        away = shapely.distance(line, shapely.points(sampled))
-        missed = shapely.distance(shapely.LineString(sampled), shapely.points(drawn))
-    else:
-        away = to_segments(sampled, drawn).min(axis=1)
-        missed = to_segments(drawn, sampled).min(axis=1)
-    assert away.max() <= tolerance + SLACK, f"motion {away.max()} mm from the path"
-    peaks = plan.trajectory.peaks
-    most = np.maximum(peaks.acceleration.value, peaks.deceleration.value)
-    chord = float(np.linalg.norm(most)) * times[1] ** 2 / 8
-    assert missed.max() <= tolerance + SLACK + chord, f"corner {missed.max()} mm from the motion"
 
 
 # Closed forms
@@ -201,6 +96,7 @@ PROBLEMS: dict[str, tuple[Points, float, pp.Machine]] = {
     "to and fro": (((0, 0), (100, 0), (0, 0), (100, 0)), 2.0, PORTAL),
     "a little back": (((0, 0), (100, 0), (99, 0), (199, 0)), 5.0, PORTAL),
     "wide": (STEPPED, 60.0, PORTAL),
+    "small": (((0, 0), (10, 0), (10, 10), (0, 10)), 8.0, PORTAL),
     "no jerk limit": (STEPPED, 2.0, machine([2000, 1500], [12000, 9000], None)),
     "one jerk limit": (STEPPED, 2.0, machine([2000, 1500], [12000, 9000], [None, 150000])),
 }
@@ -242,6 +138,15 @@ def test_points_that_repeat_change_nothing() -> None:
     assert_allclose(plan.duration, planned(((0, 0), (100, 0), (100, 100))).duration, rtol=1e-12)
 
 
+def test_a_path_smaller_than_its_tolerance_is_right() -> None:
+    """Hardly any motion is needed, and at the end none, to be near all of it."""
+    points = ((0, 0), (1, 0), (1, 1), (0, 0))
+    plan = planned(points, 5.0)
+    assert failures(plan) == []
+    assert_within(plan, points, 5.0)
+    assert plan.duration < planned(points, 0.0).duration
+
+
 def test_the_motion_stays_in_the_travel() -> None:
     """A path along the end of the travel: only one side of its tube can be used."""
     axes = tuple(replace(axis, travel=(0.0, 2000.0)) for axis in PORTAL.axes)
@@ -251,14 +156,6 @@ def test_the_motion_stays_in_the_travel() -> None:
 
 
 # Never more time for more room
-
-
-def raised(axis: int, quantity: str, factor: float) -> pp.Machine:
-    """Return the portal with one limit of one axis raised, and all others kept."""
-    axes = [replace(own, deceleration=own.acceleration) for own in PORTAL.axes]
-    limits = axes[axis].limits._asdict()
-    axes[axis] = replace(axes[axis], **{quantity: factor * limits[quantity]})
-    return replace(PORTAL, axes=tuple(axes))
 
 
 @pytest.mark.parametrize(("axis", "factor"), [(0, 1.1), (1, 3.0)])
@@ -355,11 +252,12 @@ def along_circle(turn: float, count: int = 20000) -> float:
 
     def steepest(angle: float, square: float, direction: int) -> float:
         sine, cosine = np.sin(angle), np.cos(angle)
-        return min(
+        bounds = [
             (1 - direction * np.sign(by_growth) * by_square * square) / abs(by_growth)
             for by_growth, by_square in ((-sine, -cosine), (cosine, -sine))
             if abs(by_growth) > 1e-12
-        )
+        ]
+        return float(min(bounds))
 
     def sweep(start: float, direction: int) -> Array:
         squares = np.zeros(count + 1)
@@ -471,186 +369,6 @@ def test_a_rotary_axis_alone_turns_back_within_its_tolerance() -> None:
     assert spoilt(plan, still) != [], "a table that never turns was not found"
 
 
-# Speeds, waits and stops
-
-
-def test_the_speed_along_the_path_is_kept() -> None:
-    """Counted along the linear axes together."""
-    plan = planned(speed=400.0)
-    assert failures(plan) == []
-    velocity = plan.trajectory.at(np.linspace(0, plan.duration, SAMPLES), 1)
-    speed = np.linalg.norm(velocity, axis=1)
-    assert speed.max() <= 400.0 * (1 + 1e-9)
-    assert speed.max() > 399.0, "it is used"
-    assert (None, "speed") in {(held.axis, held.quantity) for held in plan.steps[0].limited_by}
-
-
-LEGS: Points = ((0, 0), (300, 0), (600, 100))
-
-
-def with_speeds(*speeds: float) -> pp.Plan:
-    """Return the plan of two legs with a speed limit each."""
-    points = tuple(replace(p, speed=s) for p, s in zip(through(LEGS), speeds, strict=True))
-    return pp.plan(PORTAL, job(LEGS, pp.PathStep(points, tolerance=2.0)))
-
-
-@pytest.mark.parametrize("speeds", [(100.0, 500.0), (500.0, 100.0)])
-def test_each_leg_keeps_its_own_speed(speeds: tuple[float, float]) -> None:
-    """A slow leg before or after a fast one."""
-    plan = with_speeds(*speeds)
-    assert failures(plan) == []
-    times = np.linspace(0, plan.duration, SAMPLES)
-    speed = np.linalg.norm(plan.trajectory.at(times, 1), axis=1)
-    x = plan.trajectory.at(times)[:, 0]
-    for limit, leg in zip(speeds, (x < 298.0, x > 302.0), strict=True):
-        assert speed[leg].max() <= limit * (1 + 1e-9)
-        assert speed[leg].max() > 0.99 * limit, "it is used"
-
-
-def test_too_fast_a_leg_is_found() -> None:
-    """The check reads the legs' speeds by itself."""
-    slow, fast = with_speeds(100.0, 500.0), with_speeds(500.0, 500.0)
-    assert any("speed" in failure for failure in spoilt(slow, fast.steps[0].trajectory))
-
-
-def waiting(wait: float) -> pp.Plan:
-    """Return the plan of a path that waits at its second corner."""
-    points = list(through(STEPPED))
-    points[1] = replace(points[1], wait=wait)
-    return pp.plan(PORTAL, job(STEPPED, pp.PathStep(tuple(points), tolerance=2.0)))
-
-
-def test_a_wait_is_spent_at_rest_on_its_point() -> None:
-    """Exactly there, and so long; the other corner is rounded."""
-    plan = waiting(0.3)
-    assert failures(plan) == []
-    off = np.abs(plan.trajectory.at(plan.trajectory.breaks[:-1]) - [100.0, 100.0]).max(axis=1)
-    piece = int(np.flatnonzero(plan.trajectory.durations >= 0.3 - 1e-12)[0])
-    assert off[piece] < 1e-9
-    assert_allclose(plan.trajectory.durations[piece], 0.3, rtol=1e-14)
-    assert_array_equal(plan.trajectory.coefficients[piece, 1:], 0.0)
-    split = planned(STEPPED[:3]).duration + planned(STEPPED[2:]).duration
-    assert_allclose(plan.duration, split + 0.3, rtol=1e-9)
-
-
-def test_a_wait_left_out_is_found() -> None:
-    """The check reads the points' waits by itself."""
-    assert spoilt(waiting(0.3), planned().steps[0].trajectory) != []
-
-
-def test_a_point_of_no_tolerance_is_stopped_at() -> None:
-    """The others keep theirs."""
-    points = list(through(STEPPED))
-    points[1] = replace(points[1], tolerance=0.0)
-    plan = pp.plan(PORTAL, job(STEPPED, pp.PathStep(tuple(points), tolerance=2.0)))
-    assert failures(plan) == []
-    split = planned(STEPPED[:3]).duration + planned(STEPPED[2:]).duration
-    assert_allclose(plan.duration, split, rtol=1e-9)
-    assert spoilt(plan, planned().steps[0].trajectory) != []
-
-
-def test_a_point_may_be_passed_nearer_than_the_rest() -> None:
-    """Within its own tolerance, and in a time between those of the two tolerances."""
-    points = list(through(STEPPED))
-    points[1] = replace(points[1], tolerance=0.1)
-    plan = pp.plan(PORTAL, job(STEPPED, pp.PathStep(tuple(points), tolerance=2.0)))
-    assert failures(plan) == []
-    sampled = plan.trajectory.at(np.linspace(0, plan.duration, 20001))
-    assert np.linalg.norm(sampled - [100.0, 100.0], axis=1).min() <= 0.1 + 0.02
-    assert planned().duration * (1 - GAP) <= plan.duration
-    assert plan.duration <= planned(STEPPED, 0.1).duration * (1 + GAP)
-
-
-# A time asked for
-
-
-def roughness(trajectory: pp.Trajectory) -> float:
-    """Return the mean square of the jerks over their limits, exactly: constant in each piece."""
-    jerk = 6 * trajectory.coefficients[:, 3] / [axis.limits.jerk for axis in PORTAL.axes]
-    return float((jerk**2).sum(axis=1) @ trajectory.durations / trajectory.duration)
-
-
-@pytest.mark.parametrize("factor", [1.02, 1.5, 6.0])
-def test_a_time_asked_for_is_taken_exactly_and_calmly(factor: float) -> None:
-    """No rougher than the fastest motion played more slowly."""
-    time = factor * planned().duration
-    plan = planned(time=time)
-    assert_allclose(plan.duration, time, rtol=1e-12)
-    assert failures(plan) == []
-    assert_within(plan, STEPPED, 2.0)
-    stretched = planned().trajectory.stretched(time)
-    assert roughness(plan.trajectory) <= roughness(stretched) * (1 + 1e-6)
-    assert [(held.axis, held.quantity) for held in plan.steps[0].limited_by] == [(None, "time")]
-
-
-def test_too_short_a_time_is_refused_with_the_least() -> None:
-    """The message says what would be possible, and that is possible."""
-    with pytest.raises(
-        pp.PlanError, match=r"steps\[1\]\.time: 0\.1 s asked for; the least time"
-    ) as e:
-        planned(time=0.1)
-    told = float(str(e.value).split()[-2])
-    assert_allclose(told, planned().duration, atol=1e-6)
-    assert failures(planned(time=told)) == []
-
-
-def test_a_time_holds_for_runs_and_waits_together() -> None:
-    """The waits stay as long as they are; the runs are slowed down."""
-    points = list(through(STEPPED))
-    points[1] = replace(points[1], wait=0.3)
-    plan = pp.plan(PORTAL, job(STEPPED, pp.PathStep(tuple(points), tolerance=2.0, time=2.0)))
-    assert_allclose(plan.duration, 2.0, rtol=1e-12)
-    assert failures(plan) == []
-    still = (plan.trajectory.coefficients[:, 1:] == 0).all(axis=(1, 2))
-    assert_allclose(plan.trajectory.durations[still].sum(), 0.3, rtol=1e-9)
-
-
-# What holds it back
-
-
-@pytest.mark.parametrize("speed", [None, 400.0])
-def test_stretches_cover_the_motion(speed: float | None) -> None:
-    """Each ends where the next begins, and names what the machine or the step has."""
-    step = planned(speed=speed).steps[0]
-    assert_allclose(step.stretches[0].start, 0.0, atol=1e-12)
-    assert_allclose(step.stretches[-1].end, step.duration, rtol=1e-5)
-    for one, other in pairwise(step.stretches):
-        assert_allclose(one.end, other.start, rtol=1e-12)
-        assert one.limit != other.limit
-    assert all(held.start < held.end for held in step.stretches)
-    of_axes = {"velocity", "acceleration", "deceleration", "jerk"}
-    allowed = {(axis, q) for axis in "xy" for q in of_axes} | {(None, "tolerance")}
-    allowed |= {(None, "speed")} if speed else set()
-    assert {(held.limit.axis, held.limit.quantity) for held in step.stretches} <= allowed
-
-
-def test_stretches_leave_out_the_waits() -> None:
-    """While it waits nothing but the wait holds a path back."""
-    plan = waiting(0.3)
-    stretches = plan.steps[0].stretches
-    gaps = sorted(other.start - one.end for one, other in pairwise(stretches))
-    assert_allclose(gaps, [0.0] * (len(gaps) - 1) + [0.3], rtol=1e-5, atol=1e-9)
-
-
-def test_what_a_limit_saves_agrees_with_planning_again() -> None:
-    """A tenth more of it, where that saves more than the search's own accuracy."""
-    base = planned()
-    compared = 0
-    for held in base.steps[0].limited_by:
-        if held.saves < 2e-3 * base.duration:
-            continue
-        compared += 1
-        if held.axis is None:
-            assert held.quantity == "tolerance"
-            other = planned(tolerance=2.2)
-        else:
-            other = planned(of=raised(NAMES.index(held.axis), held.quantity, 1.1))
-        saved = base.duration - other.duration
-        message = f"{held.axis} {held.quantity}: {held.saves} s told, {saved} s saved"
-        assert 0.5 * held.saves <= saved <= 2 * held.saves, message
-    assert compared >= 3
-
-
 def test_no_motion_beats_the_lower_bound() -> None:
     """To 100, a little back, and on to 199: within 5 mm no axis need ever turn back."""
     points = np.array([[0.0], [100.0], [99.0], [199.0]])
@@ -666,39 +384,6 @@ def test_no_motion_beats_the_lower_bound() -> None:
     corridor = tubes(points, tolerance=5.0, linear=[True], angle_tolerance=0.5)
     straight = 2 * np.sqrt(199 / 12000)
     assert lower_bound(corridor, bounds, tolerance=5.0) <= straight * (1 + 1e-12)
-
-
-# The judge
-
-
-def test_a_shifted_motion_is_found() -> None:
-    """Twice the tolerance beside the path."""
-    plan = planned()
-    coefficients = plan.trajectory.coefficients.copy()
-    coefficients[:, 0, 1] += 4.0
-    shifted = replace(plan.trajectory, coefficients=coefficients)
-    assert any(f.startswith("tolerance of") for f in spoilt(plan, shifted))
-
-
-def test_a_cut_corner_is_found() -> None:
-    """A motion made for three times the tolerance."""
-    wide = planned(tolerance=6.0).trajectory
-    found = spoilt(planned(), wide)
-    assert any(f.startswith("tolerance at corners") for f in found)
-    assert any(f.startswith("tolerance of") for f in found)
-
-
-def test_a_corner_left_out_is_found() -> None:
-    """Straight on to the last point: on time, within all limits, and not on the path."""
-    short = planned((STEPPED[0], STEPPED[1], STEPPED[3])).trajectory
-    assert any(f.startswith("tolerance") for f in spoilt(planned(), short))
-
-
-def test_a_spike_not_reached_is_found() -> None:
-    """A motion along the same line that turns back too early is never beside the path."""
-    plan = planned(((0, 0), (100, 0), (0, 0)))
-    early = planned(((0, 0), (90, 0), (0, 0))).trajectory
-    assert any(f.startswith("tolerance at corners") for f in spoilt(plan, early))
 
 
 # Many problems

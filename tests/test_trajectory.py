@@ -36,7 +36,8 @@ def trajectories(
     count, width = draw(st.integers(1, pieces)), draw(st.integers(1, axes))
     exponents = st.floats(-decades, decades).map(lambda exponent: round(exponent, 3))
     durations = 10 ** np.array(draw(st.lists(exponents, min_size=count, max_size=count)))
-    unit = draw(arrays.arrays(np.float64, (count, ORDER, width), elements=NUMBERS))
+    shape = (count, ORDER, width)
+    unit = draw(arrays.arrays(np.float64, shape, elements=NUMBERS, fill=st.nothing()))
     for piece in range(count):
         unit[piece, draw(st.integers(1, ORDER)) :] = 0.0
     powers = durations[:, np.newaxis] ** np.arange(ORDER)
@@ -148,18 +149,36 @@ def test_no_sample_lies_beyond_the_extremes(trajectory: Trajectory, derivative: 
 def test_an_extreme_is_taken_at_its_time(trajectory: Trajectory) -> None:
     """The time of a peak is where the reader of a report will look."""
     for derivative in range(4):
-        slope = bound(trajectory, derivative + 1).max() * trajectory.duration
-        atol = ROUNDING * (bound(trajectory, derivative).max() + slope)
-        for peak in trajectory.extremes(derivative):
-            for axis, (value, time) in enumerate(zip(*peak, strict=True)):
-                # At a break either side may have the extreme.
-                local = time - trajectory.breaks[:-1]
-                near = (local >= -1e-9) & (local <= trajectory.durations + 1e-9)
-                there = [
-                    np.polynomial.Polynomial(piece[:, axis]).deriv(derivative)(at)
-                    for piece, at in zip(trajectory.coefficients[near], local[near], strict=True)
-                ]
-                assert_allclose(np.abs(np.array(there) - value).min(), 0, atol=atol)
+        for extreme in trajectory.extremes(derivative):
+            for axis, (value, time) in enumerate(zip(*extreme, strict=True)):
+                assert_taken(trajectory, axis, derivative, value=value, time=time)
+
+
+@given(trajectories(decades=2))
+def test_a_peak_is_taken_at_its_time(trajectory: Trajectory) -> None:
+    """The same for the magnitudes; an axis without a deceleration, say, has it nowhere."""
+    for derivative, peak in zip((1, 2, 2, 3), trajectory.peaks, strict=True):
+        for axis, (value, time) in enumerate(zip(*peak, strict=True)):
+            if value > 0:
+                assert_taken(trajectory, axis, derivative, value=value, time=time, sign=-1)
+
+
+def assert_taken(  # noqa: PLR0913 - which curve, and what is said of it
+    trajectory: Trajectory, axis: int, derivative: int, *, value: float, time: float, sign: int = 1
+) -> None:
+    """Find a value, or with sign -1 its opposite, at a time; at a break on either side."""
+    local = time - trajectory.breaks[:-1]
+    near = (local >= -1e-9) & (local <= trajectory.durations + 1e-9)
+    there = np.array(
+        [
+            np.polynomial.Polynomial(piece[:, axis]).deriv(derivative)(at)
+            for piece, at in zip(trajectory.coefficients[near], local[near], strict=True)
+        ]
+    )
+    slope = bound(trajectory, derivative + 1).max() * trajectory.duration
+    atol = ROUNDING * (bound(trajectory, derivative).max() + slope)
+    missed = np.minimum(np.abs(there - value), np.abs(there - sign * value)).min()
+    assert_allclose(missed, 0, atol=atol, err_msg=f"axis {axis}, derivative {derivative}")
 
 
 @given(trajectories(decades=2))
@@ -246,6 +265,18 @@ def test_a_smooth_motion_has_no_jump_in_velocity() -> None:
     assert_array_equal(motion.jumps(1).value, [0.0])
     assert_array_equal(motion.jumps(2).value, [16.0])
     assert_array_equal(motion.jumps(2).time, [1.0])
+
+
+@pytest.mark.parametrize(("piece", "time"), [(0, 1.0), (1, 0.0)])
+def test_a_motion_that_begins_or_ends_in_full_swing_jumps(piece: int, time: float) -> None:
+    """Half of a move: the velocity is there at once, or is still there at the end."""
+    motion = travel()
+    only = slice(piece, piece + 1)
+    half = Trajectory(("x",), motion.durations[only], motion.coefficients[only])
+    assert_array_equal(half.jumps(0).value, [0.0])
+    for derivative in (1, 2):
+        assert_array_equal(half.jumps(derivative).value, [8.0])
+    assert_array_equal(half.jumps(1).time, [time])
 
 
 def test_outside_its_time_the_motion_is_at_rest() -> None:

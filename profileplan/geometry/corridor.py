@@ -87,8 +87,8 @@ class Regions:
         way = self.rows_way
         # Each row allows ways on one side of where it is just met.
         met = np.divide(-along, way, out=np.zeros_like(along), where=way != 0)
-        least = np.where(way < 0, met, 0.0).max(axis=-1, initial=0.0)
-        most = np.where(way > 0, met, 1.0).min(axis=-1, initial=1.0)
+        least = np.clip(np.where(way < 0, met, 0.0).max(axis=-1, initial=0.0), 0.0, 1.0)
+        most = np.clip(np.where(way > 0, met, 1.0).min(axis=-1, initial=1.0), 0.0, 1.0)
         apart = np.einsum("mqd,md->mq", self.ball, positions) - self.centre
         square = (self.ball_way**2).sum(axis=-1)
         nearest = np.divide(
@@ -126,66 +126,88 @@ class Corridor:
             self.points[first : last + 1],
         )
 
-    def follow(self, hulls: Array) -> Followed:
-        """Follow a motion through the regions, piece by piece.
+    def follow(self, hulls: Array, load: Array | None = None) -> Followed:
+        """Follow a motion through the regions, piece by piece, in the way that suits it best.
 
-        A piece stays in the region of the one before while its hull is inside; else it goes on to
-        the next, if an end of a piece has been inside the gate between.
+        A piece is in the region of the piece before, or in a later one if the node between is in
+        the gates on the way. Regions overlap, and a path may turn back on itself, so there are
+        several ways to count pieces to regions. Of those that stay inside the one of the least
+        greatest load is taken; if there is none, the one that is least far outside.
 
         Parameters
         ----------
         hulls : (n, k, d) array
             Points whose hull holds each piece, its ends first and last.
+        load : (n, m) array, optional
+            What it costs to count a piece to a region, beside being outside.
         """
-        count, last = len(hulls), len(self.regions) - 1
-        found = Followed(
-            np.empty(count), np.empty(count), np.empty(count, dtype=np.intp), np.full(last, np.inf)
+        costs = np.zeros((len(hulls), len(self.regions))) if load is None else load
+        inside = self._followed(hulls, costs, most=1 + INSIDE)
+        return (
+            inside
+            or self._followed(hulls, costs, most=np.inf)
+            or Followed(np.inf, np.zeros(len(hulls), dtype=np.intp))
         )
-        now = 0
+
+    def _followed(self, hulls: Array, load: Array, *, most: float) -> Followed | None:
+        """Return the best way through, of those that are nowhere farther out than ``most``."""
+        last = len(self.regions) - 1
+        states = {0: _State(0.0, 0.0, 0)}
+        came: list[dict[int, _State]] = []
         for piece, hull in enumerate(hulls):
-            reach = self._reach(now, hull)
-            self._pass(now, hull, found.gates)
-            while not _inside(reach) and now < last and found.gates[now] <= 1 + INSIDE:
-                ahead = self._reach(now + 1, hull)
-                if not _inside(ahead) and ahead[0] >= reach[0]:
+            came.append(self._entered(states, hull[0], most))
+            states = {}
+            for region, state in came[-1].items():
+                out = max(state.out, self._out(self.regions, region, hull))
+                if out <= most:
+                    cost = max(state.load, float(load[piece, region]))
+                    states[region] = _State(cost if np.isfinite(most) else out, out, region)
+        final = self._entered(states, hulls[-1, -1], most)
+        if last not in final:
+            return None
+        region, path = final[last].origin, []
+        for entered in reversed(came):
+            path.append(region)
+            region = entered[region].origin
+        return Followed(final[last].out, np.array(path[::-1], dtype=np.intp))
+
+    def _entered(self, states: dict[int, _State], node: Array, most: float) -> dict[int, _State]:
+        """Return the regions that a motion can be in after a node, the best way for each."""
+        entered = {region: state._replace(origin=region) for region, state in states.items()}
+        for region in sorted(states):
+            state, ahead = states[region]._replace(origin=region), region
+            while ahead < len(self.gates):
+                out = max(state.out, self._out(self.gates, ahead, node[np.newaxis]))
+                state = state._replace(out=out, load=state.load if np.isfinite(most) else out)
+                ahead += 1
+                if out > most or (ahead in entered and entered[ahead][:2] <= state[:2]):
                     break
-                now, reach = now + 1, ahead
-                self._pass(now, hull, found.gates)
-            found.share[piece], found.failed[piece] = reach
-            found.region[piece] = now
-        for gate in range(now, last):
-            # What was never left behind may have been passed all the same.
-            self._pass(gate, hulls[-1], found.gates)
-        return found
+                entered[ahead] = state
+        return entered
 
-    def _reach(self, region: int, hull: Array) -> tuple[float, float]:
-        """Return how far out in a region the points of a hull are."""
-        sets = self.regions.at(np.full(len(hull), region))
-        share, failed = sets.reach(hull)
-        return float(share.max()), float(failed.max(initial=-np.inf))
+    def _out(self, sets: Regions, number: int, points: Array) -> float:
+        """Return how far out of a set points are: 1 at its border, more outside."""
+        share, failed = sets.at(np.full(len(points), number)).reach(points)
+        return float(np.maximum(share, 1 + failed).max())
 
-    def _pass(self, gate: int, hull: Array, gates: Array) -> None:
-        """Note how near the ends of a piece come to the middle of a gate, as a share of it."""
-        if gate < len(gates):
-            share, _ = self.gates.at(np.full(2, gate)).reach(hull[[0, -1]])
-            gates[gate] = min(gates[gate], float(share.min()))
+
+class _State(NamedTuple):
+    """The best way to be in a region so far: its greatest load, how far out, whence it came."""
+
+    load: float
+    out: float
+    origin: int
 
 
 class Followed(NamedTuple):
-    """A motion in a corridor: for each of n pieces its region, and how far out in it the piece is.
+    """A motion in a corridor.
 
-    share, failed : (n,) arrays, as of ``Regions.reach``; region : (n,) array of int; gates : array,
-    how near each gate's middle was passed, as a share of its radius.
+    out : how far out its worst piece or gate is, 1 at the border; region : (n,) array of int, the
+    region that each piece is counted to.
     """
 
-    share: Array
-    failed: Array
+    out: float
     region: Indices
-    gates: Array
-
-
-def _inside(reach: tuple[float, float]) -> bool:
-    return reach[0] <= 1 + INSIDE and reach[1] <= INSIDE
 
 
 def tubes(
@@ -195,6 +217,7 @@ def tubes(
     linear: Sequence[bool],
     angle_tolerance: float,
     gate_tolerance: Array | None = None,
+    travel: Array | None = None,
 ) -> Corridor:
     """Return the corridor of all motions within a tolerance of straight lines through points.
 
@@ -215,9 +238,11 @@ def tubes(
         Above 0 where a rotary axis moves.
     gate_tolerance : (m - 1,) array, optional [mm]
         How near the motion passes each inner point; default: the tolerance.
+    travel : (2, d) array, optional [mm or deg]
+        Lowest and highest positions, which the motion does not leave inside its tolerance.
     """
     members = np.flatnonzero(linear)
-    turning = np.flatnonzero(~np.asarray(linear))
+    turning = np.flatnonzero(~np.asarray(linear, dtype=bool))
     count, axes = len(points) - 1, points.shape[1]
     step = np.diff(points, axis=0)
     pick = np.zeros((members.size, axes))
@@ -225,6 +250,12 @@ def tubes(
     turn = np.zeros((2 * turning.size, axes))
     turn[np.arange(turning.size), turning] = 1.0
     turn[turning.size + np.arange(turning.size), turning] = -1.0
+    low, high = np.full((2, axes), [[-np.inf], [np.inf]]) if travel is None else travel
+    room = np.where(linear, tolerance, angle_tolerance)
+    above = np.flatnonzero(points.max(axis=0) + room > high)
+    below = np.flatnonzero(points.min(axis=0) - room < low)
+    ends = np.concatenate([np.eye(axes)[above], -np.eye(axes)[below]])
+    end_bound = np.concatenate([high[above], -low[below]])
     near = np.full(count - 1, tolerance)
     if gate_tolerance is not None:
         near = np.minimum(near, gate_tolerance)
@@ -235,9 +266,12 @@ def tubes(
             ball=pick / radius[:, np.newaxis, np.newaxis],
             ball_way=-way[:, members] / radius[:, np.newaxis],
             centre=at[:, members] / radius[:, np.newaxis],
-            rows=np.broadcast_to(turn, (size, *turn.shape)),
-            rows_way=-way @ turn.T,
-            bound=angle_tolerance + at @ turn.T,
+            rows=np.broadcast_to(np.concatenate([turn, ends]), (size, len(turn) + len(ends), axes)),
+            rows_way=np.concatenate([-way @ turn.T, np.zeros((size, len(ends)))], axis=1),
+            bound=np.concatenate(
+                [angle_tolerance + at @ turn.T, np.broadcast_to(end_bound, (size, len(ends)))],
+                axis=1,
+            ),
         )
 
     inner = points[1:-1]

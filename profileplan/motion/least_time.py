@@ -126,9 +126,30 @@ def least_time(
     Passage or None
         None where no motion was found: stop at every gate instead.
     """
-    count = len(corridor.regions)
-    number = max(round(count / WINDOW), 1)
-    cuts = [count * part // number for part in range(number + 1)]
+    gentle = np.minimum(bounds.acceleration, bounds.deceleration)
+    found = _searched(corridor, bounds, progress)
+    if (bounds.acceleration == bounds.deceleration).all():
+        return found
+    # Which limit counts depends on the direction, and its search may end in a worse place than one
+    # that begins with the motion under the smaller limit for both.
+    both = replace(bounds, acceleration=gentle, deceleration=gentle)
+    other = _searched(corridor, both, progress)
+    candidates = [found, other]
+    if other is not None:
+        ends = _windows(corridor)
+        candidates.append(
+            _joined([_fine(other.spline, corridor, bounds, own) for own in ends], corridor, bounds)
+        )
+    motions = [passage for passage in candidates if passage is not None]
+    return min(motions, key=lambda passage: passage.spline.duration, default=None)
+
+
+def _searched(
+    corridor: Corridor, bounds: Bounds, progress: Callable[[float], None] | None
+) -> Passage | None:
+    """Return the fastest motion found by one search."""
+    cuts, windows = _cuts(corridor), _windows(corridor)
+    number = len(cuts) - 1
     with ThreadPoolExecutor(os.cpu_count()) as pool:
         rough: list[Spline] = []
         sections = (_section(corridor, bounds, ends) for ends in pairwise(cuts))
@@ -139,8 +160,6 @@ def least_time(
             if progress:
                 progress(0.5 * len(rough) / number)
         whole = Spline.chain(rough)
-        middles = [(one + other) // 2 for one, other in pairwise(cuts)] if number > 1 else []
-        windows = list(pairwise([0, *middles, count]))
         passages: list[Passage] = []
         for passage in pool.map(lambda ends: _fine(whole, corridor, bounds, ends), windows):
             passages.append(passage)
@@ -173,17 +192,35 @@ def lower_bound(corridor: Corridor, bounds: Bounds, *, tolerance: float) -> floa
     law = LAWS["trapezoidal"]
     least = law.solve(corridor.points[-1] - corridor.points[0], limits).duration.max()
     for axis in np.flatnonzero(bounds.linear):
-        own = corridor.points[:, axis]
-        steps = np.diff(own)
-        own = own[np.concatenate([[True], steps != 0])]
-        turns = np.flatnonzero(np.diff(np.sign(np.diff(own)))) + 1
-        ends = own[np.concatenate([[0], turns, [own.size - 1]])]
-        room = np.full(ends.size, tolerance)
-        room[0] = room[-1] = 0.0
-        way = np.maximum(np.abs(np.diff(ends)) - room[1:] - room[:-1], 0.0)
+        way = _forced_ways(corridor.points[:, axis], tolerance)
         single = Limits(*np.array(free)[:, axis])
         least = max(least, float(law.solve(way, single).duration.sum()))
     return float(least)
+
+
+def _forced_ways(positions: Array, tolerance: float) -> Array:
+    """Return the distances between the standstills that a tolerance forces on an axis [mm].
+
+    A turn is forced where the way to the next one is longer than both tolerances; a shorter way
+    back need not be gone, so both its ends are passed over.
+    """
+    steps = np.diff(positions)
+    moving = positions[np.concatenate([[True], steps != 0])]
+    if moving.size < 2:
+        return np.zeros(1)
+    turns = np.flatnonzero(np.diff(np.sign(np.diff(moving)))) + 1
+    ends = [0.0, *moving[turns] - moving[0], moving[-1] - moving[0]]
+    while len(ends) > 2:
+        room = np.full(len(ends), tolerance)
+        room[0] = room[-1] = 0.0
+        way: Array = np.abs(np.diff(ends)) - room[1:] - room[:-1]
+        shortest = int(way.argmin())
+        if way[shortest] > 0:
+            return way
+        inner = {shortest, shortest + 1} - {0, len(ends) - 1}
+        ends = [end for index, end in enumerate(ends) if index not in inner]
+    whole: Array = np.abs(np.diff(ends))
+    return whole
 
 
 def stretches(passage: Passage) -> tuple[Stretch, ...]:
@@ -212,6 +249,20 @@ def gains(passage: Passage) -> dict[tuple[str, int], float]:
         share = float(price.value.sum())
         found[name] = found.get(name, 0.0) + share * passage.spline.duration
     return found
+
+
+def _cuts(corridor: Corridor) -> list[int]:
+    """Return the regions at which a long corridor is cut into parts that begin and end at rest."""
+    count = len(corridor.regions)
+    number = max(round(count / WINDOW), 1)
+    return [count * part // number for part in range(number + 1)]
+
+
+def _windows(corridor: Corridor) -> list[tuple[int, int]]:
+    """Return the regions from the middle of one such part to the middle of the next."""
+    cuts = _cuts(corridor)
+    middles = [(one + other) // 2 for one, other in pairwise(cuts)] if len(cuts) > 2 else []
+    return list(pairwise([0, *middles, cuts[-1]]))
 
 
 def _section(corridor: Corridor, bounds: Bounds, ends: tuple[int, int]) -> tuple[Corridor, Bounds]:
@@ -303,16 +354,13 @@ def _guess(corridor: Corridor, bounds: Bounds) -> Spline:
 
 
 def _degrees(bounds: Bounds) -> list[tuple[int, Indices]]:
-    """Return the columns of the axes with jerk limit (degree 3) and of those without (2).
+    """Return degree 2, whose acceleration jumps, where no axis has a jerk limit, else 3.
 
-    The speed along the path needs one degree for all axes that it counts: then a linear axis
-    without jerk limit has acceleration that is continuous where another's must be.
+    One for all axes: only then can they move in proportion, as a thin tube asks. The acceleration
+    of an axis without jerk limit then changes within an interval, which may become short.
     """
-    smooth = np.isfinite(bounds.jerk)
-    if np.isfinite(bounds.speed).any() and smooth[bounds.linear].any():
-        smooth = smooth | bounds.linear
-    pairs = ((3, np.flatnonzero(smooth)), (2, np.flatnonzero(~smooth)))
-    return [(degree, axes) for degree, axes in pairs if axes.size]
+    degree = 3 if np.isfinite(bounds.jerk).any() else 2
+    return [(degree, np.arange(bounds.jerk.size))]
 
 
 def _spans(phases: Array, count: int) -> Array:

@@ -7,7 +7,7 @@ found, or none that is faster, the run stops at every point, which is always pos
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
@@ -55,8 +55,8 @@ class Run:
     limits: Limits
     linear: Flags
     passage: Passage | None
-    corridor: Corridor
-    bounds: Bounds
+    corridor: Corridor | None
+    bounds: Bounds | None
     duration: float
     least: float
 
@@ -75,7 +75,7 @@ class Run:
         if len(self.way.points) == 1:
             return Trajectory.rest(axes, self.way.points[0], duration)
         slower = max(duration / self.duration, 1.0)
-        if self.passage is None:
+        if self.passage is None or self.corridor is None or self.bounds is None:
             own, durations = self._lines()
             law = LAWS["trapezoidal"]
             return lines(axes, self.way.points, own, law=law, durations=durations * slower)
@@ -118,6 +118,10 @@ class Run:
             held._replace(axis=int(columns[held.axis])) for held in search.stretches(self.passage)
         )
 
+    def durations(self) -> Array:
+        """Return the least times of straight lines from point to point, with a stop at each [s]."""
+        return self._lines()[1]
+
     def _lines(self, limits: Limits | None = None, faster: float = 1.0) -> tuple[Limits, Array]:
         """Return limits along the lines from point to point, and their least durations."""
         distance = np.diff(self.way.points, axis=0)
@@ -136,11 +140,15 @@ class Run:
 
 
 class Near(NamedTuple):
-    """How near a motion stays: tolerances [mm, deg], and how near it passes each point [mm]."""
+    """How near a motion stays: tolerances [mm, deg], and how near it passes each point [mm].
+
+    travel : (2, d) array, the positions that it does not leave.
+    """
 
     tolerance: float
     angle_tolerance: float
     at_points: Array
+    travel: Array
 
 
 def plan_run(
@@ -166,6 +174,10 @@ def plan_run(
         Called with the share of the work that is done.
     """
     moving = np.flatnonzero(np.ptp(way.points, axis=0) > 0)
+    if len(way.points) <= 2:
+        stops = Run(way, limits, linear, None, None, None, 0.0, 0.0)
+        duration = float(stops.durations().sum())
+        return replace(stops, duration=duration, least=duration)
     velocity, acceleration, deceleration, jerk = np.array(limits)[:, moving]
     bounds = Bounds(
         velocity, acceleration, deceleration, jerk, speed=way.speeds, linear=linear[moving]
@@ -176,17 +188,15 @@ def plan_run(
         linear=linear[moving].tolist(),
         angle_tolerance=near.angle_tolerance * (1 - INSET),
         gate_tolerance=near.at_points * (1 - INSET),
+        travel=near.travel[:, moving],
     )
-    stops = Run(way, limits, linear, None, corridor, bounds, 0.0, 0.0)
-    _, durations = stops._lines()  # noqa: SLF001 - of this module
-    duration = float(durations.sum())
-    if len(way.points) <= 2:
-        return Run(way, limits, linear, None, corridor, bounds, duration, duration)
+    stops = Run(way, limits, linear, None, None, None, 0.0, 0.0)
+    duration = float(stops.durations().sum())
     least = search.lower_bound(corridor, bounds, tolerance=near.tolerance)
     passage = None
     if near.angle_tolerance > 0 or linear[moving].all():
         passage = search.least_time(corridor, bounds, progress=progress)
     if passage is None or passage.spline.duration > duration:
-        return Run(way, limits, linear, None, corridor, bounds, duration, min(least, duration))
+        return replace(stops, duration=duration, least=min(least, duration))
     found = passage.spline.duration
     return Run(way, limits, linear, passage, corridor, bounds, found, min(least, found))

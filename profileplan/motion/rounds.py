@@ -36,6 +36,9 @@ MOST_ITERATIONS = 80
 WIDEST_SCALE = (0.7, 2.0)
 """Least and greatest common scale of the spans in one ``refit``."""
 
+SHORTEST_SPAN = 2e-5
+"""Least duration of an interval [s]: in a shorter one rounding would show in the acceleration."""
+
 ACCURACY = 1e-7
 """Relative accuracy to which a round is solved; what it leaves over is scaled away."""
 
@@ -163,8 +166,9 @@ def step(spline: Spline, corridor: Corridor, bounds: Bounds, *, trust: Array) ->
     program = _Program(spline, times=spans.size)
     program.cost[program.time] = spans / spline.duration
     columns = program.time.start + np.arange(spans.size)
-    for sign in (1.0, -1.0):
-        program.rows(trust)
+    shortest = np.clip(1 - SHORTEST_SPAN / spans, 0.0, trust)
+    for sign, most in ((1.0, trust), (-1.0, shortest)):
+        program.rows(most)
         program.entries(np.arange(spans.size), columns, np.full(spans.size, sign))
     program.constrain(corridor, bounds)
     return program.solve()
@@ -174,7 +178,8 @@ def refit(spline: Spline, corridor: Corridor, bounds: Bounds) -> Outcome:
     """Return the fastest motion with a spline's ratios of spans, exactly inside the limits."""
     program = _Program(spline, times=1)
     program.cost[program.time] = 1.0
-    program.rows(np.array([WIDEST_SCALE[1] - 1, 1 - WIDEST_SCALE[0]]))
+    room = min(1 - WIDEST_SCALE[0], max(1 - SHORTEST_SPAN / float(spline.spans.min()), 0.0))
+    program.rows(np.array([WIDEST_SCALE[1] - 1, room]))
     program.entries(np.arange(2), np.full(2, program.time.start), np.array([1.0, -1.0]))
     program.constrain(corridor, bounds)
     return program.solve()

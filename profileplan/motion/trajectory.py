@@ -229,7 +229,8 @@ class Trajectory:
         Source: Farin: Curves and Surfaces for CAGD (2002), chapter 5 (from memory).
         """
         coefficients = polynomials.trimmed(self.coefficients.transpose(0, 2, 1))
-        degree = max(coefficients.shape[-1] - 1, 1)
+        # Of degree three at least: a parabola's own middle point lies farther out.
+        degree = max(coefficients.shape[-1] - 1, 3)
         scaled = coefficients * self.durations[:, np.newaxis, np.newaxis] ** np.arange(
             coefficients.shape[-1]
         )
