@@ -378,8 +378,7 @@ def _followed(schedule: Schedule, index: int, asked: PathStep, speeds: Array) ->
     )
     trajectory = schedule.steps[index].trajectory
     found = trajectory.speeds(schedule.job.machine.linear).value
-    load = None if np.isinf(speeds).all() else found[:, np.newaxis] / speeds
-    return corridor.follow(trajectory.hulls(), load)
+    return corridor.follow(trajectory.hulls(), (found, speeds))
 
 
 def _tolerances(step: ScheduledStep, asked: PathStep, followed: Followed) -> Finding:

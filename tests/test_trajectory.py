@@ -163,7 +163,7 @@ def test_a_peak_is_taken_at_its_time(trajectory: Trajectory) -> None:
                 assert_taken(trajectory, axis, derivative, value=value, time=time, sign=-1)
 
 
-def assert_taken(  # noqa: PLR0913 - which curve, and what is said of it
+def assert_taken(
     trajectory: Trajectory, axis: int, derivative: int, *, value: float, time: float, sign: int = 1
 ) -> None:
     """Find a value, or with sign -1 its opposite, at a time; at a break on either side."""

@@ -126,7 +126,7 @@ class Corridor:
             self.points[first : last + 1],
         )
 
-    def follow(self, hulls: Array, load: Array | None = None) -> Followed:
+    def follow(self, hulls: Array, load: tuple[Array, Array] | None = None) -> Followed:
         """Follow a motion through the regions, piece by piece, in the way that suits it best.
 
         A piece is in the region of the piece before, or in a later one if the node between is in
@@ -138,10 +138,10 @@ class Corridor:
         ----------
         hulls : (n, k, d) array
             Points whose hull holds each piece, its ends first and last.
-        load : (n, m) array, optional
-            What it costs to count a piece to a region, beside being outside.
+        load : (n,) array and (m,) array, optional
+            What the pieces ask for, and what the regions allow: the load is the one over the other.
         """
-        costs = np.zeros((len(hulls), len(self.regions))) if load is None else load
+        costs = load or (np.zeros(len(hulls)), np.ones(len(self.regions)))
         inside = self._followed(hulls, costs, most=1 + INSIDE)
         return (
             inside
@@ -149,9 +149,9 @@ class Corridor:
             or Followed(np.inf, np.zeros(len(hulls), dtype=np.intp))
         )
 
-    def _followed(self, hulls: Array, load: Array, *, most: float) -> Followed | None:
+    def _followed(self, hulls: Array, load: tuple[Array, Array], *, most: float) -> Followed | None:
         """Return the best way through, of those that are nowhere farther out than ``most``."""
-        last = len(self.regions) - 1
+        last, (asked, allowed) = len(self.regions) - 1, load
         states = {0: _State(0.0, 0.0, 0)}
         came: list[dict[int, _State]] = []
         for piece, hull in enumerate(hulls):
@@ -160,7 +160,7 @@ class Corridor:
             for region, state in came[-1].items():
                 out = max(state.out, self._out(self.regions, region, hull))
                 if out <= most:
-                    cost = max(state.load, float(load[piece, region]))
+                    cost = max(state.load, float(asked[piece] / allowed[region]))
                     states[region] = _State(cost if np.isfinite(most) else out, out, region)
         final = self._entered(states, hulls[-1, -1], most)
         if last not in final:
