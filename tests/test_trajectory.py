@@ -222,6 +222,15 @@ def test_rounding_of_the_last_stop_is_no_motion(backward: float) -> None:
     assert_allclose(peaks.deceleration.value, [12.0], rtol=1e-14)
 
 
+def test_a_slow_axis_beside_a_fast_one_is_judged_by_itself() -> None:
+    """What is standing still for one axis is a motion for another."""
+    slow = renamed(travel(distance=8e-12), "y")
+    for parts, scale in (([travel(), slow], [1, 1e-12]), ([slow, travel()], [1e-12, 1])):
+        velocity, acceleration, deceleration, _ = Trajectory.stack(parts).peaks
+        for peak in (velocity, acceleration, deceleration):
+            assert_allclose(peak.value, 8 * np.array(scale), rtol=1e-14)
+
+
 @given(trajectories(decades=3), st.lists(st.booleans(), min_size=3, max_size=3))
 def test_no_sample_is_faster_than_the_greatest_speed(
     trajectory: Trajectory, chosen: list[bool]
