@@ -359,3 +359,19 @@ def test_laws_refuse_limits_that_are_none(wrong: float) -> None:
             law.solve(1.0, pp.Limits(wrong, 1.0, 1.0, 1.0))
         with pytest.raises(ValueError, match="finite"):
             law.solve(np.nan, pp.Limits(1.0, 1.0, 1.0, 1.0))
+
+
+def test_a_very_slow_long_move_shows_its_accelerations() -> None:
+    """A month of creeping: a limit broken in its first instants must be found all the same."""
+    axis = pp.Axis("x", travel=(0.0, 1000.0), velocity=1e-4, acceleration=1e4)
+    cycle = pp.Cycle(steps=(pp.Move({"x": 1000.0}),), start={"x": 0.0})
+    plan = pp.plan(pp.Machine(name="creeper", axes=(axis,)), cycle)
+    found = {finding.check: finding.value for finding in plan.check()}
+    assert_allclose([found["acceleration"], found["deceleration"]], 1e4, rtol=1e-12)
+
+
+def test_a_time_short_by_rounding_speeds_no_move_up() -> None:
+    """What may fall short of the least time by rounding must not pass a limit by it."""
+    limits = pp.Limits(5.0, 10.0, 10.0, 30.0)
+    moves = pp.LAWS["trapezoidal"].solve(10.0, limits)
+    assert float(moves.stretched(moves.duration * (1 - 9e-10)).jerk) <= 30.0

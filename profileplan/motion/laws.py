@@ -101,6 +101,8 @@ class Moves:
             message = f"a move that takes {self.duration} s cannot be stretched to {duration} s"
             raise ValueError(message)
         lasts = self.duration > 0
+        # A time that falls short by rounding is the move's own.
+        duration = np.maximum(duration, self.duration)
         c = np.divide(self.duration, duration, out=np.ones_like(duration), where=lasts)
         phases = self.phases / c[..., np.newaxis]
         middle = phases.shape[-1] // 2

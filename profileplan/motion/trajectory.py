@@ -31,9 +31,6 @@ VELOCITY_FLOOR = 1e-10
 """Share of an axis's greatest speed below which it counts as standing, when its acceleration is
 called speeding up or slowing down: rounding decides the direction of a slower motion."""
 
-TIME_ROUNDING = 4 * np.finfo(np.float64).eps
-"""Rounding of a time, as a share of the duration."""
-
 
 class Peak(NamedTuple):
     """The greatest value of a quantity on every axis, and when it is first taken.
@@ -177,10 +174,7 @@ class Trajectory:
         is cut where velocity or acceleration change sign and each part is counted where it belongs.
         """
         velocity = self._magnitude(1)
-        # Durations are rounded as the time of their break is: so far off is the velocity there.
-        rounding = TIME_ROUNDING * self.duration * self._magnitude(2).value
-        floor = np.maximum(VELOCITY_FLOOR * velocity.value, rounding)
-        acceleration, deceleration = self._speeding_and_slowing(floor)
+        acceleration, deceleration = self._speeding_and_slowing(VELOCITY_FLOOR * velocity.value)
         return Peaks(velocity, acceleration, deceleration, self._magnitude(3))
 
     def jumps(self, derivative: int) -> Peak:
