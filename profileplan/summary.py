@@ -10,6 +10,8 @@ import math
 from typing import TYPE_CHECKING
 
 from profileplan import checks, setpoints
+from profileplan.inputs import PathStep
+from profileplan.planning import RAISE
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
@@ -42,7 +44,10 @@ def summarise(plan: Plan) -> dict[str, object]:
         "target_s": plan.target,
         "meets_target": plan.meets_target,
         "requirements_met": all(finding.ok for finding in findings),
-        "steps": [_step(plan, step) for step in plan.steps],
+        "steps": [
+            _step(plan, step, asked)
+            for step, asked in zip(plan.steps, plan.job.cycle.steps, strict=True)
+        ],
         "checks": [finding_values(finding) for finding in findings],
         "levers": [
             {
@@ -110,7 +115,7 @@ def uses(plan: Plan, step: PlannedStep) -> dict[str, dict[str, float]]:
     }
 
 
-def _step(plan: Plan, step: PlannedStep) -> dict[str, object]:
+def _step(plan: Plan, step: PlannedStep, asked: object) -> dict[str, object]:
     return {
         "name": step.name,
         "kind": step.kind,
@@ -118,24 +123,29 @@ def _step(plan: Plan, step: PlannedStep) -> dict[str, object]:
         "duration_s": step.duration,
         "least_time_s": step.least_time,
         "limited_by": [_limit(limit) for limit in step.limited_by],
-        **_corridor(step),
+        **_corridor(step, asked),
         "peaks": _peaks(plan, step),
     }
 
 
-def _corridor(step: PlannedStep) -> dict[str, object]:
+def _corridor(step: PlannedStep, asked: object) -> dict[str, object]:
     """Return what holds a step back where, and what loosening helps, for one through a corridor."""
     if not step.stretches:
         return {}
     return {
-        "gains": [
-            {**_limit(limit), "saved_by_10_percent_s": limit.saves} for limit in step.limited_by
-        ],
+        "gains": [{**_limit(limit), **_gain(limit, asked)} for limit in step.limited_by],
         "stretches": [
             {"start_s": held.start, "end_s": held.end, "limited_by": _limit(held.limit)}
             for held in step.stretches
         ],
     }
+
+
+def _gain(limit: Limit, asked: object) -> dict[str, float]:
+    """Return the seconds gained for each percent of a limit, or for each mm of tolerance."""
+    if limit.quantity == "tolerance" and isinstance(asked, PathStep) and asked.tolerance:
+        return {"s_per_mm": limit.saves / (RAISE * asked.tolerance)}
+    return {"s_per_percent": limit.saves / (100 * RAISE)}
 
 
 def _limit(limit: Limit) -> dict[str, str | None]:

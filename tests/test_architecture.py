@@ -38,6 +38,7 @@ WITHIN = {
         "schedule",
         "spline",
         "rounds",
+        "guesses",
         "least_time",
         "paths",
     ),

@@ -20,42 +20,27 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 
 from profileplan.motion import rounds
+from profileplan.motion.guesses import guesses
 from profileplan.motion.laws import LAWS, Limits
-from profileplan.motion.spline import Group, Spline, inner_points
-from profileplan.motion.synchronisation import line_limits
+from profileplan.motion.spline import Spline, inner_points
 
 if TYPE_CHECKING:
     from collections.abc import Callable
 
     from profileplan.geometry.corridor import Corridor
-    from profileplan.motion.polynomials import Array, Indices
+    from profileplan.motion.polynomials import Array
     from profileplan.motion.rounds import Bounds, Price
-
-INTERVALS = 6
-"""Least number of intervals of a region: as many as a start and a stop need, and some."""
-
-FEW_INTERVALS = 3
-"""The same for a region that is passed in a fraction of the time of a stop, in a long chain."""
-
-LONG_CHAIN = 12
-"""Regions from which on the number of intervals sets the cost."""
-
-PASSED_SOON = 3.0
-"""How many times longer than passing a region a start and a stop in it take, for few intervals."""
-
-SMALLEST_SPAN = 0.03
-"""Least span of a start, as a share of its region's duration."""
 
 FIRST_TRUST, WIDEST_TRUST, LEAST_TRUST = 0.3, 0.5, 2e-3
 """Relative changes of a span that one step may make."""
 
-COARSE_GAIN, FINE_GAIN = 2e-3, 3e-4
+COARSE_GAIN, FINE_GAIN = 4e-3, 5e-4
 """Share of the duration that a step must promise for the rounds to go on."""
 
 COARSE_ROUNDS, FINE_ROUNDS = 25, 8
 """Most turns before and after the intervals are cut in two."""
 
-REFITS, SETTLED = 6, 0.05
+REFITS, SETTLED = 6, 0.15
 """Most refits in a row, and the gain at which another is not worth it."""
 
 HEADROOM = 2e-6
@@ -318,80 +303,38 @@ def _joined(passages: list[Passage], corridor: Corridor, bounds: Bounds) -> Pass
 
 
 def _start(corridor: Corridor, bounds: Bounds) -> Spline | None:
-    """Return a motion inside all limits: spans as for stops at the gates, and what they allow."""
-    spline = _guess(corridor, bounds)
+    """Return a motion inside all limits: the faster of those that the guesses lead to."""
+    found = [_fitted_guess(guess, corridor, bounds) for guess in guesses(corridor, bounds)]
+    motions = [spline for spline in found if spline is not None]
+    return min(motions, key=lambda spline: spline.duration, default=None)
+
+
+def _fitted_guess(guess: Spline, corridor: Corridor, bounds: Bounds) -> Spline | None:
+    """Return a motion inside all limits with the ratios of a guess's spans."""
     for slower in (1.0, 2.0, 4.0):
-        found = _refitted(spline.scaled(slower), corridor, bounds)
+        found = _refitted(guess.scaled(slower), corridor, bounds)
         if found is not None:
             return found
     return None
 
 
-def _guess(corridor: Corridor, bounds: Bounds) -> Spline:
-    """Return a spline along the points of a corridor, with spans as for a stop at every gate."""
-    way = np.diff(corridor.points, axis=0)
-    limits = Limits(bounds.velocity, bounds.acceleration, bounds.deceleration, bounds.jerk)
-    own = line_limits(way, limits, linear=bounds.linear.tolist(), speed=bounds.speed)
-    moves = LAWS["trapezoidal"].solve(np.ones(len(way)), own)
-    few = (len(way) >= LONG_CHAIN) & (moves.duration > PASSED_SOON / np.asarray(own.velocity))
-    spans = [
-        _spans(phases, FEW_INTERVALS if short else INTERVALS)
-        for phases, short in zip(moves.phases, few, strict=True)
-    ]
-    region = np.repeat(np.arange(len(way)), [len(own) for own in spans])
-    joined = np.concatenate(spans)
-    # Where each interval's middle lies on the way through its region.
-    first = np.concatenate([[0.0], np.cumsum(moves.duration)])[region]
-    middle = (np.cumsum(joined) - 0.5 * joined - first) / moves.duration[region]
-    along = corridor.points[region] + np.clip(middle, 0, 1)[:, np.newaxis] * way[region]
-    groups = []
-    for degree, axes in _degrees(bounds):
-        points = np.empty((joined.size + degree, axes.size))
-        points[degree:-degree] = along[degree - 1 : joined.size - 1][:, axes]
-        points[:degree], points[-degree:] = corridor.points[0, axes], corridor.points[-1, axes]
-        groups.append(Group(degree, axes, points))
-    return Spline(joined, region, tuple(groups))
-
-
-def _degrees(bounds: Bounds) -> list[tuple[int, Indices]]:
-    """Return degree 2, whose acceleration jumps, where no axis has a jerk limit, else 3.
-
-    One for all axes: only then can they move in proportion, as a thin tube asks. The acceleration
-    of an axis without jerk limit then changes within an interval, which may become short.
-    """
-    degree = 3 if np.isfinite(bounds.jerk).any() else 2
-    return [(degree, np.arange(bounds.jerk.size))]
-
-
-def _spans(phases: Array, count: int) -> Array:
-    """Return spans that begin and end with the phases of a law, at least so many."""
-    whole = float(phases.sum())
-    if count < INTERVALS:
-        return np.full(count, whole / count)
-    spans = phases[phases > 1e-9 * whole].tolist()
-    while len(spans) < count:
-        longest = int(np.argmax(spans))
-        spans[longest : longest + 1] = [0.5 * spans[longest]] * 2
-    bounded = np.maximum(spans, SMALLEST_SPAN * whole)
-    scaled: Array = bounded * (whole / bounded.sum())
-    return scaled
-
-
 def _refitted(spline: Spline, corridor: Corridor, bounds: Bounds) -> Spline | None:
     """Return the fastest motion with a spline's ratios of spans, or None."""
     best: Spline | None = None
-    scale = rounds.overrun(spline, bounds)
-    spline = spline.scaled(max(scale, 1e-3))
     for _ in range(REFITS):
         found = rounds.refit(spline, corridor, bounds).spline
         if found is None:
-            return best
-        found = found.scaled(rounds.overrun(found, bounds))
-        gain = 1 - found.duration / spline.duration
-        if best is None or found.duration < best.duration:
-            best = found
-        spline = found
-        if gain < SETTLED:
+            scale = rounds.overrun(spline, bounds)
+            if best is not None or scale <= 1:
+                return best
+            spline = spline.scaled(scale)
+            continue
+        # Where the scale is far from one, other powers of it would suit the limits better.
+        change = abs(found.duration / spline.duration - 1)
+        spline = found.scaled(rounds.overrun(found, bounds))
+        if best is None or spline.duration < best.duration:
+            best = spline
+        if change < SETTLED:
             break
     return best
 
@@ -437,7 +380,8 @@ def _descend(
             trust = min(1.6 * trust, WIDEST_TRUST)
         elif reached < 0.35 * promised:
             trust *= 0.4
-        if promised < turns.least_gain or 0 < reached < 0.5 * turns.least_gain:
+        slow = 0 < reached < 0.5 * turns.least_gain and promised < 3 * turns.least_gain
+        if promised < turns.least_gain or slow:
             return Passage(spline, prices, settled=True)
         if trust < LEAST_TRUST:
             break

@@ -14,10 +14,11 @@ derivative of order k grow as c^k, and 1 + k (c - 1) <= c^k keeps it convex and 
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, NamedTuple
+from typing import TYPE_CHECKING, NamedTuple, TypeVar
 
 import clarabel
 import numpy as np
+import numpy.typing as npt
 import scipy.sparse as sp
 
 from profileplan.motion.spline import Group, Spline, inner_points, node_points
@@ -26,6 +27,8 @@ if TYPE_CHECKING:
     from profileplan.geometry.corridor import Corridor, Regions
     from profileplan.motion.polynomials import Array, Flags, Indices
     from profileplan.motion.spline import Level, Points
+
+Number = TypeVar("Number", np.float64, np.intp)
 
 REST = 1e-9
 """Share of its velocity limit below which an axis counts as standing."""
@@ -39,8 +42,14 @@ WIDEST_SCALE = (0.7, 2.0)
 SHORTEST_SPAN = 2e-5
 """Least duration of an interval [s]: in a shorter one rounding would show in the acceleration."""
 
-ACCURACY = 1e-7
-"""Relative accuracy to which a round is solved; what it leaves over is scaled away."""
+ACCURACY, ROUGH_ACCURACY = 1e-7, 1e-5
+"""Relative accuracy to which ``calm``, and the rounds before it, are solved.
+
+What they leave over is scaled away. All of them keep the limits and regions to ``ACCURACY``.
+"""
+
+REGULARISATION = 1e-9
+"""What the solver adds to its pivots where it does not refine its solutions."""
 
 CENTRING = 0.05
 """Weight of the distance from a region's middle, against the jerk, in ``calm``."""
@@ -91,11 +100,10 @@ class Outcome(NamedTuple):
 
 
 class _Mark(NamedTuple):
-    """Rows whose multipliers are prices: every ``stride``-th from ``first`` on, times a weight."""
+    """Rows whose multipliers, times a weight, are prices."""
 
     price: Price
-    first: int
-    stride: int
+    rows: Indices
 
 
 class Sides(NamedTuple):
@@ -171,7 +179,7 @@ def step(spline: Spline, corridor: Corridor, bounds: Bounds, *, trust: Array) ->
         program.rows(most)
         program.entries(np.arange(spans.size), columns, np.full(spans.size, sign))
     program.constrain(corridor, bounds)
-    return program.solve()
+    return program.solve(rough=True)
 
 
 def refit(spline: Spline, corridor: Corridor, bounds: Bounds) -> Outcome:
@@ -182,7 +190,7 @@ def refit(spline: Spline, corridor: Corridor, bounds: Bounds) -> Outcome:
     program.rows(np.array([WIDEST_SCALE[1] - 1, room]))
     program.entries(np.arange(2), np.full(2, program.time.start), np.array([1.0, -1.0]))
     program.constrain(corridor, bounds)
-    return program.solve()
+    return program.solve(rough=True)
 
 
 def calm(spline: Spline, corridor: Corridor, bounds: Bounds) -> Outcome:
@@ -290,34 +298,43 @@ class _Program:
         else:
             self.cones.append(clarabel.NonnegativeConeT(right.size))
 
-    def priced(self, quantity: str, axis: int, interval: Indices, weight: Array) -> None:
-        """Let the multipliers of the last rows, times a weight, be prices of intervals."""
-        last = self.spline.spans.size - 1
-        price = Price(quantity, axis, np.clip(interval, 0, last), weight)
-        self.marks.append(_Mark(price, self.first, (self.count - self.first) // interval.size))
+    def priced(
+        self, quantity: str, axis: int, interval: Indices, weight: Array, rows: Indices
+    ) -> None:
+        """Let multipliers of rows, times a weight, be prices; rows as for ``entries``."""
+        held = np.clip(interval, 0, self.spline.spans.size - 1)
+        self.marks.append(_Mark(Price(quantity, axis, held, weight), self.first + rows))
 
     def entries(self, rows: Indices, columns: Indices, values: Array) -> None:
         """Add entries in rows counted from the last first one; columns below 0 are no unknowns."""
         shape = np.broadcast_shapes(rows.shape, columns.shape, values.shape)
-        kept = np.broadcast_to(columns, shape) >= 0
         self.parts.append(
             (
-                np.broadcast_to(rows, shape)[kept] + self.first,
-                np.broadcast_to(columns, shape)[kept],
-                np.broadcast_to(values, shape)[kept],
+                _spread(rows + self.first, shape),
+                _spread(columns, shape),
+                _spread(values, shape),
             )
         )
 
-    def solve(self) -> Outcome:
-        """Return the spline that the solution stands for, with the multipliers."""
+    def solve(self, *, rough: bool = False) -> Outcome:
+        """Return the spline that the solution stands for, with the multipliers.
+
+        A rough solution is not refined, which halves the time.
+        """
         rows, columns, values = (np.concatenate(part) for part in zip(*self.parts, strict=True))
-        matrix = sp.csc_matrix((values, (rows, columns)), shape=(self.count, self.cost.size))
+        kept = (columns >= 0) & (values != 0)
+        entries = (values[kept], (rows[kept], columns[kept]))
+        matrix = sp.csc_matrix(entries, shape=(self.count, self.cost.size))
         settings = clarabel.DefaultSettings()
         settings.verbose = False
         settings.presolve_enable = False
         settings.max_iter = MOST_ITERATIONS
         settings.max_threads = 1
-        settings.tol_gap_abs = settings.tol_gap_rel = settings.tol_feas = ACCURACY
+        settings.tol_gap_abs = settings.tol_gap_rel = ROUGH_ACCURACY if rough else ACCURACY
+        settings.tol_feas = ACCURACY
+        if rough:
+            settings.iterative_refinement_enable = False
+            settings.static_regularization_constant = REGULARISATION
         solution = clarabel.DefaultSolver(
             self.quadratic, self.cost, matrix, np.concatenate(self.right), self.cones, settings
         ).solve()
@@ -325,10 +342,7 @@ class _Program:
             return Outcome(None)
         multipliers = np.array(solution.z)
         prices = [
-            mark.price._replace(
-                value=mark.price.value
-                * multipliers[mark.first + mark.stride * np.arange(mark.price.interval.size)]
-            )
+            mark.price._replace(value=mark.price.value * multipliers[mark.rows])
             for mark in self.marks
         ]
         return Outcome(self._moved(np.array(solution.x)), tuple(prices))
@@ -351,55 +365,64 @@ class _Program:
         if self.scales or self.time.stop == self.time.start:
             return
         spans = self.spline.spans
-        index = first[:, np.newaxis] + np.arange(values.shape[1])
+        index = first[..., np.newaxis] + np.arange(values.shape[-1])
         inside = (index >= 0) & (index < spans.size)
         held = np.clip(index, 0, spans.size - 1)
         columns = np.where(inside, self.time.start + held, -1)
-        self.entries(rows[:, np.newaxis], columns, values * spans[held])
+        self.entries(rows[..., np.newaxis], columns, values * spans[held])
 
     def _scale_entries(self, rows: Indices, values: Array) -> None:
         """Add entries for the common scale of all spans, where it is an unknown."""
         if self.scales:
-            self.entries(rows, np.full(rows.size, self.time.start), values)
+            self.entries(rows, np.array(self.time.start), values)
 
     def _rates(
         self, number: int, order: int, level: Level, limit: Array, side: tuple[Array, Array]
     ) -> None:
-        """Add the rows that keep a derivative between its bounds, shares of a limit."""
-        group = self.spline.groups[number]
-        index = np.arange(len(level.values))
-        points = index[:, np.newaxis] + np.arange(level.by_points.shape[1])
-        for axis, own in enumerate(limit):
-            if not np.isfinite(own):
-                continue
-            columns = self.column[number][points, axis]
-            for sign, share in ((-1.0, side[0][:, axis]), (1.0, side[1][:, axis])):
-                self.rows(share - sign * level.values[:, axis] / own)
-                self._price_rates(number, axis, order, sign * share)
-                weight = sign * self.unit / own
-                self.entries(index[:, np.newaxis], columns, weight * level.by_points)
-                self._scale_entries(index, -(order + 1) * share)
-                if order:
-                    by_spans = sign * level.by_spans[..., axis] / own
-                else:
-                    # Multiplied by the sum of spans, the bound on a velocity is linear as it is.
-                    by_spans = np.repeat(-(share / level.total)[:, np.newaxis], group.degree, 1)
-                self._span_entries(index, index - group.degree + 1, by_spans)
+        """Add the rows that keep a derivative between its bounds, shares of a limit.
 
-    def _price_rates(self, number: int, axis: int, order: int, signed: Array) -> None:
+        They are a (2, g, n) array: below and above, axis, control value.
+        """
+        group = self.spline.groups[number]
+        limited = np.flatnonzero(np.isfinite(limit))
+        own = limit[limited, np.newaxis]
+        sign = np.array([-1.0, 1.0])[:, np.newaxis, np.newaxis]
+        share = np.stack([side[0][:, limited].T, side[1][:, limited].T])
+        self.rows(share - sign * level.values[:, limited].T / own)
+        index = np.arange(len(level.values))
+        rows = np.arange(share.size).reshape(share.shape)
+        self._price_rates(number, order, limited, sign * share)
+        points = index[:, np.newaxis] + np.arange(level.by_points.shape[1])
+        columns = self.column[number][points][:, :, limited].transpose(2, 0, 1)
+        weight = (sign * self.unit / own)[..., np.newaxis]
+        self.entries(rows[..., np.newaxis], columns, weight * level.by_points)
+        self._scale_entries(rows, -(order + 1) * share)
+        if order:
+            by_spans = level.by_spans[..., limited].transpose(2, 0, 1)
+            by_spans = sign[..., np.newaxis] * by_spans / own[..., np.newaxis]
+        else:
+            # Multiplied by the sum of spans, the bound on a velocity is linear as it is.
+            by_spans = np.repeat(-(share / level.total)[..., np.newaxis], group.degree, -1)
+        self._span_entries(rows, index - group.degree + 1, by_spans)
+
+    def _price_rates(self, number: int, order: int, limited: Indices, signed: Array) -> None:
         """Mark the last rows as prices of a limit; an acceleration's by the axis's direction."""
         group = self.spline.groups[number]
-        column = int(group.axes[axis])
+        size = signed.shape[-1]
         # A velocity's row i is that of the interval before, in the middle of which it counts.
-        index = np.arange(signed.size) - (group.degree - 2 if order == 0 else 0)
-        if order != 1:
-            self.priced(("velocity", "", "jerk")[order], column, index, np.abs(signed))
-            return
-        velocity = self.velocity[number][:, axis]
-        there = 0.5 * (velocity[: signed.size] + velocity[1 : 1 + signed.size])
-        slows = there * signed < 0
-        self.priced("deceleration", column, index, np.where(slows, np.abs(signed), 0.0))
-        self.priced("acceleration", column, index, np.where(slows, 0.0, np.abs(signed)))
+        index = np.arange(size) - (group.degree - 2 if order == 0 else 0)
+        for place, (side, axis) in enumerate(np.ndindex(signed.shape[:-1])):
+            column, own = int(group.axes[limited[axis]]), signed[side, axis]
+            rows = place * size + np.arange(size)
+            if order != 1:
+                self.priced(("velocity", "", "jerk")[order], column, index, np.abs(own), rows)
+                continue
+            velocity = self.velocity[number][:, limited[axis]]
+            there = 0.5 * (velocity[:size] + velocity[1 : 1 + size])
+            slows = there * own < 0
+            slowing, other = np.where(slows, np.abs(own), 0.0), np.where(slows, 0.0, np.abs(own))
+            self.priced("deceleration", column, index, slowing, rows)
+            self.priced("acceleration", column, index, other, rows)
 
     def _speed(self, number: int, level: Level, bounds: Bounds) -> None:
         """Add the cones that keep the speed along the path."""
@@ -411,8 +434,8 @@ class _Program:
         right = np.ones((index.size, size))
         right[:, 1:] = level.values[index][:, members] / limit
         self.rows(right, cone=size)
-        self.priced("speed", -1, index - 1, np.ones(index.size))
         rows = np.arange(index.size) * size
+        self.priced("speed", -1, index - 1, np.ones(index.size), rows)
         self._scale_entries(rows, -np.ones(index.size))
         by_spans = np.repeat(-1 / level.total[index, np.newaxis], group.degree, 1)
         self._span_entries(rows, index - group.degree + 1, by_spans)
@@ -426,22 +449,20 @@ class _Program:
     ) -> None:
         """Add the cones and rows that keep points, one in each region, inside."""
         values = self._values(points)
-        index = np.arange(len(values))
-        size = regions.ball.shape[1] + 1
+        count, size = len(values), regions.ball.shape[1] + 1
         if size > 1:
-            right = np.ones((index.size, size))
+            right = np.ones((count, size))
             right[:, 1:] = np.einsum("nqd,nd->nq", regions.ball, values) - regions.centre
             self.rows(right, cone=size)
-            self.priced("tolerance", -1, interval, np.ones(index.size))
-            for row in range(1, size):
-                rows = index * size + row
-                self.entries(rows, way, -regions.ball_way[:, row - 1])
-                self._point_entries(rows, points, -regions.ball[:, row - 1])
-        for row in range(regions.rows.shape[1]):
-            normal = regions.rows[:, row]
-            self.rows(regions.bound[:, row] - np.einsum("nd,nd->n", normal, values))
-            self.entries(index, way, regions.rows_way[:, row])
-            self._point_entries(index, points, normal)
+            rows = np.arange(count * size).reshape(count, size)
+            self.priced("tolerance", -1, interval, np.ones(count), rows[:, 0])
+            self.entries(rows[:, 1:], way[:, np.newaxis], -regions.ball_way)
+            self._point_entries(rows[:, 1:], points, -regions.ball)
+        if regions.bound.size:
+            self.rows(regions.bound - np.einsum("nkd,nd->nk", regions.rows, values))
+            each = np.arange(regions.bound.size).reshape(regions.bound.shape)
+            self.entries(each, way[:, np.newaxis], regions.rows_way)
+            self._point_entries(each, points, regions.rows)
 
     def _values(self, points: list[Points]) -> Array:
         """Return the positions of all axes: (n, d)."""
@@ -451,17 +472,21 @@ class _Program:
             values[:, group.axes] = own.values
         return values
 
-    def _point_entries(self, rows: Indices, points: list[Points], normal: Array) -> None:
-        """Add the entries of positions times a normal, (n, d)."""
+    def _point_entries(self, rows: Indices, points: list[Points], normals: Array) -> None:
+        """Add the entries of positions times normals: rows (n, k), normals (n, k, d)."""
         for number, (group, own) in enumerate(zip(self.spline.groups, points, strict=True)):
-            for axis, column in enumerate(group.axes):
-                factor = normal[:, column, np.newaxis]
-                if not factor.any():
-                    continue
-                first = own.first[:, np.newaxis] + np.arange(own.by_points.shape[1])
-                columns = self.column[number][first, axis]
-                self.entries(rows[:, np.newaxis], columns, self.unit * factor * own.by_points)
-                self._span_entries(rows, own.span, factor * own.by_spans[..., axis])
+            factor = normals[:, :, group.axes, np.newaxis]
+            first = own.first[:, np.newaxis] + np.arange(own.by_points.shape[1])
+            columns = self.column[number][first].transpose(0, 2, 1)[:, np.newaxis]
+            by_points = own.by_points[:, np.newaxis, np.newaxis]
+            self.entries(rows[..., np.newaxis, np.newaxis], columns, self.unit * factor * by_points)
+            by_spans = np.einsum("nkg,nsg->nks", normals[:, :, group.axes], own.by_spans)
+            self._span_entries(rows, own.span[:, np.newaxis], by_spans)
+
+
+def _spread(values: npt.NDArray[Number], shape: tuple[int, ...]) -> npt.NDArray[Number]:
+    """Return values in the order of a shape that they are spread over."""
+    return (values if values.shape == shape else np.broadcast_to(values, shape)).ravel()
 
 
 def speed_bounds(group: Group, spline: Spline, bounds: Bounds) -> Array:

@@ -193,11 +193,11 @@ class Spline:
 
         Where an acceleration jumps, that after the node.
         """
-        states = self.states()
+        states, end = self.states(), self._end()
         return (
-            np.concatenate([states[0], _end(states, self.spans, 0)]),
-            np.concatenate([states[1], _end(states, self.spans, 1)]),
-            np.concatenate([2 * states[2], _end(states, self.spans, 2)]),
+            np.concatenate([states[0], end[0]]),
+            np.concatenate([states[1], end[1]]),
+            np.concatenate([2 * states[2], end[2]]),
         )
 
     def part(self, first: int, last: int) -> Spline:
@@ -232,7 +232,7 @@ class Spline:
 
     def split(self, parts: Indices) -> Spline:
         """Return the same motion with interval i cut into ``parts[i]`` equal ones."""
-        cubics = self.states()
+        cubics, end = self.states(), self._end()
         interval = np.repeat(np.arange(self.spans.size), parts)
         first = np.cumsum(parts) - parts
         span = (self.spans / parts)[interval]
@@ -243,7 +243,7 @@ class Spline:
             for power in range(3 - order, -1, -1):
                 falling = np.prod(np.arange(power + 1, power + order + 1))
                 value = value * local[:, np.newaxis] + falling * cubics[power + order][interval]
-            cut.append(np.concatenate([value, _end(cubics, self.spans, order)]))
+            cut.append(np.concatenate([value, end[order]]))
         states = (cut[0], cut[1], cut[2])
         return from_states(states, span, self.region[interval], self._degrees)
 
@@ -264,6 +264,18 @@ class Spline:
                 found[3][:, group.axes] = jerk[0] / 6
             found[1][:, group.axes] = velocity[: self.spans.size]
             found[2][:, group.axes] = acceleration[: self.spans.size] / 2
+        return found
+
+    def _end(self) -> Array:
+        """Return position, velocity and acceleration at the end: (3, 1, d).
+
+        As control values, so that a motion that ends at rest ends exactly so.
+        """
+        found = np.zeros((3, 1, sum(len(group.axes) for group in self.groups)))
+        for group in self.groups:
+            velocity, acceleration, *_ = group.levels(self.spans)
+            values = (group.points, velocity.values, acceleration.values)
+            found[:, 0, group.axes] = [own[-1] for own in values]
         return found
 
     def trajectory(self, axes: tuple[str, ...]) -> Trajectory:
@@ -296,19 +308,16 @@ def from_states(
         p, v, a = position[:, axes], velocity[:, axes], acceleration[:, axes]
         if degree == 3:
             inner = p + v * (after - before) / 3 - a * after * before / 6
+            if spans.size > 1:
+                # From the ends' own states, so that rest is rest to the last digit.
+                inner[1] = inner[0] + (v[0] + a[0] * spans[0] / 2) * (spans[0] + spans[1]) / 3
+                end_leg = (v[-1] - a[-1] * spans[-1] / 2) * (spans[-1] + spans[-2]) / 3
+                inner[-2] = inner[-1] - end_leg
         else:
             inner = p[:-1] + v[:-1] * after[:-1] / 2
+            inner[-1] = p[-1] - v[-1] * spans[-1] / 2
         groups.append(Group(degree, axes, np.concatenate([p[:1], inner, p[-1:]])))
     return Spline(spans, region, tuple(groups))
-
-
-def _end(states: tuple[Array, ...], spans: Array, order: int) -> Array:
-    """Return a derivative at the end of the last interval: (1, d)."""
-    value = np.zeros_like(states[0][-1:])
-    for power in range(3 - order, -1, -1):
-        falling = np.prod(np.arange(power + 1, power + order + 1))
-        value = value * spans[-1] + falling * states[power + order][-1:]
-    return value
 
 
 def _difference(stencil: Array) -> Array:

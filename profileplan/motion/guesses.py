@@ -1,0 +1,138 @@
+"""With what motions does the search for the least time begin?
+
+With the points of a corridor, and spans guessed in two ways: as for a stop at every gate, and as
+for a point that passes the gates on arcs at the speed which the lateral acceleration allows. Their
+positions are near those of the corridor's points; limits and regions are kept only after a refit.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from profileplan.motion.laws import LAWS, Limits
+from profileplan.motion.spline import Group, Spline
+from profileplan.motion.synchronisation import line_limits
+
+if TYPE_CHECKING:
+    from profileplan.geometry.corridor import Corridor
+    from profileplan.motion.polynomials import Array, Indices
+    from profileplan.motion.rounds import Bounds
+
+INTERVALS = 6
+"""Least number of intervals of a region: as many as a start and a stop need, and some."""
+
+FEW_INTERVALS = 3
+"""The same for a region that is passed in a fraction of the time of a stop, in a long chain."""
+
+LONG_CHAIN = 12
+"""Regions from which on the number of intervals sets the cost."""
+
+PASSED_SOON = 3.0
+"""How many times longer than passing a region a start and a stop in it take, for few intervals."""
+
+SMALLEST_SPAN = 0.03
+"""Least span of a start, as a share of its region's duration."""
+
+STRAIGHT = 1e-6
+"""Half angle of a corner [rad] below which it counts as straight on, or as straight back."""
+
+
+def guesses(corridor: Corridor, bounds: Bounds) -> list[Spline]:
+    """Return splines along the points of a corridor, to begin the search with."""
+    way = np.diff(corridor.points, axis=0)
+    limits = Limits(bounds.velocity, bounds.acceleration, bounds.deceleration, bounds.jerk)
+    own = line_limits(way, limits, linear=bounds.linear.tolist(), speed=bounds.speed)
+    moves = LAWS["trapezoidal"].solve(np.ones(len(way)), own)
+    few = (len(way) >= LONG_CHAIN) & (moves.duration > PASSED_SOON / np.asarray(own.velocity))
+    stopping = [
+        _spans(phases, FEW_INTERVALS if short else INTERVALS)
+        for phases, short in zip(moves.phases, few, strict=True)
+    ]
+    passing = [
+        np.full(spans.size, time / spans.size)
+        for spans, time in zip(stopping, _passing_times(corridor, bounds, own), strict=True)
+    ]
+    return [_along(corridor, bounds, spans) for spans in (stopping, passing)]
+
+
+def _along(corridor: Corridor, bounds: Bounds, spans: list[Array]) -> Spline:
+    """Return the spline along the points of a corridor with some spans in each region."""
+    way = np.diff(corridor.points, axis=0)
+    region = np.repeat(np.arange(len(way)), [len(own) for own in spans])
+    joined = np.concatenate(spans)
+    # Where each interval's middle lies on the way through its region.
+    durations = np.array([own.sum() for own in spans])
+    first = np.concatenate([[0.0], np.cumsum(durations)])[region]
+    middle = (np.cumsum(joined) - 0.5 * joined - first) / durations[region]
+    along = corridor.points[region] + np.clip(middle, 0, 1)[:, np.newaxis] * way[region]
+    groups = []
+    for degree, axes in _degrees(bounds):
+        points = np.empty((joined.size + degree, axes.size))
+        points[degree:-degree] = along[degree - 1 : joined.size - 1][:, axes]
+        points[:degree], points[-degree:] = corridor.points[0, axes], corridor.points[-1, axes]
+        groups.append(Group(degree, axes, points))
+    return Spline(joined, region, tuple(groups))
+
+
+def _degrees(bounds: Bounds) -> list[tuple[int, Indices]]:
+    """Return degree 2, whose acceleration jumps, where no axis has a jerk limit, else 3.
+
+    One for all axes: only then can they move in proportion, as a thin tube asks. The acceleration
+    of an axis without jerk limit then changes within an interval, which may become short.
+    """
+    degree = 3 if np.isfinite(bounds.jerk).any() else 2
+    return [(degree, np.arange(bounds.jerk.size))]
+
+
+def _spans(phases: Array, count: int) -> Array:
+    """Return spans that begin and end with the phases of a law, at least so many."""
+    whole = float(phases.sum())
+    if count < INTERVALS:
+        return np.full(count, whole / count)
+    spans = phases[phases > 1e-9 * whole].tolist()
+    while len(spans) < count:
+        longest = int(np.argmax(spans))
+        spans[longest : longest + 1] = [0.5 * spans[longest]] * 2
+    bounded = np.maximum(spans, SMALLEST_SPAN * whole)
+    scaled: Array = bounded * (whole / bounded.sum())
+    return scaled
+
+
+def _passing_times(corridor: Corridor, bounds: Bounds, own: Limits) -> Array:
+    """Return how long a point takes for each region that passes the gates on arcs [s].
+
+    An arc of radius R that rounds a corner of half angle h leaves it by R (1 / cos h - 1), within
+    the gate, and begins R tan h before it, at most half a segment. Lateral acceleration v^2 / R and
+    jerk v^3 / R^2 bound its speed; between arcs the speed changes at constant acceleration.
+    """
+    way = np.diff(corridor.points, axis=0)[:, bounds.linear]
+    length = np.linalg.norm(way, axis=1)
+    # Limits are shares of the way; where nothing moves but rotary axes the way is counted as 1.
+    counted = np.where(length > 0, length, 1.0)
+    velocity, up, down, jerk = (np.asarray(limit) * counted for limit in own)
+    acceleration = np.minimum(np.minimum(up, down), np.cbrt(4 * counted * jerk**2))
+    course = way / counted[:, np.newaxis]
+    cosine = np.clip((course[1:] * course[:-1]).sum(axis=1), -1.0, 1.0)
+    half = np.clip(0.5 * np.arccos(cosine), STRAIGHT, 0.5 * np.pi - STRAIGHT)
+    inner = corridor.gates.ball
+    room = 1 / np.abs(inner).max(axis=(1, 2), initial=1e-9)
+    near = 0.5 * np.minimum(counted[1:], counted[:-1])
+    radius = np.minimum(room / (1 / np.cos(half) - 1), near / np.tan(half))
+    lateral = np.minimum(acceleration[1:], acceleration[:-1])
+    sideways = np.minimum(jerk[1:], jerk[:-1])
+    passed = np.minimum(np.sqrt(lateral * radius), np.cbrt(sideways * radius**2))
+    passed = np.minimum(passed, np.minimum(velocity[1:], velocity[:-1]))
+    speeds = [0.0, *passed, 0.0]
+    gained = 2 * acceleration * counted
+    for index, gain in enumerate(gained):
+        speeds[index + 1] = min(speeds[index + 1], math.sqrt(speeds[index] ** 2 + gain))
+    for index in range(len(gained) - 1, -1, -1):
+        speeds[index] = min(speeds[index], math.sqrt(speeds[index + 1] ** 2 + gained[index]))
+    first, last = np.array(speeds[:-1]), np.array(speeds[1:])
+    top = np.minimum(np.sqrt(0.5 * (first**2 + last**2 + gained)), velocity)
+    changing = counted - (top**2 - 0.5 * (first**2 + last**2)) / acceleration
+    times: Array = (2 * top - first - last) / acceleration + np.maximum(changing, 0.0) / top
+    return times
