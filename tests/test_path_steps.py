@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+import json
 from dataclasses import replace
 from itertools import pairwise
-from typing import TYPE_CHECKING, Any, cast
+from typing import TYPE_CHECKING
 
 import numpy as np
 import pytest
@@ -25,7 +26,7 @@ from portal import (
     spoilt,
     through,
 )
-from profileplan.summary import summarise
+from profileplan.summary import summarise, text
 
 if TYPE_CHECKING:
     from portal import Points
@@ -253,7 +254,7 @@ def test_savings_agree_with_a_change_of_the_unit_of_time(speed: float | None) ->
 def test_the_summary_tells_seconds_for_a_percent_and_for_a_mm() -> None:
     """The same savings in the units in which an engineer changes things."""
     plan = planned()
-    summary = cast("dict[str, Any]", summarise(plan))
+    summary = json.loads(text(summarise(plan)))
     gains = summary["steps"][0]["gains"]
     for gain, held in zip(gains, plan.steps[0].limited_by, strict=True):
         if held.quantity == "tolerance":
