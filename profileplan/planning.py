@@ -398,7 +398,13 @@ def _tolerant(task: _Task, way: Way, step: PathStep) -> _Motion:
             part,
             task.limits,
             linear=np.array(task.job.machine.linear),
-            near=Near(step.tolerance, step.angle_tolerance, part.near[1:-1], travel),
+            near=Near(
+                tolerance=np.full(len(part.points) - 1, step.tolerance),
+                angle_tolerance=step.angle_tolerance,
+                at_points=part.near[1:-1],
+                any=step.tolerance,
+                travel=travel,
+            ),
             progress=task.part_progress(number, len(parts)),
         )
         for number, part in enumerate(parts)

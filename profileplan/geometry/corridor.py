@@ -213,7 +213,7 @@ class Followed(NamedTuple):
 def tubes(
     points: Array,
     *,
-    tolerance: float,
+    tolerance: float | Array,
     linear: Sequence[bool],
     angle_tolerance: float,
     gate_tolerance: Array | None = None,
@@ -230,14 +230,15 @@ def tubes(
     ----------
     points : (m + 1, d) array [mm or deg]
         No two neighbours are equal.
-    tolerance : float [mm]
+    tolerance : float or (m,) array [mm]
         Radius of the tubes, above 0.
     linear : (d,) sequence of bool
         Which axes count in mm; the others are rotary.
     angle_tolerance : float [deg]
         Above 0 where a rotary axis moves.
     gate_tolerance : (m - 1,) array, optional [mm]
-        How near the motion passes each inner point; default: the tolerance.
+        How near the motion passes each inner point, at most the tolerances of the tubes beside it;
+        default: these.
     travel : (2, d) array, optional [mm or deg]
         Lowest and highest positions, which the motion does not leave inside its tolerance.
     """
@@ -251,12 +252,13 @@ def tubes(
     turn[np.arange(turning.size), turning] = 1.0
     turn[turning.size + np.arange(turning.size), turning] = -1.0
     low, high = np.full((2, axes), [[-np.inf], [np.inf]]) if travel is None else travel
-    room = np.where(linear, tolerance, angle_tolerance)
+    radius = np.broadcast_to(np.asarray(tolerance, dtype=np.float64), (count,))
+    room = np.where(linear, radius.max(), angle_tolerance)
     above = np.flatnonzero(points.max(axis=0) + room > high)
     below = np.flatnonzero(points.min(axis=0) - room < low)
     ends = np.concatenate([np.eye(axes)[above], -np.eye(axes)[below]])
     end_bound = np.concatenate([high[above], -low[below]])
-    near = np.full(count - 1, tolerance)
+    near = np.minimum(radius[1:], radius[:-1])
     if gate_tolerance is not None:
         near = np.minimum(near, gate_tolerance)
 
@@ -276,7 +278,7 @@ def tubes(
 
     inner = points[1:-1]
     return Corridor(
-        regions=sets(points[:-1], step, np.full(count, tolerance)),
+        regions=sets(points[:-1], step, radius),
         gates=sets(inner, np.zeros_like(inner), near),
         points=points,
     )

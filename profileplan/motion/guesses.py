@@ -24,8 +24,8 @@ if TYPE_CHECKING:
 INTERVALS = 6
 """Least number of intervals of a region: as many as a start and a stop need, and some."""
 
-FEW_INTERVALS = 3
-"""The same for a region that is passed in a fraction of the time of a stop, in a long chain."""
+MOST_FEW = 3
+"""Most intervals of a region of a long chain that is passed much sooner than a stop in it takes."""
 
 LONG_CHAIN = 12
 """Regions from which on the number of intervals sets the cost."""
@@ -42,20 +42,50 @@ STRAIGHT = 1e-6
 
 def guesses(corridor: Corridor, bounds: Bounds) -> list[Spline]:
     """Return splines along the points of a corridor, to begin the search with."""
-    way = np.diff(corridor.points, axis=0)
-    limits = Limits(bounds.velocity, bounds.acceleration, bounds.deceleration, bounds.jerk)
-    own = line_limits(way, limits, linear=bounds.linear.tolist(), speed=bounds.speed)
-    moves = LAWS["trapezoidal"].solve(np.ones(len(way)), own)
-    few = (len(way) >= LONG_CHAIN) & (moves.duration > PASSED_SOON / np.asarray(own.velocity))
+    own = _own_limits(corridor, bounds)
+    moves = LAWS["trapezoidal"].solve(np.ones(len(corridor.regions)), own)
+    times = _passing_times(corridor, bounds, own)
+    counts = _counts(moves.duration, times, own, bounds)
     stopping = [
-        _spans(phases, FEW_INTERVALS if short else INTERVALS)
-        for phases, short in zip(moves.phases, few, strict=True)
+        _spans(phases, int(count)) for phases, count in zip(moves.phases, counts, strict=True)
     ]
     passing = [
-        np.full(spans.size, time / spans.size)
-        for spans, time in zip(stopping, _passing_times(corridor, bounds, own), strict=True)
+        np.full(spans.size, time / spans.size) for spans, time in zip(stopping, times, strict=True)
     ]
     return [_along(corridor, bounds, spans) for spans in (stopping, passing)]
+
+
+def interval_counts(corridor: Corridor, bounds: Bounds) -> Indices:
+    """Return how many intervals the guesses have in each region: (m,)."""
+    own = _own_limits(corridor, bounds)
+    duration = LAWS["trapezoidal"].solve(np.ones(len(corridor.regions)), own).duration
+    return _counts(duration, _passing_times(corridor, bounds, own), own, bounds)
+
+
+def _own_limits(corridor: Corridor, bounds: Bounds) -> Limits:
+    """Return the limits along the way through each region, in shares of it."""
+    limits = Limits(bounds.velocity, bounds.acceleration, bounds.deceleration, bounds.jerk)
+    way = np.diff(corridor.points, axis=0)
+    return line_limits(way, limits, linear=bounds.linear.tolist(), speed=bounds.speed)
+
+
+def _counts(stopping: Array, passing: Array, own: Limits, bounds: Bounds) -> Indices:
+    """Return how many intervals regions have, from the times of stops in them and of passing them.
+
+    In a long chain a region that is passed much sooner than a stop in it would take needs few, and
+    the fewer the shorter it takes against the time in which an acceleration is built up.
+    """
+    counts = np.full(stopping.size, INTERVALS)
+    if stopping.size < LONG_CHAIN:
+        return counts
+    built_up = float((bounds.acceleration / bounds.jerk).min())
+    few = np.full(stopping.size, MOST_FEW)
+    if built_up > 0:
+        few = np.clip(np.ceil(MOST_FEW * passing / built_up), 1, MOST_FEW).astype(np.intp)
+    few[:2] = few[-2:] = MOST_FEW
+    short = stopping > PASSED_SOON / np.asarray(own.velocity)
+    counts[short] = few[short]
+    return counts
 
 
 def _along(corridor: Corridor, bounds: Bounds, spans: list[Array]) -> Spline:
@@ -90,7 +120,7 @@ def _degrees(bounds: Bounds) -> list[tuple[int, Indices]]:
 def _spans(phases: Array, count: int) -> Array:
     """Return spans that begin and end with the phases of a law, at least so many."""
     whole = float(phases.sum())
-    if count < INTERVALS:
+    if count <= MOST_FEW:
         return np.full(count, whole / count)
     spans = phases[phases > 1e-9 * whole].tolist()
     while len(spans) < count:

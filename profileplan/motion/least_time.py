@@ -20,7 +20,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 
 from profileplan.motion import rounds
-from profileplan.motion.guesses import guesses
+from profileplan.motion.guesses import guesses, interval_counts
 from profileplan.motion.laws import LAWS, Limits
 from profileplan.motion.spline import Spline, inner_points
 
@@ -46,8 +46,8 @@ REFITS, SETTLED = 6, 0.15
 HEADROOM = 2e-6
 """Share of time given up, so that the last round has room for its accuracy."""
 
-WINDOW = 48
-"""Regions of a part that is planned at a time."""
+WINDOW = 160
+"""Intervals of a part that is planned at a time, before they are cut in two."""
 
 HELD_SPANS = 2
 """Spans beside a node on which the state there depends."""
@@ -121,7 +121,7 @@ def least_time(
     other = _searched(corridor, both, progress)
     candidates = [found, other]
     if other is not None:
-        ends = _windows(corridor)
+        ends = _windows(_cuts(corridor, bounds))
         candidates.append(
             _joined([_fine(other.spline, corridor, bounds, own) for own in ends], corridor, bounds)
         )
@@ -133,7 +133,8 @@ def _searched(
     corridor: Corridor, bounds: Bounds, progress: Callable[[float], None] | None
 ) -> Passage | None:
     """Return the fastest motion found by one search."""
-    cuts, windows = _cuts(corridor), _windows(corridor)
+    cuts = _cuts(corridor, bounds)
+    windows = _windows(cuts)
     number = len(cuts) - 1
     with ThreadPoolExecutor(os.cpu_count()) as pool:
         rough: list[Spline] = []
@@ -236,16 +237,20 @@ def gains(passage: Passage) -> dict[tuple[str, int], float]:
     return found
 
 
-def _cuts(corridor: Corridor) -> list[int]:
-    """Return the regions at which a long corridor is cut into parts that begin and end at rest."""
-    count = len(corridor.regions)
-    number = max(round(count / WINDOW), 1)
-    return [count * part // number for part in range(number + 1)]
+def _cuts(corridor: Corridor, bounds: Bounds) -> list[int]:
+    """Return the regions at which a long corridor is cut into parts that begin and end at rest.
+
+    All have about as many intervals.
+    """
+    passed = np.cumsum(interval_counts(corridor, bounds))
+    number = min(max(round(int(passed[-1]) / WINDOW), 1), len(corridor.regions))
+    shares = passed[-1] * np.arange(1, number) / number
+    inner = np.searchsorted(passed, shares) + 1
+    return [0, *sorted({int(cut) for cut in inner if cut < passed.size}), passed.size]
 
 
-def _windows(corridor: Corridor) -> list[tuple[int, int]]:
+def _windows(cuts: list[int]) -> list[tuple[int, int]]:
     """Return the regions from the middle of one such part to the middle of the next."""
-    cuts = _cuts(corridor)
     middles = [(one + other) // 2 for one, other in pairwise(cuts)] if len(cuts) > 2 else []
     return list(pairwise([0, *middles, cuts[-1]]))
 

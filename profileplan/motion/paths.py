@@ -140,14 +140,17 @@ class Run:
 
 
 class Near(NamedTuple):
-    """How near a motion stays: tolerances [mm, deg], and how near it passes each point [mm].
+    """How near a motion stays to the lines from point to point.
 
-    travel : (2, d) array, the positions that it does not leave.
+    tolerance : (m,) array [mm]; angle_tolerance [deg]; at_points : (m - 1,) array [mm], how near it
+    passes each point; any : [mm], how near any motion that may be taken comes to each point; travel
+    : (2, d) array, the positions that it does not leave.
     """
 
-    tolerance: float
+    tolerance: Array
     angle_tolerance: float
     at_points: Array
+    any: float
     travel: Array
 
 
@@ -192,7 +195,7 @@ def plan_run(
     )
     stops = Run(way, limits, linear, None, None, None, 0.0, 0.0)
     duration = float(stops.durations().sum())
-    least = search.lower_bound(corridor, bounds, tolerance=near.tolerance)
+    least = search.lower_bound(corridor, bounds, tolerance=near.any)
     passage = None
     if near.angle_tolerance > 0 or linear[moving].all():
         passage = search.least_time(corridor, bounds, progress=progress)
