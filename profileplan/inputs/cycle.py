@@ -20,6 +20,7 @@ from profileplan.inputs.rules import (
     MASS,
     PAUSE,
     POSITION,
+    SCALE,
     Judge,
     Outline,
     Positions,
@@ -39,6 +40,8 @@ ARRIVALS: tuple[Arrival, ...] = ("together", "earliest")
 
 Across: TypeAlias = Literal["line", "axes"]
 ACROSS: tuple[Across, ...] = ("line", "axes")
+Order: TypeAlias = Literal["drawn", "shortest"]
+ORDERS: tuple[Order, ...] = ("drawn", "shortest")
 
 
 @dataclass(frozen=True)
@@ -309,17 +312,31 @@ class Transfer:
 
 @dataclass(frozen=True)
 class Place:
-    """Where a drawing's origin lies, mm, and how far it is turned, deg anticlockwise."""
+    """Where a drawing lies: it is mirrored at its y axis, scaled, turned, and then shifted.
+
+    Parameters
+    ----------
+    x, y : float
+        Where its origin comes to lie on the horizontal axes [mm].
+    turn : float
+        Anticlockwise [deg].
+    scale : float
+    mirror : bool
+    """
 
     x: float = 0.0
     y: float = 0.0
     turn: float = 0.0
+    scale: float = 1.0
+    mirror: bool = False
 
     def __post_init__(self) -> None:
         judge = Judge()
         judge.number("x", self.x, POSITION, "mm")
         judge.number("y", self.y, POSITION, "mm")
         judge.number("turn", self.turn, POSITION, "deg")
+        judge.number("scale", self.scale, SCALE, "times")
+        judge.boolean("mirror", self.mirror)
         judge.finish()
 
 
@@ -345,10 +362,24 @@ class Trace:
         Height raised between outlines [mm].
     with_signal : str, optional
         The output that is on while tracing.
+    lead : float
+        How long before an outline begins, and before it ends, the output switches [s].
+    order : {"drawn", "shortest"}
+        Outlines as drawn, or with the least travel between them.
     inside_first : bool
         Whether outlines inside of others come first.
     lead_in : float, optional
-        Length of the way into an outline [mm].
+        Length of a straight way into each outline and out of it, along its direction there [mm].
+    joining : float
+        Ends of drawn pieces that are so near are joined [mm].
+    drawn_height : bool
+        Whether the height of the drawing is added to the working height.
+    unit : str, optional
+        The drawing's unit of length; None: as the drawing says.
+    space : str
+        "model", or the name of a layout.
+    hidden, hatches : bool
+        Whether hidden entities, and boundaries of hatches, are followed as well.
     time : float, optional
         Duration asked for [s]; None: the least.
     name : str, optional
@@ -365,8 +396,16 @@ class Trace:
     speed: float | None = None
     lift: float = 0.0
     with_signal: str | None = None
+    lead: float = 0.0
+    order: Order = "drawn"
     inside_first: bool = False
     lead_in: float | None = None
+    joining: float = 0.01
+    drawn_height: bool = False
+    unit: str | None = None
+    space: str = "model"
+    hidden: bool = False
+    hatches: bool = False
     time: float | None = None
     name: str | None = None
 
@@ -383,8 +422,12 @@ class Trace:
         judge.number("lift", self.lift, EXTENT, "mm")
         if self.with_signal is not None:
             judge.column("with_signal", self.with_signal)
-        judge.boolean("inside_first", self.inside_first)
+        judge.number("lead", self.lead, LEAD, "s")
+        judge.choice("order", self.order, ORDERS)
         judge.optional("lead_in", self.lead_in, EXTENT, "mm")
+        judge.number("joining", self.joining, EXTENT, "mm")
+        for key in ("inside_first", "drawn_height", "hidden", "hatches"):
+            judge.boolean(key, getattr(self, key))
         judge.finish()
 
 
@@ -403,8 +446,9 @@ STEP_KEYS = {
     "path": ("tolerance", "angle_tolerance", "speed", "time", "law", "name"),
     "transfer": ("height", "lift", "lower", "across", "time", "name"),
     "trace": (
-        *("layers", "place", "tolerance", "speed", "lift", "with_signal"),
-        *("inside_first", "lead_in", "time", "name"),
+        *("layers", "place", "tolerance", "speed", "lift", "with_signal", "lead"),
+        *("order", "inside_first", "lead_in", "joining", "drawn_height"),
+        *("unit", "space", "hidden", "hatches", "time", "name"),
     ),
 }
 """Kind of a step → the keys that a step of it may have in a cycle file, besides its kind."""

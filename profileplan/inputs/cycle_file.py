@@ -14,6 +14,7 @@ from profileplan.inputs.cycle import (
     ACROSS,
     ARRIVALS,
     LAW_NAMES,
+    ORDERS,
     POINT_KEYS,
     STEP_KEYS,
     Cycle,
@@ -312,8 +313,16 @@ def _trace(table: Table, kinds: Kinds) -> Step | None:
             speed=table.optional_number("speed", Quantity.VELOCITY),
             lift=table.number("lift", Quantity.LENGTH, default=Trace.lift),
             with_signal=table.optional_text("with_signal"),
+            lead=table.number("lead", Quantity.TIME, default=Trace.lead),
+            order=table.choice("order", ORDERS, default=Trace.order),
             inside_first=table.boolean("inside_first", default=Trace.inside_first),
             lead_in=table.optional_number("lead_in", Quantity.LENGTH),
+            joining=table.number("joining", Quantity.LENGTH, default=Trace.joining),
+            drawn_height=table.boolean("drawn_height", default=Trace.drawn_height),
+            unit=table.optional_text("unit"),
+            space=table.optional_text("space") or Trace.space,
+            hidden=table.boolean("hidden", default=Trace.hidden),
+            hatches=table.boolean("hatches", default=Trace.hatches),
             time=table.optional_number("time", Quantity.TIME),
             name=table.optional_text("name"),
         ),
@@ -344,6 +353,8 @@ def _place(table: Table) -> Place:
             x=table.number("x", Quantity.LENGTH, default=Place.x),
             y=table.number("y", Quantity.LENGTH, default=Place.y),
             turn=table.number("turn", Quantity.ANGLE, default=Place.turn),
+            scale=table.factor("scale", Place.scale),
+            mirror=table.boolean("mirror", default=Place.mirror),
         )
     )
     return place or Place()

@@ -64,6 +64,7 @@ DURATION = Range(ABOVE_ZERO, 1e6)
 LEAD = Range(-1e6, 1e6)
 PERIOD = Range(50e-6, 1)
 MASS = Range(0, 1e6)
+SCALE = Range(1e-6, 1e6)
 
 AXIS_UNIT = "mm or deg"  # where a record does not know its axes' kinds
 

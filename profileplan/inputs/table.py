@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, TypeGuard, TypeVar
 from profileplan.errors import Fault, InputError
 from profileplan.inputs.files import read_text
 from profileplan.inputs.quantities import Quantity, parse_quantity
-from profileplan.inputs.rules import join, near, quoted, shown
+from profileplan.inputs.rules import is_number, join, near, quoted, shown
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Mapping
@@ -76,6 +76,16 @@ class Table:
         """Return a quantity in axis units, or None where it is left out."""
         raw = self._take(key)
         return None if raw is None else self._parsed(join(self.place, key), raw, quantity)
+
+    def factor(self, key: str, default: float) -> float:
+        """Return a number without a unit."""
+        raw = self._take(key)
+        if raw is None:
+            return default
+        if not is_number(raw):
+            self.note(key, f"{shown(raw)}; a number without a unit is needed")
+            return default
+        return self._parsed(join(self.place, key), raw, Quantity.LENGTH)
 
     def text(self, key: str, default: str | None = None) -> str:
         """Return a text; without a default it must be given."""
