@@ -7,7 +7,7 @@ columns of the waypoint file that a point came from.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import cached_property
+from types import MappingProxyType
 from typing import TYPE_CHECKING
 
 from profileplan.errors import Fault, InputError
@@ -64,8 +64,15 @@ class Job:
         if faults:
             raise InputError(tidy(faults))
 
-    def positions(self) -> tuple[tuple[float, ...], ...]:
+    def positions(
+        self, ends: Mapping[int, Positions] = MappingProxyType({})
+    ) -> tuple[tuple[float, ...], ...]:
         """Return where the axes are told to be between the steps.
+
+        Parameters
+        ----------
+        ends : mapping
+            Index of a step that follows a drawing → where it ends, by name of the axis.
 
         Returns
         -------
@@ -73,26 +80,24 @@ class Job:
             Entry 0 is the start, entry i + 1 the end of step i (counted from 0); each in the
             order of the machine's axes [mm or deg].
         """
-        return self._positions
-
-    @cached_property
-    def _positions(self) -> tuple[tuple[float, ...], ...]:
         names = self.machine.axis_names
         now = dict(self.cycle.start)
         result = [tuple(now[name] for name in names)]
-        for step in self.cycle.steps:
-            for stop in _stops(step):
+        for index, step in enumerate(self.cycle.steps):
+            for stop in (*_stops(step), ends.get(index, {})):
                 _go(now, stop)
             result.append(tuple(now[name] for name in names))
         return tuple(result)
 
-    def points(self, index: int) -> tuple[tuple[float, ...], ...]:
+    def points(self, index: int, start: Iterable[float]) -> tuple[tuple[float, ...], ...]:
         """Return the points that a step leads through, its end last: one for each that it names.
 
         Parameters
         ----------
         index : int
             The step, counted from 0.
+        start : iterable of float
+            Where the axes are before it, in their order [mm or deg].
 
         Returns
         -------
@@ -100,7 +105,7 @@ class Job:
             Each in the order of the machine's axes [mm or deg].
         """
         names = self.machine.axis_names
-        now = dict(zip(names, self.positions()[index], strict=True))
+        now = dict(zip(names, map(float, start), strict=True))
         result = []
         for stop in _stops(self.cycle.steps[index]):
             _go(now, stop)
@@ -163,6 +168,7 @@ def _step_faults(machine: Machine, axes: Mapping[str, Axis], step: Step) -> Iter
             yield from _speed_faults(axes, step.speed, dict.fromkeys(named, 0.0))
         case Trace():
             yield from _position_faults(axes, step.at, "", STEP_KEYS[step.kind])
+            yield from _lift_faults(machine, step)
             if step.with_signal is not None:
                 yield from _signal_faults(axes, step.with_signal, "with_signal")
         case Signal():
@@ -243,6 +249,23 @@ def _signal_faults(axes: Mapping[str, Axis], output: str, place: str) -> Iterato
         if output in map(axis.column, SETPOINT_UNITS):
             message = f"{shown(output)} is a column of axis {axis.name} in the setpoint table"
             yield Fault(place, f"{message}; choose another name")
+
+
+def _lift_faults(machine: Machine, step: Trace) -> Iterator[Fault]:
+    """Yield what stands against raising the tool between outlines."""
+    if not machine.horizontal_axes:
+        yield Fault("trace", "this machine has no horizontal linear axis to follow a drawing with")
+    if not step.lift:
+        return
+    if machine.up_axis is None:
+        message = f"{shown(step.lift)} mm; this machine has no up axis: give `up` in its file"
+        yield Fault("lift", message)
+    elif machine.up_axis in step.at:
+        axis = machine.axis(machine.up_axis)
+        raised = step.at[machine.up_axis] + machine.up_sign * step.lift
+        if not axis.travel[0] <= raised <= axis.travel[1]:
+            message = f"{shown(step.lift)} mm raises {axis.name} to {shown(raised)} {axis.unit}"
+            yield Fault("lift", f"{message}; outside of its travel, {_travel(axis)}")
 
 
 def _height_faults(machine: Machine, height: float) -> Iterator[Fault]:

@@ -295,6 +295,18 @@ class Machine:
         """The name of the axis that points up or down, if there is one."""
         return None if self.up is None else self.up[1:]
 
+    @property
+    def up_sign(self) -> float:
+        """1 where the up axis counts upward, -1 where it counts downward."""
+        return -1.0 if self.up is not None and self.up[0] == "-" else 1.0
+
+    @property
+    def horizontal_axes(self) -> tuple[str, ...]:
+        """The linear axes but the up axis, of which the first two span the plan."""
+        return tuple(
+            axis.name for axis in self.axes if axis.kind == "linear" and axis.name != self.up_axis
+        )
+
     def axis(self, name: str) -> Axis:
         """Return the axis of a name.
 

@@ -1,4 +1,4 @@
-"""What job a file describes: a cycle, or the points of a waypoint file, on a machine."""
+"""What job a file describes: a cycle, the points of a waypoint file, or a drawing, on a machine."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, TypeVar
 
 from profileplan.errors import Fault, InputError
-from profileplan.inputs.cycle import Cycle, PathStep, Step, Wait, Waypoint
+from profileplan.inputs.cycle import Cycle, PathStep, Step, Trace, Wait, Waypoint
 from profileplan.inputs.cycle_file import cycle_reading, machine_path
 from profileplan.inputs.job import Job, fit_faults, line_and_column
 from profileplan.inputs.machine_file import read_machine
@@ -35,15 +35,16 @@ def load_job(
     Parameters
     ----------
     source : Path or str
-        A cycle (``.toml``), or points (``.csv``): the first is the start, and a path leads
-        through the others.
+        A cycle (``.toml``); points (``.csv``): the first is the start, and a path leads through
+        the others; or a drawing (``.dxf``), all outlines of which are traced as drawn, from 0 of
+        every axis, or the end of its travel that is nearest to 0.
     machine : Path or str, optional
         The machine file; for a cycle it overrides the one that the cycle names.
     speed : float, optional
-        Highest speed through the points of a waypoint file [mm/s].
+        Highest speed through the points of a waypoint file, or along a drawing [mm/s].
     tolerance : float, optional
-        Farthest distance between the motion and a waypoint file's path [mm]; None: 0, which
-        stops at every point.
+        Farthest distance between the motion and a waypoint file's path or a drawing [mm]; None: 0,
+        which stops at every point.
 
     Raises
     ------
@@ -58,10 +59,12 @@ def load_job(
         case ".csv":
             return _waypoint_job(source, machine_file, speed=speed, tolerance=tolerance)
         case ".dxf":
-            message = "this version does not read drawings"
+            return _drawing_job(source, machine_file, speed=speed, tolerance=tolerance)
         case suffix:
             found = f'"{suffix}" files are not read' if suffix else "has no suffix"
-            message = f"{found}; a cycle (.toml) or a waypoint file (.csv) is needed"
+            message = (
+                f"{found}; a cycle (.toml), a waypoint file (.csv) or a drawing (.dxf) is needed"
+            )
     raise InputError([Fault("", message, source)])
 
 
@@ -136,6 +139,25 @@ def _waypoint_job(
     if machine is None or path is None or faults:
         raise InputError(tidy(faults))
     return _job_from_start(machine, points[0], path)
+
+
+def _drawing_job(
+    source: Path, machine_file: Path | None, *, speed: float | None, tolerance: float | None
+) -> Job:
+    faults: list[Fault] = []
+    if machine_file is None:
+        faults.append(Fault("", "a drawing needs a machine: give --machine FILE", source))
+    machine = _machine(machine_file, faults)
+    trace = _attempt(
+        lambda: Trace(
+            source, speed=speed, tolerance=Trace.tolerance if tolerance is None else tolerance
+        ),
+        faults,
+    )
+    if machine is None or trace is None or faults:
+        raise InputError(tidy(faults))
+    start = {axis.name: min(max(0.0, axis.travel[0]), axis.travel[1]) for axis in machine.axes}
+    return Job(machine, Cycle((trace,), start, source=source))
 
 
 def _row_faults(machine: Machine, points: tuple[Waypoint, ...], file: Path) -> list[Fault]:

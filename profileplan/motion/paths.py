@@ -122,6 +122,15 @@ class Run:
         """Return the least times of straight lines from point to point, with a stop at each [s]."""
         return self._lines()[1]
 
+    def passed(self) -> Array:
+        """Return when each point is passed, in the run's own time: (m + 1,) [s]."""
+        if self.passage is None:
+            return np.concatenate([[0.0], np.cumsum(self._lines()[1])])
+        spline = self.passage.spline
+        nodes = np.searchsorted(spline.region, np.arange(len(self.way.points)))
+        times: Array = np.concatenate([[0.0], np.cumsum(spline.spans)])[nodes]
+        return times
+
     def _lines(self, limits: Limits | None = None, faster: float = 1.0) -> tuple[Limits, Array]:
         """Return limits along the lines from point to point, and their least durations."""
         distance = np.diff(self.way.points, axis=0)
@@ -154,6 +163,20 @@ class Near(NamedTuple):
     travel: Array
 
 
+def stopping_run(way: Way, limits: Limits, *, linear: Flags) -> Run:
+    """Return the motion that stops at every point, in the least time.
+
+    Parameters
+    ----------
+    way : Way
+    limits : Limits of (d,) arrays
+    linear : (d,) array of bool
+    """
+    stops = Run(way, limits, linear, None, None, None, 0.0, 0.0)
+    duration = float(stops.durations().sum())
+    return replace(stops, duration=duration, least=duration)
+
+
 def plan_run(
     way: Way,
     limits: Limits,
@@ -177,10 +200,9 @@ def plan_run(
         Called with the share of the work that is done.
     """
     moving = np.flatnonzero(np.ptp(way.points, axis=0) > 0)
-    if len(way.points) <= 2:
-        stops = Run(way, limits, linear, None, None, None, 0.0, 0.0)
-        duration = float(stops.durations().sum())
-        return replace(stops, duration=duration, least=duration)
+    stops = stopping_run(way, limits, linear=linear)
+    if stops.single:
+        return stops
     velocity, acceleration, deceleration, jerk = np.array(limits)[:, moving]
     bounds = Bounds(
         velocity, acceleration, deceleration, jerk, speed=way.speeds, linear=linear[moving]
@@ -193,13 +215,11 @@ def plan_run(
         gate_tolerance=near.at_points * (1 - INSET),
         travel=near.travel[:, moving],
     )
-    stops = Run(way, limits, linear, None, None, None, 0.0, 0.0)
-    duration = float(stops.durations().sum())
     least = search.lower_bound(corridor, bounds, tolerance=near.any)
     passage = None
     if near.angle_tolerance > 0 or linear[moving].all():
         passage = search.least_time(corridor, bounds, progress=progress)
-    if passage is None or passage.spline.duration > duration:
-        return replace(stops, duration=duration, least=min(least, duration))
+    if passage is None or passage.spline.duration > stops.duration:
+        return replace(stops, least=min(least, stops.duration))
     found = passage.spline.duration
     return Run(way, limits, linear, passage, corridor, bounds, found, min(least, found))

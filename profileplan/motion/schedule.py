@@ -6,15 +6,32 @@ that the checks judge.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
-from typing import TYPE_CHECKING
+from types import MappingProxyType
+from typing import TYPE_CHECKING, NamedTuple
 
-from profileplan.inputs import Signal
+from profileplan.inputs import Signal, Trace
 from profileplan.motion.trajectory import Trajectory
 
 if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    from profileplan.geometry.trace import Traced
     from profileplan.inputs import Job
+
+
+class Tracing(NamedTuple):
+    """When an outline is followed, in the time of the step [s].
+
+    The way in goes from ``enters`` to ``begins``, the outline itself to ``ends``, the way out to
+    ``leaves``.
+    """
+
+    enters: float
+    begins: float
+    ends: float
+    leaves: float
 
 
 @dataclass(frozen=True, eq=False)
@@ -31,12 +48,15 @@ class ScheduledStep:
         From the beginning of the cycle.
     trajectory : Trajectory
         From time 0 of the step. A step that takes no time stays where it is.
+    tracing : tuple of Tracing
+        When it follows each outline of its drawing.
     """
 
     name: str
     kind: str
     start: float
     trajectory: Trajectory
+    tracing: tuple[Tracing, ...] = field(default=(), kw_only=True)
 
     @property
     def duration(self) -> float:
@@ -68,16 +88,24 @@ class Schedule:
         The machine and the cycle that were asked for; ``steps`` answers its steps one to one.
     steps : tuple of ScheduledStep
     events : tuple of SignalEvent
+    drawn : mapping
+        Index of a step that follows a drawing, counted from 0 → what it follows.
     """
 
     job: Job
     steps: tuple[ScheduledStep, ...]
     events: tuple[SignalEvent, ...]
+    drawn: Mapping[int, Traced] = field(default_factory=lambda: MappingProxyType({}), kw_only=True)
 
     @property
     def duration(self) -> float:
         """The cycle time [s]."""
         return self.steps[-1].end
+
+    @cached_property
+    def positions(self) -> tuple[tuple[float, ...], ...]:
+        """Where the axes are told to be: at the start, and after each step [mm or deg]."""
+        return self.job.positions({index: own.end for index, own in self.drawn.items()})
 
     @cached_property
     def trajectory(self) -> Trajectory:
@@ -87,5 +115,10 @@ class Schedule:
     @property
     def signals(self) -> tuple[str, ...]:
         """Names of the signals, in the order in which the cycle file first uses them."""
-        steps = [step for step in self.job.cycle.steps if isinstance(step, Signal)]
-        return tuple(dict.fromkeys(name for step in steps for name in step.states))
+        names: list[str] = []
+        for step in self.job.cycle.steps:
+            if isinstance(step, Signal):
+                names += step.states
+            elif isinstance(step, Trace) and step.with_signal is not None:
+                names.append(step.with_signal)
+        return tuple(dict.fromkeys(names))

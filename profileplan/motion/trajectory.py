@@ -177,6 +177,13 @@ class Trajectory:
         acceleration, deceleration = self._speeding_and_slowing(VELOCITY_FLOOR * velocity.value)
         return Peaks(velocity, acceleration, deceleration, self._magnitude(3))
 
+    def between(self, first: float, last: float) -> Trajectory:
+        """Return the pieces between the breaks nearest to two times [s], at least one."""
+        breaks = self.breaks
+        begin = min(int(np.abs(breaks - first).argmin()), breaks.size - 2)
+        end = max(int(np.abs(breaks - last).argmin()), begin + 1)
+        return Trajectory(self.axes, self.durations[begin:end], self.coefficients[begin:end])
+
     def jumps(self, derivative: int) -> Peak:
         """Return the greatest jump at a break on every axis: 0 in position, 1 in velocity, ...
 
