@@ -8,7 +8,7 @@ positions are near those of the corridor's points; limits and regions are kept o
 from __future__ import annotations
 
 import math
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 
@@ -36,6 +36,12 @@ PASSED_SOON = 3.0
 SMALLEST_SPAN = 0.03
 """Least span of a start, as a share of its region's duration."""
 
+FELT = 0.6
+"""How many times longer than a halt takes it is felt before and after."""
+
+MARGINS = (4, 40)
+"""Fewest and most regions beside a stop that it is taken to change."""
+
 STRAIGHT = 1e-6
 """Half angle of a corner [rad] below which it counts as straight on, or as straight back."""
 
@@ -55,11 +61,24 @@ def guesses(corridor: Corridor, bounds: Bounds) -> list[Spline]:
     return [_along(corridor, bounds, spans) for spans in (stopping, passing)]
 
 
-def interval_counts(corridor: Corridor, bounds: Bounds) -> Indices:
-    """Return how many intervals the guesses have in each region: (m,)."""
+class Extent(NamedTuple):
+    """How much work the regions of a corridor make, and how far a stop among them is felt.
+
+    intervals : (m,) array of int, those of the guesses; margin : regions beside a stop.
+    """
+
+    intervals: Indices
+    margin: int
+
+
+def extent(corridor: Corridor, bounds: Bounds) -> Extent:
+    """Return the number of intervals in each region, and the regions that a stop changes."""
     own = _own_limits(corridor, bounds)
-    duration = LAWS["trapezoidal"].solve(np.ones(len(corridor.regions)), own).duration
-    return _counts(duration, _passing_times(corridor, bounds, own), own, bounds)
+    stopping = LAWS["trapezoidal"].solve(np.ones(len(corridor.regions)), own).duration
+    passing = _passing_times(corridor, bounds, own)
+    halt = bounds.velocity / bounds.deceleration + bounds.acceleration / bounds.jerk
+    margin = FELT * float(halt.max()) / float(np.median(passing))
+    return Extent(_counts(stopping, passing, own, bounds), math.ceil(np.clip(margin, *MARGINS)))
 
 
 def _own_limits(corridor: Corridor, bounds: Bounds) -> Limits:

@@ -15,19 +15,20 @@ import os
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from itertools import pairwise
-from typing import TYPE_CHECKING, NamedTuple
+from typing import TYPE_CHECKING, NamedTuple, TypeVar
 
 import numpy as np
 
 from profileplan.motion import rounds
-from profileplan.motion.guesses import guesses, interval_counts
+from profileplan.motion.guesses import extent, guesses
 from profileplan.motion.laws import LAWS, Limits
-from profileplan.motion.spline import Spline, inner_points
+from profileplan.motion.spline import Group, Spline, inner_points
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
+    from collections.abc import Callable, Iterable
 
     from profileplan.geometry.corridor import Corridor
+    from profileplan.motion.guesses import Extent
     from profileplan.motion.polynomials import Array
     from profileplan.motion.rounds import Bounds, Price
 
@@ -80,6 +81,9 @@ class Passage:
     settled: bool
 
 
+Planned = TypeVar("Planned")
+
+
 class Stretch(NamedTuple):
     """What holds a motion back from one time to another [s]: a quantity, and an axis or -1."""
 
@@ -94,9 +98,10 @@ def least_time(
 ) -> Passage | None:
     """Return the fastest motion found through a corridor, at rest at both ends.
 
-    A long corridor is planned in parts: first in parts that begin and end at rest, then in parts
-    from the middle of each of those to the middle of the next, which keep the state that the motion
-    has there. Parts do not depend on each other, so all cores are used, with the same result.
+    A long corridor is planned in parts: first in parts that begin and end at rest, and overlap, so
+    that their ends can be left out; then from the middle of each of those to the middle of the
+    next, keeping the state that the motion has there. Parts do not depend on each other, so all
+    cores are used, with the same result.
 
     Parameters
     ----------
@@ -121,10 +126,12 @@ def least_time(
     other = _searched(corridor, both, progress)
     candidates = [found, other]
     if other is not None:
-        ends = _windows(_cuts(corridor, bounds))
-        candidates.append(
-            _joined([_fine(other.spline, corridor, bounds, own) for own in ends], corridor, bounds)
-        )
+        again = []
+        for ends in _windows(_cuts(extent(corridor, bounds))):
+            spline, free = _held(other.spline, corridor, ends)
+            own, turns = _section(corridor, bounds, ends), _Turns(FINE_ROUNDS, FINE_GAIN)
+            again.append(_descend(Passage(spline, (), settled=False), *own, free, turns))
+        candidates.append(_joined(again, corridor, bounds))
     motions = [passage for passage in candidates if passage is not None]
     return min(motions, key=lambda passage: passage.spline.duration, default=None)
 
@@ -133,25 +140,54 @@ def _searched(
     corridor: Corridor, bounds: Bounds, progress: Callable[[float], None] | None
 ) -> Passage | None:
     """Return the fastest motion found by one search."""
-    cuts = _cuts(corridor, bounds)
-    windows = _windows(cuts)
-    number = len(cuts) - 1
+    size = extent(corridor, bounds)
+    cuts = _cuts(size)
+    ends = _windows(cuts)
+    tell = _Progress(progress, 2 * len(ends))
     with ThreadPoolExecutor(os.cpu_count()) as pool:
-        rough: list[Spline] = []
-        sections = (_section(corridor, bounds, ends) for ends in pairwise(cuts))
-        for part in pool.map(lambda section: _coarse(*section), sections):
-            if part is None:
-                return None
-            rough.append(part)
-            if progress:
-                progress(0.5 * len(rough) / number)
-        whole = Spline.chain(rough)
-        passages: list[Passage] = []
-        for passage in pool.map(lambda ends: _fine(whole, corridor, bounds, ends), windows):
-            passages.append(passage)
-            if progress:
-                progress(0.5 + 0.5 * len(passages) / len(windows))
+
+        def coarse(margin: int) -> list[Spline] | None:
+            wide = _widened(cuts, margin)
+            found = tell.each(pool.map(lambda own: _coarse(*_section(corridor, bounds, own)), wide))
+            parts = [part for part in found if part is not None]
+            return parts if len(parts) == len(wide) else None
+
+        def begun(whole: Spline) -> list[Spline] | None:
+            found = list(pool.map(lambda own: _begun(whole, corridor, bounds, own), ends))
+            starts = [start for start in found if start is not None]
+            return starts if len(starts) == len(ends) else None
+
+        margin = size.margin if len(cuts) > 2 else 0
+        parts = coarse(margin)
+        starts = parts and begun(_blended(parts, _widened(cuts, margin), cuts))
+        if margin and not starts:
+            # From rest to rest, what is put together is inside all limits as it is.
+            parts = coarse(0)
+            starts = parts and begun(Spline.chain(parts))
+        if not starts:
+            return None
+        work = zip(starts, ends, strict=True)
+        passages = tell.each(pool.map(lambda own: _fine(own[0], corridor, bounds, own[1]), work))
     return _joined(passages, corridor, bounds)
+
+
+class _Progress:
+    """Tells how many of a number of parts are done."""
+
+    def __init__(self, progress: Callable[[float], None] | None, count: int) -> None:
+        self._progress = progress
+        self._count = count
+        self._done = 0
+
+    def each(self, results: Iterable[Planned]) -> list[Planned]:
+        """Return results as they come."""
+        found = []
+        for result in results:
+            found.append(result)
+            self._done += 1
+            if self._progress:
+                self._progress(min(self._done / self._count, 1.0))
+        return found
 
 
 def in_time(passage: Passage, corridor: Corridor, bounds: Bounds, *, duration: float) -> Spline:
@@ -237,22 +273,51 @@ def gains(passage: Passage) -> dict[tuple[str, int], float]:
     return found
 
 
-def _cuts(corridor: Corridor, bounds: Bounds) -> list[int]:
+def _cuts(size: Extent) -> list[int]:
     """Return the regions at which a long corridor is cut into parts that begin and end at rest.
 
     All have about as many intervals.
     """
-    passed = np.cumsum(interval_counts(corridor, bounds))
-    number = min(max(round(int(passed[-1]) / WINDOW), 1), len(corridor.regions))
+    passed = np.cumsum(size.intervals)
+    number = min(max(round(int(passed[-1]) / WINDOW), 1), passed.size)
     shares = passed[-1] * np.arange(1, number) / number
     inner = np.searchsorted(passed, shares) + 1
     return [0, *sorted({int(cut) for cut in inner if cut < passed.size}), passed.size]
 
 
+def _widened(cuts: list[int], margin: int) -> list[tuple[int, int]]:
+    """Return the regions of parts from cut to cut, wider by a margin inside the corridor."""
+    return [(max(one - margin, 0), min(other + margin, cuts[-1])) for one, other in pairwise(cuts)]
+
+
 def _windows(cuts: list[int]) -> list[tuple[int, int]]:
-    """Return the regions from the middle of one such part to the middle of the next."""
+    """Return the regions from the middle of one part to the middle of the next."""
     middles = [(one + other) // 2 for one, other in pairwise(cuts)] if len(cuts) > 2 else []
     return list(pairwise([0, *middles, cuts[-1]]))
+
+
+def _blended(parts: list[Spline], ends: list[tuple[int, int]], cuts: list[int]) -> Spline:
+    """Return wide parts as one motion: each counts between its cuts.
+
+    Where they overlap they are alike, far from their ends. So control points of the one up to a
+    cut, and of the other from there on, make a motion that is near to both.
+    """
+    spans, regions = [], []
+    points: list[list[Array]] = [[] for _ in parts[0].groups]
+    for number, (part, own) in enumerate(zip(parts, ends, strict=True)):
+        first, last = np.searchsorted(part.region + own[0], cuts[number : number + 2])
+        spans.append(part.spans[first:last])
+        regions.append(part.region[first:last] + own[0])
+        for group, found in zip(part.groups, points, strict=True):
+            middle = (group.degree + 1) // 2
+            begin = first + middle if number else 0
+            end = last + middle if number + 1 < len(parts) else None
+            found.append(group.points[begin:end])
+    groups = [
+        Group(group.degree, group.axes, np.concatenate(found))
+        for group, found in zip(parts[0].groups, points, strict=True)
+    ]
+    return Spline(np.concatenate(spans), np.concatenate(regions), tuple(groups))
 
 
 def _section(corridor: Corridor, bounds: Bounds, ends: tuple[int, int]) -> tuple[Corridor, Bounds]:
@@ -270,23 +335,43 @@ def _coarse(corridor: Corridor, bounds: Bounds) -> Spline | None:
     return _descend(Passage(first, (), settled=False), corridor, bounds, free, turns).spline
 
 
-def _fine(whole: Spline, corridor: Corridor, bounds: Bounds, ends: tuple[int, int]) -> Passage:
-    """Return the motion from one region to another, with twice the intervals, and calm.
+def _begun(
+    whole: Spline, corridor: Corridor, bounds: Bounds, ends: tuple[int, int]
+) -> Spline | None:
+    """Return the motion from one region to another inside all limits, with twice the intervals."""
+    spline, free = _held(whole, corridor, ends)
+    own = _section(corridor, bounds, ends)
+    found = spline if free.all() else _fitted(spline, *own, free)
+    return None if found is None else found.split(np.full(found.spans.size, 2))
 
-    Where the motion goes on beyond, the state there is kept, and the spans that it depends on.
-    """
+
+def _fine(spline: Spline, corridor: Corridor, bounds: Bounds, ends: tuple[int, int]) -> Passage:
+    """Return the motion from one region to another as short as it gets, and calm."""
+    free = _free(spline, corridor, ends)
+    own = _section(corridor, bounds, ends)
+    start = Passage(spline, (), settled=False)
+    found = _descend(start, *own, free, _Turns(FINE_ROUNDS, FINE_GAIN))
+    return replace(found, spline=_calmed(found.spline, *own, free))
+
+
+def _held(whole: Spline, corridor: Corridor, ends: tuple[int, int]) -> tuple[Spline, Array]:
+    """Return the motion from one region to another, and which of its spans are free."""
     first, last = np.searchsorted(whole.region, ends)
     spline = whole.part(int(first), int(last))
-    spline = spline.split(np.full(spline.spans.size, 2))
+    return spline, _free(spline, corridor, ends)
+
+
+def _free(spline: Spline, corridor: Corridor, ends: tuple[int, int]) -> Array:
+    """Return 1 for spans that are free, and 0 for those on which the state at an end depends.
+
+    Where the motion goes on beyond, the state there is kept.
+    """
     free = np.ones(spline.spans.size)
     if ends[0] > 0:
         free[:HELD_SPANS] = 0.0
     if ends[1] < len(corridor.regions):
         free[-HELD_SPANS:] = 0.0
-    own = _section(corridor, bounds, ends)
-    start = Passage(spline, (), settled=False)
-    found = _descend(start, *own, free, _Turns(FINE_ROUNDS, FINE_GAIN))
-    return replace(found, spline=_calmed(found.spline, *own, free))
+    return free
 
 
 def _joined(passages: list[Passage], corridor: Corridor, bounds: Bounds) -> Passage | None:
