@@ -23,6 +23,9 @@ SPACING_SHARE = 0.25
 SAG_SHARE = 1e-4
 """Greatest distance of the motion from straight lines between its samples, as such a share."""
 
+COARSE = 1e-2
+"""Least tolerance [mm] that samples along straight lines are spaced for."""
+
 MOST_SAMPLES = 200_000
 """Most samples of an outline, and about as many of the motion along it."""
 
@@ -82,11 +85,13 @@ def _apart(motion: Trajectory, outline: Outline, tolerance: float) -> float:
     # shapely costs more start-up than all other checks: only a drawing pays for it.
     from profileplan.geometry.deviation import deviation  # noqa: PLC0415
 
-    spacing = max(SPACING_SHARE * tolerance, outline.length / MOST_SAMPLES)
+    # With a stop at every corner all is straight, and coarse samples tell as much.
+    scale = tolerance if outline.pieces.bulge.any() else max(tolerance, COARSE)
+    spacing = max(SPACING_SHARE * scale, outline.length / MOST_SAMPLES)
     speed = motion.speeds((True, True, True)).value
     _, acceleration, _, _ = motion.peaks
     bend = float(np.linalg.norm(acceleration.value))
-    most = np.sqrt(8 * SAG_SHARE * tolerance / bend) if bend else np.inf
+    most = np.sqrt(8 * SAG_SHARE * scale / bend) if bend else np.inf
     parts = motion.durations * np.maximum(speed / spacing, 1 / most)
     count = np.maximum(np.ceil(parts), 1).astype(np.intp)
     piece = np.repeat(np.arange(count.size), count)
