@@ -36,10 +36,10 @@ PASSED_SOON = 3.0
 SMALLEST_SPAN = 0.03
 """Least span of a start, as a share of its region's duration."""
 
-FELT = 0.6
+FELT = 1.0
 """How many times longer than a halt takes it is felt before and after."""
 
-MARGINS = (4, 40)
+MARGINS = (4, 60)
 """Fewest and most regions beside a stop that it is taken to change."""
 
 STRAIGHT = 1e-6

@@ -53,6 +53,12 @@ WINDOW = 160
 HELD_SPANS = 2
 """Spans beside a node on which the state there depends."""
 
+EASED = (0.0, 0.1, 0.25, 0.5, 1.0)
+"""Shares by which the middle of a blended part is slowed down until it is inside all limits."""
+
+FREED_AFTER = 24
+"""Spans from a held state on until they are as free as any."""
+
 ACCEPTED = 1e-6
 """Share by which limits may be passed before all is scaled at the end."""
 
@@ -341,7 +347,11 @@ def _begun(
     """Return the motion from one region to another inside all limits, with twice the intervals."""
     spline, free = _held(whole, corridor, ends)
     own = _section(corridor, bounds, ends)
-    found = spline if free.all() else _fitted(spline, *own, free)
+    found: Spline | None = spline
+    if not free.all():
+        slower = (replace(spline, spans=spline.spans * (1 + more * free)) for more in EASED)
+        fitted = (_fitted(one, *own, free) for one in slower)
+        found = next((one for one in fitted if one is not None), None)
     return None if found is None else found.split(np.full(found.spans.size, 2))
 
 
@@ -362,15 +372,16 @@ def _held(whole: Spline, corridor: Corridor, ends: tuple[int, int]) -> tuple[Spl
 
 
 def _free(spline: Spline, corridor: Corridor, ends: tuple[int, int]) -> Array:
-    """Return 1 for spans that are free, and 0 for those on which the state at an end depends.
+    """Return how free spans are: 0 where the state at an end depends on them, 1 far from there.
 
-    Where the motion goes on beyond, the state there is kept.
+    Where the motion goes on beyond, the state there is kept, and what is near changes little.
     """
     free = np.ones(spline.spans.size)
+    rising = np.arange(1 - HELD_SPANS, free.size + 1 - HELD_SPANS) / FREED_AFTER
     if ends[0] > 0:
-        free[:HELD_SPANS] = 0.0
+        free = np.minimum(free, np.maximum(rising, 0.0))
     if ends[1] < len(corridor.regions):
-        free[-HELD_SPANS:] = 0.0
+        free = np.minimum(free, np.maximum(rising[::-1], 0.0))
     return free
 
 
@@ -440,13 +451,15 @@ def _fitted(spline: Spline, corridor: Corridor, bounds: Bounds, free: Array) -> 
     """Return a motion inside all limits with a spline's spans, the free ones longer if need be."""
     if free.all():
         return _refitted(spline, corridor, bounds)
+    last = np.inf
     for _ in range(REFITS):
         found = rounds.refit(spline, corridor, bounds).spline
-        if found is None:
-            return None
-        excess = found.spans[0] / spline.spans[0] - 1
-        if excess <= ACCEPTED:
+        excess = np.inf if found is None else found.spans[0] / spline.spans[0] - 1
+        if found is not None and excess <= ACCEPTED:
             return replace(found, spans=spline.spans)
+        if excess >= last or found is None:
+            return None
+        last = excess
         spline = replace(spline, spans=spline.spans * (1 + 1.5 * excess * free))
     return None
 
