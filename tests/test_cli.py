@@ -66,7 +66,7 @@ def test_bad_input_ends_with_2_and_no_result(
         (["plan", LOADER, "--speed", "0.1"], "only for a waypoint or outline file"),
         (["plan", BEAD, "-m", PORTAL, "--speed", "-5"], "-5"),
         (["plan", BEAD, "-m", PORTAL, "--speed", "5 kg"], "kg"),
-        (["plan", "drawing.dxf", "-m", PORTAL], "does not read drawings"),
+        (["plan", "drawing.dxf", "-m", PORTAL], "drawing.dxf: no such file"),
         (["export", LOADER, "-o", "t.csv", "--period", "5 us"], "period"),
         (["export", LOADER, "-o", "t.csv", "--columns", "pos,torque"], "torque"),
         (["export", LOADER], "--output"),

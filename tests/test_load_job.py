@@ -337,8 +337,7 @@ def test_options_of_a_waypoint_job_are_judged_with_its_files(folder: Path) -> No
 @pytest.mark.parametrize(
     ("name", "words"),
     [
-        ("part.dxf", "this version does not read drawings"),
-        ("cycle.json", '".json" files are not read; a cycle (.toml) or a waypoint file (.csv)'),
+        ("cycle.json", '".json" files are not read; a cycle (.toml), a waypoint file (.csv)'),
         ("cycle", "has no suffix; a cycle (.toml)"),
     ],
 )

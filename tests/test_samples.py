@@ -18,29 +18,38 @@ JOBS = {
     "kiln-loader": (["cycle.toml"], 0),
     "tile-turner": (["cycle.toml"], 1),
     "sealant-portal": (["bead.csv", "-m", "machine.toml"], 0),
+    "sealant-portal/gasket": (["gasket.toml"], 0),
     "glaze-inspection": (["pass.csv", "-m", "../kiln-loader/machine.toml", "--tolerance", "5"], 0),
     "faulty": (["cycle.toml"], 2),
 }
-"""Folder → arguments, and the exit status: the tile turner misses its target on purpose."""
+"""Folder, with a job's name where it has several → arguments, and the exit status.
+
+The tile turner misses its target on purpose.
+"""
 
 GOOD = [name for name, (_, status) in JOBS.items() if status < 2]
+
+
+def folder(name: str) -> Path:
+    """Return the folder of a sample."""
+    return SAMPLES / name.split("/", maxsplit=1)[0]
 
 
 def arguments(name: str) -> list[str]:
     """Return a sample's arguments with its folder put before every file."""
     words, _ = JOBS[name]
-    return [str(SAMPLES / name / word) if "." in word else word for word in words]
+    return [str(folder(name) / word) if "." in word else word for word in words]
 
 
 def machine_of(name: str) -> Path:
     """Return a sample's machine file."""
     files = [Path(word) for word in arguments(name) if word.endswith("machine.toml")]
-    return files[0] if files else SAMPLES / name / "machine.toml"
+    return files[0] if files else folder(name) / "machine.toml"
 
 
 def test_every_sample_is_listed_here() -> None:
     """A sample that no test runs will break unseen."""
-    assert sorted(JOBS) == sorted(folder.name for folder in SAMPLES.iterdir())
+    assert {folder(name) for name in JOBS} == set(SAMPLES.iterdir())
 
 
 @pytest.mark.parametrize("name", JOBS)

@@ -54,7 +54,7 @@ POINTS_OF_DIMENSIONS = "defpoints"
 """The layer that is never plotted."""
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, slots=True)
 class Entity:
     """One drawn entity, as messages name it.
 
@@ -393,11 +393,13 @@ class _Expander:
             ]
             which = np.arange(len(listed))
         else:
-            code = np.stack([outer[place], drawn, slot], axis=1)
-            rows, which = np.unique(code, axis=0, return_inverse=True)
+            code = (outer[place] * len(names) + drawn) * len(kinds) + slot
+            codes, which = np.unique(code, return_inverse=True)
+            rest, kind = np.divmod(codes, len(kinds))
+            columns = (*(part.tolist() for part in np.divmod(rest, len(names))), kind.tolist())
             listed = [
-                Entity(handles[own], names[number], kinds[kind])
-                for own, number, kind in rows.tolist()
+                Entity(handles[own], names[number], kinds[row])
+                for own, number, row in zip(*columns, strict=True)
             ]
         records = np.empty(len(listed), dtype=object)
         records[:] = listed

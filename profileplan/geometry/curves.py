@@ -31,7 +31,10 @@ WIDEST = float(np.tan(np.pi / 8))
 FLAT = 1e-10
 """Bulge below which an arc is drawn as a line: its sagitta is less than 1e-10 of its chord."""
 
-CROSSINGS = 10
+AT_ONCE = 1024
+"""How many curves are cut in two together: their arrays stay in the processor's cache."""
+
+CROSSINGS = 6
 """Steps of the search for the place where a curve passes the joint of its arcs."""
 
 SAME = 1e-9
@@ -64,6 +67,16 @@ class Fitted(NamedTuple):
     left: Indices
 
 
+class _Found(NamedTuple):
+    """Lines and arcs: from where to where, bulge, which curve, and where its parameter begins."""
+
+    start: Array
+    end: Array
+    bulge: Array
+    curve: Indices
+    at: Array
+
+
 class _Trial(NamedTuple):
     """Two arcs for each of n curves: their joint, (n, 3), bulges, (n, 2), and error, (n,)."""
 
@@ -82,41 +95,59 @@ def fitted(points: Array, *, error: float, most: int) -> Fitted:
     error : float [mm]
         Greatest distance.
     most : int
-        Greatest number of arcs; no more than this are tried at once.
+        Greatest number of lines and arcs.
 
     Returns
     -------
     Fitted
         Curves that are left have no pieces.
     """
-    found: list[tuple[Array, Array, Array, Indices, Array]] = []
+    none = np.zeros((0, 3))
+    parts = [Fitted(none, none, np.zeros(0), np.zeros(0, dtype=np.intp), 0.0, np.zeros(0, np.intp))]
+    for first in range(0, len(points), AT_ONCE):
+        part = _fitted(points[first : first + AT_ONCE], error, most)
+        parts.append(part._replace(curve=part.curve + first, left=part.left + first))
+        most = max(most - len(part.bulge), 0)
+    return Fitted(
+        np.concatenate([part.start for part in parts]),
+        np.concatenate([part.end for part in parts]),
+        np.concatenate([part.bulge for part in parts]),
+        np.concatenate([part.curve for part in parts]),
+        max(part.error for part in parts),
+        np.concatenate([part.left for part in parts]),
+    )
+
+
+def _fitted(points: Array, error: float, most: int) -> Fitted:
+    """Return lines and arcs for curves that are cut in two together."""
+    found: list[_Found] = []
     live, curve, at = points, np.arange(len(points)), np.zeros(len(points))
     worst, count = 0.0, 0
     for halving in range(MOST_HALVINGS):
         place = live[..., :3] / live[..., 3:]
         first, last = place[:, 0], place[:, -1]
         trial, (extent, aside) = _biarcs(live, place), _thickness(place)
-        small = (extent <= error) & (aside <= error)
-        line = small & (trial.error > error)
-        straight = (trial.bulge == 0).all(axis=1) & (trial.error <= error) & (aside <= error)
-        single = np.flatnonzero(line | straight)
-        double = np.flatnonzero((trial.error <= error) & ~straight)
-        found.append(
-            (first[single], last[single], np.zeros(single.size), curve[single], at[single])
-        )
+        good = trial.error <= error
+        # Where no arc fits however small the curve is, it has a corner.
+        corner = (extent <= error) & (aside <= error) & ~good
+        straight = (trial.bulge == 0).all(axis=1) & good & (aside <= error)
+        single, double = np.flatnonzero(corner | straight), np.flatnonzero(good & ~straight)
         joint, bulge = trial.joint[double], trial.bulge[double]
-        found.append((first[double], joint, bulge[:, 0], curve[double], at[double]))
-        middle = at[double] + 0.5**halving * 0.5
-        found.append((joint, last[double], bulge[:, 1], curve[double], middle))
+        middle = at[double] + 0.5 ** (halving + 1)
+        found += [
+            _Found(first[single], last[single], np.zeros(single.size), curve[single], at[single]),
+            _Found(first[double], joint, bulge[:, 0], curve[double], at[double]),
+            _Found(joint, last[double], bulge[:, 1], curve[double], middle),
+        ]
         reached = np.concatenate([aside[single], trial.error[double]])
         worst = max(worst, float(reached.max(initial=0.0)))
         count += single.size + 2 * double.size
-        rest = np.flatnonzero((trial.error > error) & ~line)
+        rest = np.flatnonzero(~good & ~corner)
         live, curve, at = live[rest], curve[rest], at[rest]
-        if not rest.size or count + 4 * rest.size > most:
+        if not rest.size or count + 2 * rest.size > most:
             break
         live = np.concatenate(_halves(live, np.full(rest.size, 0.5)))
-        at = np.concatenate([at, at + 0.5**halving * 0.5])
+        at = np.concatenate([at, at + 0.5 ** (halving + 1)])
         curve = np.concatenate([curve, curve])
     start, end, arcs, owner, share = (np.concatenate(column) for column in zip(*found, strict=True))
     left = np.unique(curve)
@@ -303,16 +334,15 @@ def bezier_chain(control: Array, knots: Array, degree: int) -> Array:
     local = control[spans[:, np.newaxis] + np.arange(-degree, 1)]
     near = knots[spans[:, np.newaxis] + np.arange(1 - degree, degree + 1)]
     low, high = knots[spans], knots[spans + 1]
-    chain = np.empty((spans.size, degree + 1, control.shape[1]))
-    for row in range(degree + 1):
+    points = np.broadcast_to(local, (degree + 1, *local.shape))
+    row = np.arange(degree + 1)[:, np.newaxis]
+    for level in range(1, degree + 1):
         # The blossom of the polynomial at `low`, `degree - row` times, and `high`, `row` times.
-        points = local
-        for level in range(1, degree + 1):
-            at = (high if level <= row else low)[:, np.newaxis]
-            before, after = near[:, level - 1 : degree], near[:, degree : 2 * degree - level + 1]
-            share = ((at - before) / (after - before))[..., np.newaxis]
-            points = points[:, :-1] * (1 - share) + points[:, 1:] * share
-        chain[:, row] = points[:, 0]
+        at = np.where(level <= row, high, low)[..., np.newaxis]
+        before, after = near[:, level - 1 : degree], near[:, degree : 2 * degree - level + 1]
+        share = ((at - before) / (after - before))[..., np.newaxis]
+        points = points[:, :, :-1] * (1 - share) + points[:, :, 1:] * share
+    chain = np.ascontiguousarray(points[:, :, 0].swapaxes(0, 1))
     chain[:-1, -1] = chain[1:, 0]
     return chain
 

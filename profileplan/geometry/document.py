@@ -6,6 +6,7 @@ survey foot is 1200/3937 m (U.S. National Bureau of Standards, 1959, from memory
 
 from __future__ import annotations
 
+import io
 import struct
 from typing import TYPE_CHECKING, NamedTuple
 
@@ -27,6 +28,9 @@ if TYPE_CHECKING:
 
 HEAD = 4096
 """Bytes at the beginning of a file that tell what it is."""
+
+BINARY = b"AutoCAD Binary DXF"
+"""How binary DXF files begin."""
 
 MOST_NAMED = 20
 """How many names or repairs a message lists."""
@@ -126,11 +130,25 @@ def open_document(path: Path) -> Opened:
     except PARSE_ERRORS as error:
         reason = _first_line(error)
     try:
-        document, auditor = recover.readfile(str(path))
+        document, auditor = recover.read(io.BytesIO(_completed(path)))
     except (OSError, *PARSE_ERRORS) as error:
         message = f"cannot be read as a DXF file, not even in part: {_first_line(error)}"
         raise InputError([Fault("", message, path)]) from None
     return Opened(document, (_repairs(auditor, reason),))
+
+
+def _completed(path: Path) -> bytes:
+    """Return what stands in a file; of one that was cut off, all entities but the last.
+
+    Half an entity would be one with default values.
+    """
+    data = np.fromfile(path, dtype=np.uint8).tobytes()
+    if data.startswith(BINARY) or b"EOF" in data[-HEAD:]:
+        return data
+    lines = data.splitlines()
+    codes = [number for number in range(0, len(lines) - 1, 2) if lines[number].strip() == b"0"]
+    whole = lines[: codes[-1]] if codes else lines
+    return b"\n".join([*whole, b"0", b"ENDSEC", b"0", b"EOF", b""])
 
 
 def _head(path: Path) -> bytes:
@@ -160,7 +178,7 @@ def _other_kind(head: bytes) -> str:
         return "is a DWG file; save the drawing as DXF"
     if head.startswith(b"PK\x03\x04"):
         return "is a ZIP archive; unpack the DXF file in it"
-    if not head.startswith(b"AutoCAD Binary DXF") and b"SECTION" not in head:
+    if not head.startswith(BINARY) and b"SECTION" not in head:
         return "is not a DXF file: no section begins in it"
     return ""
 
@@ -224,7 +242,10 @@ def unit_of(document: Document, given: str | None) -> Unit:
 def layout_of(document: Document, space: str) -> Layout | str:
     """Return the model space, or a layout by its name, or what is wrong with the name."""
     if space.casefold() == "model":
-        return document.modelspace()
+        try:
+            return document.modelspace()
+        except LookupError:
+            return "the drawing has no model space"
     names = {name.casefold(): name for name in document.layout_names()}
     if space.casefold() in names:
         return document.layout(names[space.casefold()])

@@ -164,13 +164,16 @@ def read_drawing(file: Path | str, reading: Reading = WHOLE) -> Drawing:
     except InputError as unread:
         raise InputError([*faults, *unread.faults]) from None
     layers = Layers(opened.document, hidden=reading.hidden)
-    blocks = _blocks(opened.document, layers, reading)
+    # What is no finite number is refused once it is known where it is drawn.
+    with np.errstate(invalid="ignore", over="ignore"):
+        blocks = _blocks(opened.document, layers, reading)
     if isinstance(blocks, list):
         faults += [replace(fault, file=path) for fault in blocks]
     if faults or isinstance(blocks, list):
         raise InputError(faults)
     unit = unit_of(opened.document, reading.unit)
-    whole = expanded(blocks, layers, reading.layers, scale=unit.scale)
+    with np.errstate(invalid="ignore", over="ignore"):
+        whole = expanded(blocks, layers, reading.layers, scale=unit.scale)
     found, faults = _drawn(whole, reading.error)
     if faults:
         raise InputError(_shortened([replace(fault, file=path) for fault in faults]))
@@ -236,14 +239,16 @@ def _drawn(whole: Expansion, error: float) -> tuple[Drawn, list[Fault]]:
         sources, values = part.beyond(FARTHEST_CENTRE)
         faults += _far_faults(whole, sources, values)
         parts.append(part.without(sources) if sources.size else part)
-    found = drawn(parts, error=error, most=MOST_PIECES)
+    found = drawn(parts, error=error, most=MOST_PIECES, farthest=FARTHEST)
     pieces = found.pieces
     for place, layer in _places(whole, np.unique(found.left)):
         limit = f"cannot be followed within {error:g} mm by at most {MOST_PIECES:,} pieces"
         faults.append(Fault(place, f"on layer {shown(layer)} {limit}"))
     reach = np.maximum(np.abs(pieces.start), np.abs(pieces.end))
     arcs = np.flatnonzero(pieces.bulge)
-    reach[arcs] = np.abs(pieces.chosen(arcs).bounds()).max(axis=1)
+    # A bulge without bounds makes a radius that is no number, and is refused as such.
+    with np.errstate(all="ignore"):
+        reach[arcs] = np.abs(pieces.chosen(arcs).bounds()).max(axis=1)
     far = np.flatnonzero(~(reach <= FARTHEST).all(axis=1))
     return found, [*faults, *_far_faults(whole, pieces.source[far], reach[far].max(axis=1))]
 

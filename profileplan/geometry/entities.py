@@ -53,6 +53,12 @@ if TYPE_CHECKING:
 
     from profileplan.geometry.corridor import Array
 
+UP, NOWHERE = (0.0, 0.0, 1.0), (0.0, 0.0, 0.0)
+
+LEAST_BULGE = 1e-14
+"""Bulge below which an arc is a line: over 20 km its sagitta is 1e-7 mm, and its radius no number
+to calculate with."""
+
 NEAR_UP = 1 / 64
 """Bound of the arbitrary axis algorithm."""
 
@@ -202,7 +208,7 @@ class _Collector:
             handles.append(entity.dxf.handle or "(none)")
             graphic = isinstance(entity, DXFGraphic)
             layers.append(entity.dxf.layer if graphic else _layer(entity))
-            if graphic and not self._hidden and entity.dxf.invisible:
+            if graphic and not self._hidden and _invisible(entity):
                 reasons.append(INVISIBLE)
             elif kind not in self._followed or not graphic:
                 reasons.append(REASON_OF.get(kind, OTHER_REASON))
@@ -236,14 +242,16 @@ class _Collector:
                 self._hatch(entity, slot)
 
     def _circle(self, entity: Circle, slot: int) -> None:
-        dxf = entity.dxf
-        if dxf.radius < 0:
-            self._misfits.append(
-                Misfit(slot, f"has a radius of {dxf.radius:g}; it must be above 0")
-            )
+        stated = entity.dxf.all_existing_dxf_attribs()
+        radius = stated.get("radius", 0.0)
+        if radius < 0:
+            self._misfits.append(Misfit(slot, f"has a radius of {radius:g}; it must be above 0"))
             return
-        angles = (dxf.start_angle, dxf.end_angle) if entity.dxftype() == "ARC" else (0.0, 360.0)
-        self._arcs.add(slot, (*dxf.center, dxf.radius, *angles, 1.0, *dxf.extrusion))
+        span = (0.0, 360.0)
+        if entity.dxftype() == "ARC":
+            span = (stated.get("start_angle", 0.0), stated.get("end_angle", 360.0))
+        centre, normal = stated.get("center", NOWHERE), stated.get("extrusion", UP)
+        self._arcs.add(slot, (*centre, radius, *span, 1.0, *normal))
 
     def _ellipse(self, entity: Ellipse, slot: int) -> None:
         dxf = entity.dxf
@@ -257,11 +265,11 @@ class _Collector:
             return
         flat = entity.is_2d_polyline
         values = [
-            (*own.location, 0.0, own.bulge if flat else 0.0)
+            (*own.get("location", NOWHERE), 0.0, own.bulge if flat else 0.0)
             for own in (vertex.dxf for vertex in entity.vertices)
             if not own.flags & FRAME_POINT
         ]
-        height, normal = np.nan, (0.0, 0.0, 1.0)
+        height, normal = np.nan, UP
         if flat:
             normal = tuple(entity.dxf.extrusion)
             if entity.dxf.hasattr("elevation"):
@@ -297,17 +305,19 @@ class _Collector:
         self._chains.append((slot, chain))
 
     def _insert(self, entity: Insert, slot: int) -> None:
-        dxf = entity.dxf
-        scales = (dxf.xscale, dxf.yscale, dxf.zscale)
+        # One copy of what is stated costs less than asking ezdxf for every default.
+        stated = entity.dxf.all_existing_dxf_attribs()
+        scales = (stated.get("xscale", 1.0), stated.get("yscale", 1.0), stated.get("zscale", 1.0))
         if scales[0] == 0 or scales[1] == 0:
             self._slots.reason[slot] = NO_SIZE
             return
-        spacing = (dxf.row_spacing, dxf.column_spacing)
+        spacing = (stated.get("row_spacing", 0.0), stated.get("column_spacing", 0.0))
         # Instances that coincide are drawn once.
-        rows = max(dxf.row_count, 1) if spacing[0] else 1
-        columns = max(dxf.column_count, 1) if spacing[1] else 1
-        numbers = (*dxf.insert, *scales, dxf.rotation, *spacing, *dxf.extrusion)
-        self._references.append(Reference(slot, dxf.name, rows, columns, numbers))
+        rows = max(stated.get("row_count", 1), 1) if spacing[0] else 1
+        columns = max(stated.get("column_count", 1), 1) if spacing[1] else 1
+        turn, normal = stated.get("rotation", 0.0), stated.get("extrusion", UP)
+        numbers = (*stated.get("insert", NOWHERE), *scales, turn, *spacing, *normal)
+        self._references.append(Reference(slot, stated.get("name", ""), rows, columns, numbers))
 
     def _hatch(self, entity: Hatch, slot: int) -> None:
         normal, height = tuple(entity.dxf.extrusion), entity.dxf.elevation.z
@@ -371,6 +381,10 @@ class _Collector:
             tuple(own for own in rounds if own.sweep.size),
             _beziers(self._chains),
         )
+
+
+def _invisible(entity: DXFEntity) -> bool:
+    return entity.dxf.hasattr("invisible") and bool(entity.dxf.invisible)
 
 
 def _layer(entity: DXFEntity) -> str:
@@ -448,6 +462,7 @@ def _path_strokes(paths: Sequence[_Path]) -> tuple[Strokes, Rounds]:
     slot = np.array([own.slot for own in paths], dtype=np.intp)
     order = Order(slot[path[begin]], begin - first[path[begin]])
     end, bulge = points[follow[begin]], values[begin, 4]
+    bulge = np.where(np.abs(bulge) < LEAST_BULGE, 0.0, bulge)
     # A polyline of a single point has no length; an arc between equal points has no radius.
     strokes = Strokes(points[begin], end, bulge, order)
     normals = np.array([own.normal for own in paths], dtype=np.float64).reshape(-1, 3)

@@ -30,6 +30,9 @@ Travel: TypeAlias = Callable[[Array, Array], Array]
 ROUNDS = 400
 """How often changes are looked for, at most."""
 
+COMPLETE = 2
+"""How often all outlines are looked at again after no change was found near the last changes."""
+
 NEIGHBOURS = 8
 """Beside how many of the nearest others an end of an outline is tried."""
 
@@ -137,11 +140,10 @@ class Exchanges:
         turned = np.zeros(count + 1, dtype=bool)
         # Which outlines have new neighbours since each kind of change was last looked for.
         fresh = [np.ones(count + 1, dtype=bool), np.ones(count + 1, dtype=bool)]
-        done = [False, False]
+        complete = 0
         for turn in range(ROUNDS):
             kind = turn % 2
             now = self._order(sequence, turned)
-            every = bool(fresh[kind].all())
             pairs = self._pairs[:, fresh[kind][self._pairs].any(axis=0)]
             position = np.argsort(sequence)
             look = (_turnings, _moves)[kind]
@@ -153,16 +155,16 @@ class Exchanges:
             # Changes that had to wait are looked at again.
             fresh[kind][:] = False
             fresh[kind][sequence[changes.low]] = True
-            for position_of in (made.low - 1, made.low, made.high, made.high + 1, made.behind):
-                touched = sequence[np.clip(position_of, 0, count)]
-                fresh[0][touched] = fresh[1][touched] = True
+            for place in (made.low - 1, made.low, made.high, made.high + 1, made.behind):
+                for beside in range(-LONGEST_MOVED, LONGEST_MOVED + 1):
+                    touched = sequence[np.clip(place + beside, 0, count)]
+                    fresh[0][touched] = fresh[1][touched] = True
             sequence, turned = _made(made, sequence, turned)
-            done = [False, False] if made.low.size else done
-            done[kind] |= every and not made.low.size
-            if all(done):
-                break
             if not fresh[0].any() and not fresh[1].any():
                 # At last all are looked at once more: a change may be felt some outlines away.
+                complete += 1
+                if complete > COMPLETE:
+                    break
                 fresh[0][:] = fresh[1][:] = True
         return sequence[1:], turned[:-1]
 

@@ -373,7 +373,7 @@ def _crowds(ends: _Ends, members: Indices, label: Indices) -> list[_Meeting]:
     found = []
     for number in np.flatnonzero(count > 2):
         group = groups[number]
-        x, y, _ = ends.points[group].mean(axis=0).tolist()
+        x, y, _ = ends.points[group[0]].tolist()
         layer = int(ends.layer[group[0] // 2])
         found.append(_Meeting(int(group[0]), group.size, (x, y), layer, tuple(group.tolist())))
     return found

@@ -325,7 +325,7 @@ class _Part(NamedTuple):
     order: Order
 
 
-def drawn(parts: Sequence[Primitives], *, error: float, most: int) -> Drawn:
+def drawn(parts: Sequence[Primitives], *, error: float, most: int, farthest: float) -> Drawn:
     """Return lines and arcs that stand for primitives, ordered by source and rank.
 
     Parameters
@@ -335,8 +335,13 @@ def drawn(parts: Sequence[Primitives], *, error: float, most: int) -> Drawn:
         Greatest distance.
     most : int
         Greatest number of pieces that stand for curves.
+    farthest : float [mm]
+        Of curves that begin or end beyond, only the chord is drawn: they are to be refused, and
+        would need very many pieces.
     """
-    found = [
+    none, nobody = np.zeros((0, 3)), np.zeros(0, dtype=np.intp)
+    found = [_Part(none, none, np.zeros(0), Order(nobody, nobody))]
+    found += [
         _Part(own.strokes.start, own.strokes.end, own.strokes.bulge, own.strokes.order)
         for own in parts
     ]
@@ -351,11 +356,16 @@ def drawn(parts: Sequence[Primitives], *, error: float, most: int) -> Drawn:
         group = [curves for curves in beziers if curves.points.shape[1] == size]
         source = np.concatenate([curves.order.source for curves in group])
         rank = np.concatenate([curves.order.rank for curves in group])
-        fit = fitted(np.concatenate([own.points for own in group]), error=error, most=most)
-        found.append(_Part(fit.start, fit.end, fit.bulge, Order(source, rank).at(fit.curve)))
+        points = np.concatenate([own.points for own in group])
+        ends = points[:, [0, -1], :3] / points[:, [0, -1], 3:]
+        near = (np.abs(ends) <= farthest).all(axis=(1, 2))
+        order, inside, far = Order(source, rank), np.flatnonzero(near), np.flatnonzero(~near)
+        found.append(_Part(ends[far, 0], ends[far, 1], np.zeros(far.size), order.at(far)))
+        fit = fitted(points[inside], error=error, most=most)
+        found.append(_Part(fit.start, fit.end, fit.bulge, order.at(inside[fit.curve])))
         worst = max(worst, fit.error)
-        left.append(source[fit.left])
-    return Drawn(_sorted(found), worst, np.concatenate([np.zeros(0, dtype=np.intp), *left]))
+        left.append(source[inside[fit.left]])
+    return Drawn(_sorted(found), worst, np.concatenate([nobody, *left]))
 
 
 def _sorted(found: list[_Part]) -> Pieces:

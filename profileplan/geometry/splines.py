@@ -25,6 +25,12 @@ if TYPE_CHECKING:
 MOST_DEGREE = 25
 """Greatest degree of a spline; DXF allows 11."""
 
+MOST_COORDINATE = 1e30
+"""Greatest coordinate of fit points: the system of equations must not overflow."""
+
+SAME_POINT = 1e-12
+"""Share of its greatest coordinate by which rounding may part the ends of a closed spline."""
+
 MOST_UNEQUAL = 1e6
 """Greatest ratio of the weights of a spline."""
 
@@ -56,7 +62,7 @@ def spline_chain(given: Given) -> Array | str:
     weights = given.weights if given.weights.size else np.ones(len(given.control))
     weights = weights / weights.max()
     control = np.concatenate([given.control * weights[:, np.newaxis], weights[:, np.newaxis]], 1)
-    return bezier_chain(control, knots, given.degree)
+    return _closed(bezier_chain(control, knots, given.degree))
 
 
 def _open_uniform(count: int, degree: int) -> Array:
@@ -91,16 +97,16 @@ def _faults(given: Given, knots: Array) -> Iterator[str]:
             f"they must be above 0, and none more than {MOST_UNEQUAL:g} times another"
         )
     domain = one_knot(knots)[degree : count + 1]
-    inner = domain[(domain > domain[0]) & (domain < domain[-1])]
-    if inner.size and np.unique(inner, return_counts=True)[1].max() > degree:
+    later, earlier = domain[degree:], domain[: max(len(domain) - degree, 0)]
+    if ((later == earlier) & (later > domain[0]) & (later < domain[-1])).any():
         yield f"is a spline with a knot more often than its degree, {degree}: it has a gap"
 
 
 def _through(given: Given) -> Array | str:
     """Return the Bezier curves of the spline through fit points, or what is wrong with them."""
     points = given.fit
-    if not np.isfinite(points).all():
-        return "is a spline with coordinates that are no numbers"
+    if not (np.abs(points) <= MOST_COORDINATE).all():
+        return "is a spline with coordinates that are no numbers, or too great ones"
     if given.closed and len(points):
         points = np.concatenate([points, points[:1]])
     if len(points) < 2:
@@ -118,7 +124,14 @@ def _through(given: Given) -> Array | str:
         # scipy-stubs know only one of the forms of scipy's documentation
         curve = make_interp_spline(along, points, k=3, bc_type=ends)  # type: ignore[arg-type]
     control = np.concatenate([curve.c, np.ones((len(curve.c), 1))], axis=1)
-    return bezier_chain(control, np.asarray(curve.t, dtype=np.float64), 3)
+    return _closed(bezier_chain(control, np.asarray(curve.t, dtype=np.float64), 3))
+
+
+def _closed(chain: Array) -> Array:
+    """Return a chain that closes to the last bit where it does but for rounding."""
+    if len(chain) and np.abs(chain[-1, -1] - chain[0, 0]).max() <= SAME_POINT * np.abs(chain).max():
+        chain[-1, -1] = chain[0, 0]
+    return chain
 
 
 def _end_condition(tangent: Array | None) -> tuple[int, Array]:

@@ -1,0 +1,267 @@
+"""Commands on jobs: plan, check, export."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import click
+
+from profileplan.cli import frame, tables
+from profileplan.errors import Fault, InputError
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from profileplan.checks import Finding
+    from profileplan.inputs import Job
+    from profileplan.planning import Plan
+
+
+@frame.cli.command()
+@frame.source
+@frame.machine
+@click.option(
+    "-o",
+    "--output",
+    type=click.Path(path_type=Path, file_okay=False),
+    help="Folder for setpoints.csv and summary.json; made if missing.",
+)
+@frame.speed
+@frame.tolerance
+@frame.as_json
+@frame.quiet
+def plan(  # noqa: PLR0913 - one parameter an option
+    *,
+    source: Path,
+    machine: Path | None,
+    output: Path | None,
+    speed: float | None,
+    tolerance: float | None,
+    as_json: bool,
+    quiet: bool,
+) -> None:
+    """Plan a cycle and tell how long it takes and what limits it.
+
+    SOURCE is a cycle file (.toml), or with -m a waypoint file (.csv) or a drawing (.dxf).
+
+    \b
+    Examples:
+      profileplan plan samples/kiln-loader/cycle.toml
+      profileplan plan samples/kiln-loader/cycle.toml -o out --json
+      profileplan plan points.csv -m machine.toml --speed "0.3 m/s"
+
+    The table has a row for each step: when it begins, how long it takes, what limits it (the
+    strongest first), and how much of each limit it uses in percent, with the axis that uses most.
+    """  # noqa: D301 - click's mark for lines to keep as they are
+    planned = _planned(_job(source, machine, speed, tolerance), talk=not (as_json or quiet))
+    from profileplan import setpoints, summary  # noqa: PLC0415
+
+    values = summary.summarise(planned)
+    if output is not None:
+        _make_folder(output)
+        frame.keep(_sources(planned.job), output / "setpoints.csv", output / "summary.json")
+        with frame.Progress("writing setpoints", wanted=not (as_json or quiet)) as progress:
+            setpoints.write_csv(planned, output / "setpoints.csv", progress=progress)
+        summary.write_json(values, output / "summary.json")
+        _tell_unplayed(planned, None)
+    if as_json:
+        click.echo(summary.text(values), nl=False)
+    elif quiet:
+        click.echo(tables.verdict(planned), color=frame.color())
+    else:
+        _show_plan(planned)
+        if output is not None:
+            click.echo(f"wrote setpoints.csv and summary.json to {output}", err=True)
+    frame.finish(met=all(finding.ok for finding in planned.check()))
+
+
+@frame.cli.command()
+@frame.source
+@frame.machine
+@frame.speed
+@frame.tolerance
+@frame.as_json
+@frame.quiet
+def check(
+    *,
+    source: Path,
+    machine: Path | None,
+    speed: float | None,
+    tolerance: float | None,
+    as_json: bool,
+    quiet: bool,
+) -> None:
+    """Judge every requirement, with value, limit and margin.
+
+    SOURCE is a cycle file (.toml), or with -m a waypoint file (.csv), a drawing (.dxf), or a
+    setpoint table (.csv with a column t_s): of that the positions are judged, by travel and by
+    their differences against the limits.
+
+    \b
+    Examples:
+      profileplan check samples/kiln-loader/cycle.toml
+      profileplan check out/setpoints.csv -m samples/kiln-loader/machine.toml
+    """  # noqa: D301 - click's mark for lines to keep as they are
+    from profileplan import setpoints  # noqa: PLC0415
+
+    if source.suffix.lower() == ".csv" and setpoints.is_table(source):
+        if speed is not None or tolerance is not None:
+            message = "--speed and --tolerance are for waypoints; this is a setpoint table"
+            raise InputError([Fault("", message, source)])
+        findings = _table_findings(source, machine)
+    else:
+        job = _job(source, machine, speed, tolerance)
+        findings = _planned(job, talk=not (as_json or quiet)).check()
+    met = all(finding.ok for finding in findings)
+    if as_json:
+        from profileplan import summary  # noqa: PLC0415
+
+        checks = [summary.finding_values(finding) for finding in findings]
+        click.echo(summary.text({"requirements_met": met, "checks": checks}), nl=False)
+    else:
+        if not quiet:
+            click.echo(tables.findings_table(findings), color=frame.color())
+        click.echo(tables.requirements(findings), color=frame.color())
+    frame.finish(met=met)
+
+
+@frame.cli.command()
+@frame.source
+@frame.machine
+@click.option(
+    "-o",
+    "--output",
+    type=click.Path(path_type=Path, dir_okay=False),
+    required=True,
+    help="The table to write; replaced when complete.",
+)
+@click.option(
+    "--period",
+    type=frame.Measure("time"),
+    help='Time between rows, s or with unit: 0.001, "250 us".',
+)
+@click.option(
+    "--columns",
+    default="pos,vel,acc",
+    show_default=True,
+    help="What to write for each axis: any of pos, vel, acc, jerk.",
+)
+@frame.speed
+@frame.tolerance
+@frame.as_json
+@frame.quiet
+def export(  # noqa: PLR0913 - one parameter an option
+    *,
+    source: Path,
+    machine: Path | None,
+    output: Path,
+    period: float | None,
+    columns: str,
+    speed: float | None,
+    tolerance: float | None,
+    as_json: bool,
+    quiet: bool,
+) -> None:
+    """Write the setpoint table alone.
+
+    \b
+    Examples:
+      profileplan export samples/kiln-loader/cycle.toml -o setpoints.csv
+      profileplan export cycle.toml -o setpoints.csv --period "250 us" --columns pos,vel
+
+    The last row is the first tick at or after the end of the motion, at rest and on target.
+    """  # noqa: D301 - click's mark for lines to keep as they are
+    planned = _planned(_job(source, machine, speed, tolerance), talk=not (as_json or quiet))
+    from profileplan import setpoints, summary  # noqa: PLC0415
+
+    names = [name.strip() for name in columns.split(",") if name.strip()]
+    frame.keep(_sources(planned.job), output)
+    with frame.Progress("writing setpoints", wanted=not (as_json or quiet)) as progress:
+        rows = setpoints.write_csv(planned, output, period=period, columns=names, progress=progress)
+    _tell_unplayed(planned, period)
+    if as_json:
+        click.echo(summary.text({"file": str(output), "rows": rows}), nl=False)
+    else:
+        click.echo(f"{output}: {rows} rows; {tables.verdict(planned)}", color=frame.color())
+        if not quiet:
+            click.echo(summary.CAUTION, err=True)
+    frame.finish(met=all(finding.ok for finding in planned.check()))
+
+
+def _job(source: Path, machine: Path | None, speed: float | None, tolerance: float | None) -> Job:
+    from profileplan.inputs import load_job  # noqa: PLC0415
+
+    return load_job(source, machine=machine, speed=speed, tolerance=tolerance)
+
+
+def _planned(job: Job, *, talk: bool) -> Plan:
+    """Plan a job, with progress, and say on stderr what the plan leaves out."""
+    from profileplan import planning  # noqa: PLC0415
+
+    with frame.Progress("planning", wanted=talk) as progress:
+        planned = planning.plan(job, progress=progress)
+    for note in planned.notes:
+        click.echo(f"note: {note}", err=True)
+    return planned
+
+
+def _table_findings(source: Path, machine: Path | None) -> Sequence[Finding]:
+    from profileplan import checks, setpoints  # noqa: PLC0415
+    from profileplan.inputs import read_machine  # noqa: PLC0415
+
+    if machine is None:
+        message = "a setpoint table is judged by a machine's limits: give its file with -m"
+        raise InputError([Fault("", message, source)])
+    limits = read_machine(machine)
+    return checks.check_table(setpoints.read_csv(source, limits), limits)
+
+
+def _sources(job: Job) -> list[Path | None]:
+    """Return the files that a job is read from."""
+    from profileplan.inputs import PathStep, Trace  # noqa: PLC0415
+
+    files = [job.cycle.source, job.machine.source]
+    for step in job.cycle.steps:
+        if isinstance(step, PathStep):
+            files.append(step.file)
+        elif isinstance(step, Trace):
+            files.append(step.drawing)
+    return files
+
+
+def _tell_unplayed(planned: Plan, period: float | None) -> None:
+    """Say on stderr which signals change back before a row shows them."""
+    from profileplan import setpoints  # noqa: PLC0415
+
+    for event in setpoints.unplayed(planned, period):
+        state = "on" if event.state else "off"
+        click.echo(
+            f"note: {event.signal} goes {state} at {event.time:.6f} s and changes again before "
+            "the next row: the table does not show it",
+            err=True,
+        )
+
+
+def _make_folder(folder: Path) -> None:
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        message = f"cannot be made: {error.strerror or error}"
+        raise InputError([Fault("", message, folder)]) from error
+
+
+def _show_plan(planned: Plan) -> None:
+    source = planned.job.cycle.source
+    click.echo(f"{planned.job.machine.name}{f', {source}' if source else ''}\n")
+    click.echo(tables.step_table(planned), color=frame.color())
+    click.echo(f"\n{tables.verdict(planned)}", color=frame.color())
+    click.echo(tables.requirements(planned.check()), color=frame.color())
+    for finding in planned.check():
+        if not finding.ok and finding.check != "cycle time":
+            click.echo(f"  {tables.where(finding)}", color=frame.color())
+    if planned.meets_target is False:
+        click.echo(tables.levers(planned), color=frame.color())
+    from profileplan.summary import CAUTION  # noqa: PLC0415
+
+    click.echo("\n" + click.wrap_text(CAUTION, width=tables.width()))

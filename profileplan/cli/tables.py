@@ -1,0 +1,203 @@
+"""How are results laid out: tables fitted to the terminal, verdicts in words and colour?"""
+
+from __future__ import annotations
+
+import shutil
+from typing import TYPE_CHECKING
+
+import click
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from profileplan.checks import Finding
+    from profileplan.planning import Limit, Plan, PlannedStep
+
+NARROW, WIDE = 60, 160
+"""Fewest and most columns that tables are fitted to."""
+
+SHORT = {"velocity": "vel", "acceleration": "acc", "deceleration": "dec", "jerk": "jerk"}
+"""How the step table abbreviates what limits a step."""
+
+
+def step_table(planned: Plan) -> str:
+    """Return the table of steps: when, how long, what limits each, the use of each limit."""
+    from profileplan.summary import uses  # noqa: PLC0415
+
+    uses_of = [f"{word} %" for word in SHORT.values()]
+    heads = ["#", "step", "kind", "start s", "time s", "limited by", *uses_of]
+    rows = []
+    for number, step in enumerate(planned.steps, start=1):
+        shares = [_most(by_axis) for by_axis in uses(planned, step).values()]
+        times = [f"{step.start:.3f}", f"{step.duration:.3f}"]
+        rows.append([str(number), step.name, step.kind, *times, _held(step), *shares])
+    return table(heads, rows, text=("step", "kind", "limited by"))
+
+
+def levers(planned: Plan) -> str:
+    """Return what would shorten the cycle, and the steps by the time that they take."""
+    heads = ["what limits", "saved by 10 % more, s", "steps that it limits"]
+    rows = [
+        [_name(lever.limit), f"{lever.limit.saves:.3f}", "; ".join(lever.steps)]
+        for lever in planned.levers
+        if lever.limit.quantity != "time"
+    ]
+    longest = sorted(planned.steps, key=lambda step: -step.duration)[:5]
+    asked = sum(step.duration for step in planned.steps if _asks_for_time(step))
+    lines = []
+    if rows:
+        shown = table(heads, rows, text=(heads[0], heads[2]))
+        lines = ["", "What would shorten the cycle:", "", shown]
+    if asked:
+        lines.append(f"\nWaits and times asked for take {asked:.3f} s.")
+    names = "; ".join(f"{step.name} {step.duration:.3f} s" for step in longest if step.duration)
+    lines.append(click.wrap_text(f"Longest steps: {names}.", width=width()))
+    return "\n".join(lines)
+
+
+def findings_table(findings: Sequence[Finding]) -> str:
+    """Return the table of requirements, with value, limit and margin."""
+    heads = ["requirement", "value", "limit", "margin", "unit", "use %", "where", "met"]
+    rows = [
+        [
+            _required(finding),
+            _short(finding.value),
+            _short(finding.limit),
+            _short(finding.margin, 3),
+            finding.unit,
+            "" if finding.use is None else f"{100 * finding.use:.1f}",
+            _at(finding),
+            _met(finding),
+        ]
+        for finding in findings
+    ]
+    return table(heads, rows, text=("requirement", "unit", "where", "met"))
+
+
+def where(finding: Finding) -> str:
+    """Return in a line how a requirement is not met, and where."""
+    return (
+        f"{_required(finding)}: {finding.value:.6g} {finding.unit}, "
+        f"allowed {finding.limit:.6g} {finding.unit}, {_at(finding)}"
+    )
+
+
+def verdict(planned: Plan) -> str:
+    """Return the cycle time, and whether it meets its target."""
+    taken = f"cycle time {planned.duration:.3f} s"
+    if planned.target is None:
+        return taken
+    apart = abs(planned.target - planned.duration)
+    if planned.meets_target:
+        return f"{taken}; target {planned.target:g} s {good('met')}, {apart:.3f} s to spare"
+    short = f"{apart:.3f}" if apart >= 0.0005 else f"{apart:.1g}"
+    return f"{taken}; target {planned.target:.9g} s {bad('MISSED')} by {short} s"
+
+
+def requirements(findings: Sequence[Finding]) -> str:
+    """Return in a line whether all requirements are met."""
+    failed = sum(not finding.ok for finding in findings)
+    if failed:
+        return f"{bad('NOT MET')}: {failed} of {len(findings)} requirements"
+    open_ones = sum(not finding.decided for finding in findings)
+    if open_ones:
+        rest = len(findings) - open_ones
+        return f"{rest} requirements {good('met')}; {open_ones} cannot be told from so few decimals"
+    return f"all {len(findings)} requirements {good('met')}"
+
+
+def table(heads: Sequence[str], rows: Sequence[Sequence[str]], *, text: Sequence[str]) -> str:
+    """Return a table fitted to the terminal: columns of text are wrapped, numbers never."""
+    import tabulate  # noqa: PLC0415
+
+    tabulate.MIN_PADDING = 0  # of headings: they need no more room than numbers do
+
+    widths = [
+        max(len(click.unstyle(cell)) for cell in (head, *column))
+        for head, *column in zip(heads, *rows, strict=True)
+    ]
+    flexible = [index for index, head in enumerate(heads) if head in text]
+    spare = width() - sum(widths) - 2 * (len(heads) - 1)
+    while spare < 0 and any(widths[index] > 8 for index in flexible):
+        widest = max(flexible, key=lambda index: widths[index])
+        widths[widest] -= 1
+        spare += 1
+    return tabulate.tabulate(
+        rows,
+        heads,
+        tablefmt="simple",
+        disable_numparse=True,
+        colalign=["left" if head in text else "right" for head in heads],
+        maxcolwidths=[widths[index] if index in flexible else None for index in range(len(heads))],
+    )
+
+
+def width() -> int:
+    """Return how many columns a table may have."""
+    return min(max(shutil.get_terminal_size((100, 24)).columns, NARROW), WIDE)
+
+
+def good(word: str) -> str:
+    """Return a word as one that tells of something well."""
+    return click.style(word, fg="green")
+
+
+def bad(word: str) -> str:
+    """Return a word as one that tells of something amiss."""
+    return click.style(word, fg="red", bold=True)
+
+
+def _most(shares: dict[str, float]) -> str:
+    """Return the greatest share of a limit in percent, and the axis that uses it."""
+    axis, share = max(shares.items(), key=lambda item: item[1], default=("", 0.0))
+    return f"{100 * share:.0f} {axis}" if share > 0 else ""
+
+
+def _held(step: PlannedStep) -> str:
+    """Return what limits a step, axis by axis, the strongest first."""
+    by_axis: dict[str, list[str]] = {}
+    for limit in step.limited_by:
+        word = SHORT.get(limit.quantity, limit.quantity)
+        by_axis.setdefault(limit.axis or _plain(limit.quantity), []).append(
+            word if limit.axis else ""
+        )
+    return "; ".join(
+        f"{name} {', '.join(quantities)}".strip() for name, quantities in by_axis.items()
+    )
+
+
+def _plain(quantity: str) -> str:
+    """Return what limits a step as a whole, in words."""
+    return {"speed": "speed asked for", "time": "time asked for"}.get(quantity, quantity)
+
+
+def _asks_for_time(step: PlannedStep) -> bool:
+    return any(limit.quantity == "time" for limit in step.limited_by)
+
+
+def _name(limit: Limit) -> str:
+    return f"{limit.axis} {limit.quantity}" if limit.axis else _plain(limit.quantity)
+
+
+def _met(finding: Finding) -> str:
+    """Return whether a requirement is met; "?" where the table is too coarse to tell."""
+    if not finding.decided:
+        return "?"
+    return good("yes") if finding.ok else bad("NO")
+
+
+def _required(finding: Finding) -> str:
+    return f"{finding.axis} {finding.check}" if finding.axis else finding.check
+
+
+def _short(value: float, digits: int = 6) -> str:
+    """Return a number in few digits. What rounding alone makes, below a billionth, is 0."""
+    return f"{round(value, 9) + 0.0:.{digits}g}"
+
+
+def _at(finding: Finding) -> str:
+    """Return where the worst case is; nowhere in particular where it is 0."""
+    parts = [finding.step] if finding.step and round(finding.value, 9) else []
+    if finding.time is not None and round(finding.value, 9):
+        parts.append(f"at {finding.time:.3f} s")
+    return " ".join(parts)
