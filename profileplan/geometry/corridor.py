@@ -7,7 +7,7 @@ columns are the axes.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
@@ -18,6 +18,9 @@ if TYPE_CHECKING:
 
 Array = npt.NDArray[np.float64]
 """An array of floats."""
+
+Flags = npt.NDArray[np.bool_]
+"""An array of truth values."""
 
 Indices = npt.NDArray[np.intp]
 """An array of whole numbers that count something."""
@@ -112,18 +115,31 @@ class Corridor:
         both.
     points : (m + 1, d) array [mm or deg]
         Start, a point of every gate, end.
+    still : (2, d) array of bool, optional
+        Axes that stand still in the first region, and in the last.
+    clear : float, optional [mm]
+        Height above 0 of the free space of a cell; 0: the regions are those of a tolerance.
     """
 
     regions: Regions
     gates: Regions
     points: Array
+    still: Flags = field(default_factory=lambda: np.zeros((2, 1), dtype=bool))
+    clear: float = 0.0
+
+    def __post_init__(self) -> None:
+        size = (2, self.points.shape[1])
+        object.__setattr__(self, "still", np.broadcast_to(self.still, size))
 
     def part(self, first: int, last: int) -> Corridor:
         """Return the regions from ``first`` to ``last``, without ``last`` itself."""
-        return Corridor(
-            self.regions.at(slice(first, last)),
-            self.gates.at(slice(first, last - 1)),
-            self.points[first : last + 1],
+        inner = np.array([[first == 0], [last == len(self.regions)]])
+        return replace(
+            self,
+            regions=self.regions.at(slice(first, last)),
+            gates=self.gates.at(slice(first, last - 1)),
+            points=self.points[first : last + 1],
+            still=self.still & inner,
         )
 
     def follow(self, hulls: Array, load: tuple[Array, Array] | None = None) -> Followed:

@@ -13,6 +13,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 
 from profileplan.motion.laws import LAWS, Limits
+from profileplan.motion.rounds import held_points
 from profileplan.motion.spline import Group, Spline
 from profileplan.motion.synchronisation import line_limits
 
@@ -123,7 +124,18 @@ def _along(corridor: Corridor, bounds: Bounds, spans: list[Array]) -> Spline:
         points[degree:-degree] = along[degree - 1 : joined.size - 1][:, axes]
         points[:degree], points[-degree:] = corridor.points[0, axes], corridor.points[-1, axes]
         groups.append(Group(degree, axes, points))
-    return Spline(joined, region, tuple(groups))
+    spline = Spline(joined, region, tuple(groups))
+    for group in groups:
+        held = held_points(spline, group, corridor)
+        half = len(held) // 2
+        # What stands still does so where it begins, or where it ends.
+        group.points[:half][held[:half]] = np.broadcast_to(
+            corridor.points[0, group.axes], group.points[:half].shape
+        )[held[:half]]
+        group.points[half:][held[half:]] = np.broadcast_to(
+            corridor.points[-1, group.axes], group.points[half:].shape
+        )[held[half:]]
+    return spline
 
 
 def _degrees(bounds: Bounds) -> list[tuple[int, Indices]]:

@@ -387,7 +387,7 @@ def _free(spline: Spline, corridor: Corridor, ends: tuple[int, int]) -> Array:
 
 def _joined(passages: list[Passage], corridor: Corridor, bounds: Bounds) -> Passage | None:
     """Return passages that follow each other as one, inside all limits."""
-    whole = Spline.chain([passage.spline for passage in passages])
+    whole = rounds.stilled(Spline.chain([passage.spline for passage in passages]), bounds)
     prices, offset = [], 0
     for passage in passages:
         weight = passage.spline.duration / whole.duration

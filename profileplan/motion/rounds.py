@@ -33,6 +33,9 @@ Number = TypeVar("Number", np.float64, np.intp)
 REST = 1e-9
 """Share of its velocity limit below which an axis counts as standing."""
 
+NEARLY = 1e-8
+"""The same share below which an axis is made to stand."""
+
 MOST_ITERATIONS = 80
 """Iterations of the interior-point solver in one round."""
 
@@ -51,8 +54,8 @@ What they leave over is scaled away. All of them keep the limits and regions to 
 REGULARISATION = 1e-9
 """What the solver adds to its pivots where it does not refine its solutions."""
 
-CENTRING = 0.05
-"""Weight of the distance from a region's middle, against the jerk, in ``calm``."""
+LOWNESS = 0.05
+"""Weight of the mean height, as a share of the greatest, against the jerk, in ``calm``."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -67,6 +70,8 @@ class Bounds:
         Limit of the speed along the path in each region; infinity is none.
     linear : (d,) array of bool
         The axes along which the speed is counted.
+    low : int
+        Column of the axis that is kept low where time does not need it high; -1: none.
     """
 
     velocity: Array
@@ -75,6 +80,7 @@ class Bounds:
     jerk: Array
     speed: Array
     linear: Flags
+    low: int = -1
 
 
 class Price(NamedTuple):
@@ -141,6 +147,25 @@ def sides(group: Group, velocity: Array, bounds: Bounds) -> Sides:
     return Sides(scale, (floor, ceiling), (low, high))
 
 
+def stilled(spline: Spline, bounds: Bounds) -> Spline:
+    """Return a spline whose axes stand still where they nearly do, if they may not slow down alike.
+
+    A round leaves a velocity of rounding where an axis turns round. Its direction would decide
+    which limit holds there, so the two control points that it comes from are made one.
+    """
+    groups = []
+    for group in spline.groups:
+        points = group.points.copy()
+        velocity = group.levels(spline.spans)[0].values
+        asks = bounds.acceleration[group.axes] != bounds.deceleration[group.axes]
+        nearly = (np.abs(velocity) < NEARLY * bounds.velocity[group.axes]) & asks
+        nearly[: group.degree - 1] = nearly[-group.degree :] = False
+        for row, axis in np.argwhere(nearly):
+            points[row + 1, axis] = points[row, axis]
+        groups.append(Group(group.degree, group.axes, points))
+    return Spline(spline.spans, spline.region, tuple(groups))
+
+
 def overrun(spline: Spline, bounds: Bounds) -> float:
     """Return the scale of time at which a spline's limits on derivatives are just kept."""
     least = 0.0
@@ -171,32 +196,32 @@ def step(spline: Spline, corridor: Corridor, bounds: Bounds, *, trust: Array) ->
         Greatest relative change of each span.
     """
     spans = spline.spans
-    program = _Program(spline, times=spans.size)
+    program = _Program(spline, corridor, times=spans.size)
     program.cost[program.time] = spans / spline.duration
     columns = program.time.start + np.arange(spans.size)
     shortest = np.clip(1 - SHORTEST_SPAN / spans, 0.0, trust)
     for sign, most in ((1.0, trust), (-1.0, shortest)):
         program.rows(most)
         program.entries(np.arange(spans.size), columns, np.full(spans.size, sign))
-    program.constrain(corridor, bounds)
+    program.constrain(bounds)
     return program.solve(rough=True)
 
 
 def refit(spline: Spline, corridor: Corridor, bounds: Bounds) -> Outcome:
     """Return the fastest motion with a spline's ratios of spans, exactly inside the limits."""
-    program = _Program(spline, times=1)
+    program = _Program(spline, corridor, times=1)
     program.cost[program.time] = 1.0
     room = min(1 - WIDEST_SCALE[0], max(1 - SHORTEST_SPAN / float(spline.spans.min()), 0.0))
     program.rows(np.array([WIDEST_SCALE[1] - 1, room]))
     program.entries(np.arange(2), np.full(2, program.time.start), np.array([1.0, -1.0]))
-    program.constrain(corridor, bounds)
+    program.constrain(bounds)
     return program.solve(rough=True)
 
 
 def calm(spline: Spline, corridor: Corridor, bounds: Bounds) -> Outcome:
     """Return the motion with a spline's spans, the least jerk and the most central way."""
-    program = _Program(spline, times=0)
-    program.constrain(corridor, bounds)
+    program = _Program(spline, corridor, times=0)
+    program.constrain(bounds)
     program.quieten(bounds)
     return program.solve()
 
@@ -210,17 +235,17 @@ class _Program:
         Unknown times: all N spans; 1, a common scale, as whose powers limits grow; or none.
     """
 
-    def __init__(self, spline: Spline, *, times: int) -> None:
+    def __init__(self, spline: Spline, corridor: Corridor, *, times: int) -> None:
         self.spline = spline
+        self.corridor = corridor
         self.scales = times == 1
         self.column: list[Indices] = []
         self.unit = 1e-300
         count = 0
         for group in spline.groups:
-            columns = np.full(group.points.shape, -1)
-            free = columns[group.degree : -group.degree]
-            free[:] = count + np.arange(free.size).reshape(free.shape)
-            count += free.size
+            free = ~held_points(spline, group, corridor)
+            columns = np.where(free, count - 1 + np.cumsum(free).reshape(free.shape), -1)
+            count += int(free.sum())
             self.column.append(columns)
             self.unit = max(self.unit, float(np.abs(np.diff(group.points, axis=0)).mean()))
         self.time = slice(count, count + times)
@@ -234,9 +259,9 @@ class _Program:
         self.marks: list[_Mark] = []
         self.velocity = [group.levels(spline.spans)[0].values for group in spline.groups]
 
-    def constrain(self, corridor: Corridor, bounds: Bounds) -> None:
+    def constrain(self, bounds: Bounds) -> None:
         """Add the limits, the regions and the gates."""
-        spline = self.spline
+        spline, corridor = self.spline, self.corridor
         for number, group in enumerate(spline.groups):
             levels = group.levels(spline.spans)
             side = sides(group, levels[0].values, bounds)
@@ -285,8 +310,18 @@ class _Program:
                 block = sp.csc_matrix(entries, shape=(len(rows), self.cost.size))
                 blocks.append(block)
                 self.cost += block.T @ (weight * level.values[:, axis] / own)
+            for place in np.flatnonzero(group.axes == bounds.low):
+                self._lowered(number, int(place))
         stacked = sp.vstack(blocks)
         self.quadratic = sp.triu(stacked.T @ stacked, format="csc")
+
+    def _lowered(self, number: int, place: int) -> None:
+        """Add the mean of an axis's control points to the cost, as a share of their range."""
+        columns = self.column[number][:, place]
+        free = columns[columns >= 0]
+        size = float(np.ptp(self.spline.groups[number].points[:, place]))
+        if size > 0:
+            self.cost[free] += LOWNESS * self.unit / size / max(free.size, 1)
 
     def rows(self, right: Array, *, cone: int = 0) -> None:
         """Begin rows with these right sides; a cone has so many of them, 0: each its own."""
@@ -461,6 +496,10 @@ class _Program:
         if regions.bound.size:
             self.rows(regions.bound - np.einsum("nkd,nd->nk", regions.rows, values))
             each = np.arange(regions.bound.size).reshape(regions.bound.shape)
+            if self.corridor.clear > 0:
+                weight = np.full(len(values), self.corridor.clear)
+                for row in each.T:
+                    self.priced("clearance", -1, interval, weight, row)
             self.entries(each, way[:, np.newaxis], regions.rows_way)
             self._point_entries(each, points, regions.rows)
 
@@ -487,6 +526,21 @@ class _Program:
 def _spread(values: npt.NDArray[Number], shape: tuple[int, ...]) -> npt.NDArray[Number]:
     """Return values in the order of a shape that they are spread over."""
     return (values if values.shape == shape else np.broadcast_to(values, shape)).ravel()
+
+
+def held_points(spline: Spline, group: Group, corridor: Corridor) -> Flags:
+    """Return which control points keep their place: (N + degree, g) array of bool.
+
+    Those of the rests at both ends, and of the axes that stand still in the first or last region.
+    """
+    held = np.zeros(group.points.shape, dtype=bool)
+    held[: group.degree] = held[-group.degree :] = True
+    first, last = corridor.still[:, group.axes]
+    begun = int(np.searchsorted(spline.region, 1)) + group.degree
+    ended = int(np.searchsorted(spline.region, len(corridor.regions) - 1))
+    held[:begun] |= first
+    held[ended:] |= last
+    return held
 
 
 def speed_bounds(group: Group, spline: Spline, bounds: Bounds) -> Array:

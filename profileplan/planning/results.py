@@ -93,7 +93,7 @@ class Plan(Schedule):
 
     Examples
     --------
-    >>> from profileplan.inputs import Axis
+    >>> from profileplan import Axis, Cycle, Machine, Move, plan
     >>> machine = Machine(
     ...     name="feeder",
     ...     axes=(Axis("x", travel=(0.0, 500.0), velocity=1000.0, acceleration=5000.0),),
