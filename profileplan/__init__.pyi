@@ -46,7 +46,13 @@ from profileplan.inputs import (
     Move as Move,
 )
 from profileplan.inputs import (
+    Part as Part,
+)
+from profileplan.inputs import (
     PathStep as PathStep,
+)
+from profileplan.inputs import (
+    Pattern as Pattern,
 )
 from profileplan.inputs import (
     Payload as Payload,
@@ -74,6 +80,9 @@ from profileplan.inputs import (
 )
 from profileplan.inputs import (
     Waypoint as Waypoint,
+)
+from profileplan.inputs import (
+    expand as expand,
 )
 from profileplan.inputs import (
     load_job as load_job,

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import json
 import math
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, NamedTuple
 
 from profileplan import checks, setpoints
 from profileplan.inputs import PathStep
@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
     from pathlib import Path
 
+    from profileplan.inputs import Part
     from profileplan.planning import Limit, Plan, PlannedStep
 
 CAUTION = (
@@ -48,6 +49,7 @@ def summarise(plan: Plan) -> dict[str, object]:
             _step(plan, step, asked)
             for step, asked in zip(plan.steps, plan.job.cycle.steps, strict=True)
         ],
+        **_parts(plan),
         "checks": [finding_values(finding) for finding in findings],
         "levers": [
             {
@@ -61,6 +63,35 @@ def summarise(plan: Plan) -> dict[str, object]:
         "notes": list(plan.notes),
         "caution": CAUTION,
     }
+
+
+class PartTime(NamedTuple):
+    """When a part is begun, and how long it takes [s]."""
+
+    part: Part
+    start: float
+    duration: float
+
+
+def part_times(plan: Plan) -> tuple[PartTime, ...]:
+    """Return the times of all parts of a plan, in order."""
+    times = []
+    for part in plan.job.cycle.parts:
+        steps = plan.steps[part.first : part.last + 1]
+        # a sum of durations is the same for equal parts; a difference of times is rounded
+        duration = math.fsum(step.duration for step in steps)
+        times.append(PartTime(part, steps[0].start, duration))
+    return tuple(times)
+
+
+def slowest(times: Sequence[PartTime]) -> PartTime:
+    """Return the part that takes longest, the first of several."""
+    return max(times, key=lambda time: time.duration)
+
+
+def mean_duration(times: Sequence[PartTime]) -> float:
+    """Return how long the parts take on average [s]."""
+    return math.fsum(time.duration for time in times) / len(times)
 
 
 def finding_values(finding: checks.Finding) -> dict[str, object]:
@@ -78,6 +109,7 @@ def finding_values(finding: checks.Finding) -> dict[str, object]:
         "decided": finding.decided,
         "time_s": finding.time,
         "step": finding.step,
+        **({"what": finding.what} if finding.what else {}),
     }
 
 
@@ -112,6 +144,21 @@ def uses(plan: Plan, step: PlannedStep) -> dict[str, dict[str, float]]:
             if math.isfinite(axis.limits[row])
         }
         for row, quantity in enumerate(checks.QUANTITIES)
+    }
+
+
+def _parts(plan: Plan) -> dict[str, object]:
+    """Return the times of parts; nothing where there are none."""
+    times = part_times(plan)
+    if not times:
+        return {}
+    return {
+        "parts": [
+            {"name": time.part.name, "start_s": time.start, "duration_s": time.duration}
+            for time in times
+        ],
+        "slowest_part": slowest(times).part.name,
+        "mean_part_s": mean_duration(times),
     }
 
 

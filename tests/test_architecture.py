@@ -64,7 +64,7 @@ WITHIN = {
         "trace",
     ),
     "cli": ("frame", "tables", "jobs", "drawings"),
-    "planning": ("results", "tasks", "rides", "steps", "traces", "cycle"),
+    "planning": ("results", "tasks", "rides", "steps", "transfers", "traces", "cycle"),
 }
 """Modules of a room from the ground up."""
 

@@ -162,13 +162,13 @@ def test_the_ways_in_and_out_are_straight_on(drawing: Callable[..., Path]) -> No
 
 
 def test_the_tool_is_lifted_between_outlines(drawing: Callable[..., Path]) -> None:
-    """And at the end; on the way from one to the next it goes across at that height."""
+    """And at the end; on the way from one to the next it goes across above that height only."""
     own = plan(drawing(spots))
     assert_allclose(own.trajectory.at([own.duration])[0, 2], WORK + LIFT, atol=1e-9)
     for one, other in pairwise(own.steps[0].tracing):
         between = own.trajectory.at(np.linspace(one.leaves, other.enters, 2001))
         moves = np.abs(np.diff(between[:, :2], axis=0)).max(axis=1) > 1e-9
-        assert_allclose(between[:-1, 2][moves], WORK + LIFT, atol=1e-6)
+        assert between[:-1, 2][moves].min() >= WORK + LIFT - 1e-6
 
 
 def test_without_lift_the_tool_goes_across_at_its_height(drawing: Callable[..., Path]) -> None:
@@ -224,16 +224,12 @@ def test_a_missing_drawing_is_a_fault(tmp_path: Path) -> None:
 
 
 def test_a_time_asked_for_is_taken(drawing: Callable[..., Path]) -> None:
-    """The outlines are slowed down, the moves between them are not."""
+    """Outlines and the ways between them are slowed down alike."""
     fast = plan(drawing(spots))
     slow = plan(drawing(spots), time=1.5 * fast.duration)
     assert_allclose(slow.duration, 1.5 * fast.duration, rtol=1e-12)
     assert failures(slow) == []
-    gaps = [
-        [other.enters - one.leaves for one, other in pairwise(own.steps[0].tracing)]
-        for own in (fast, slow)
-    ]
-    assert_allclose(gaps[0], gaps[1], rtol=1e-9)
+    assert [limit.quantity for limit in slow.steps[0].limited_by] == ["time"]
 
 
 def test_a_later_step_goes_on_from_the_end(drawing: Callable[..., Path]) -> None:

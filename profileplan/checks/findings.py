@@ -67,6 +67,8 @@ class Finding:
         When the worst value occurs, from the beginning of the cycle [s].
     step : str, optional
         The step in which it occurs.
+    what : str
+        What it is between: "tool to kiln car post"; empty where axis and step say all.
     """
 
     check: str
@@ -79,6 +81,7 @@ class Finding:
     rounding: float = 0.0
     time: float | None = None
     step: str | None = None
+    what: str = ""
 
     @property
     def use(self) -> float | None:

@@ -40,7 +40,8 @@ def check(schedule: Schedule) -> tuple[Finding, ...]:
 
     Travel, velocity, acceleration, deceleration and jerk of every axis; no jump in position,
     velocity or, where the jerk is limited, acceleration, within steps and between them; arrival
-    where the cycle says; speed along the path and duration where they are given; the target.
+    where the cycle says; speed along the path and duration where they are given; clearance of
+    keep-outs; the target.
 
     Parameters
     ----------
@@ -56,7 +57,13 @@ def check(schedule: Schedule) -> tuple[Finding, ...]:
         strict=True,
     )
     findings = [finding for groups in by_axis for group in groups for finding in group]
-    return (*findings, *path_findings(schedule), *trace_findings(schedule), *_times(schedule))
+    return (
+        *findings,
+        *path_findings(schedule),
+        *trace_findings(schedule),
+        *_clearance(schedule),
+        *_times(schedule),
+    )
 
 
 def _worst(schedule: Schedule, peaks: Sequence[Peak]) -> list[Worst]:
@@ -145,6 +152,15 @@ def _arrival(schedule: Schedule) -> Iterator[list[Finding]]:
         time = step.end if index else 0.0
         worst = Worst(float(missed[index, column]), time, step.name)
         yield [upper(worst, "arrival", nearness(axis), axis.unit, axis)]
+
+
+def _clearance(schedule: Schedule) -> Iterator[Finding]:
+    """Judge the distances from keep-outs, where there are any."""
+    if schedule.job.machine.keepouts:
+        # shapely costs more start-up than all other checks: only a cell pays for it.
+        from profileplan.checks.clearance import clearance_findings  # noqa: PLC0415
+
+        yield from clearance_findings(schedule)
 
 
 def _times(schedule: Schedule) -> Iterator[Finding]:

@@ -256,6 +256,8 @@ def _show_plan(planned: Plan) -> None:
     click.echo(f"{planned.job.machine.name}{f', {source}' if source else ''}\n")
     click.echo(tables.step_table(planned), color=frame.color())
     click.echo(f"\n{tables.verdict(planned)}", color=frame.color())
+    if planned.job.cycle.parts:
+        click.echo(tables.parts(planned))
     click.echo(tables.requirements(planned.check()), color=frame.color())
     for finding in planned.check():
         if not finding.ok and finding.check != "cycle time":

@@ -20,25 +20,56 @@ SHORT = {"velocity": "vel", "acceleration": "acc", "deceleration": "dec", "jerk"
 """How the step table abbreviates what limits a step."""
 
 
+NAMED = 5
+"""How many of the steps that a limit holds back are named, where a cycle has parts."""
+
+
 def step_table(planned: Plan) -> str:
-    """Return the table of steps: when, how long, what limits each, the use of each limit."""
+    """Return the table of steps: when, how long, what limits each, the use of each limit.
+
+    Of a cycle with parts it has the first part and the slowest, and the steps of no part.
+    """
     from profileplan.summary import uses  # noqa: PLC0415
+
+    left_out = _left_out(planned)
 
     uses_of = [f"{word} %" for word in SHORT.values()]
     heads = ["#", "step", "kind", "start s", "time s", "limited by", *uses_of]
     rows = []
     for number, step in enumerate(planned.steps, start=1):
+        if number - 1 in left_out:
+            continue
         shares = [_most(by_axis) for by_axis in uses(planned, step).values()]
         times = [f"{step.start:.3f}", f"{step.duration:.3f}"]
         rows.append([str(number), step.name, step.kind, *times, _held(step), *shares])
-    return table(heads, rows, text=("step", "kind", "limited by"))
+    shown = table(heads, rows, text=("step", "kind", "limited by"))
+    if not left_out:
+        return shown
+    count = f"{len(left_out)} row{'s' if len(left_out) > 1 else ''}"
+    return f"{shown}\n{count} of other parts left out; --json has all"
+
+
+def parts(planned: Plan) -> str:
+    """Return in a line how long the parts of a cycle take; nothing where it has none."""
+    from profileplan.summary import mean_duration, part_times, slowest  # noqa: PLC0415
+
+    times = part_times(planned)
+    if not times:
+        return ""
+    if len(times) == 1:
+        return f"1 part, {times[0].duration:.3f} s"
+    worst = slowest(times)
+    return (
+        f"{len(times)} parts, {mean_duration(times):.3f} s each on average; "
+        f"slowest: {worst.part.name}, {worst.duration:.3f} s"
+    )
 
 
 def levers(planned: Plan) -> str:
     """Return what would shorten the cycle, and the steps by the time that they take."""
     heads = ["what limits", "saved by 10 % more, s", "steps that it limits"]
     rows = [
-        [_name(lever.limit), f"{lever.limit.saves:.3f}", "; ".join(lever.steps)]
+        [_name(lever.limit), f"{lever.limit.saves:.3f}", _named(planned, lever.steps)]
         for lever in planned.levers
         if lever.limit.quantity != "time"
     ]
@@ -76,9 +107,10 @@ def findings_table(findings: Sequence[Finding]) -> str:
 
 def where(finding: Finding) -> str:
     """Return in a line how a requirement is not met, and where."""
+    allowed = "at least" if finding.value < finding.limit else "allowed"
     return (
         f"{_required(finding)}: {finding.value:.6g} {finding.unit}, "
-        f"allowed {finding.limit:.6g} {finding.unit}, {_at(finding)}"
+        f"{allowed} {finding.limit:.6g} {finding.unit}, {_at(finding)}"
     )
 
 
@@ -147,6 +179,27 @@ def bad(word: str) -> str:
     return click.style(word, fg="red", bold=True)
 
 
+def _left_out(planned: Plan) -> set[int]:
+    """Return the steps of parts that are neither the first nor the slowest, counted from 0."""
+    from profileplan.summary import part_times, slowest  # noqa: PLC0415
+
+    times = part_times(planned)
+    kept = (times[0].part, slowest(times).part) if times else ()
+    return {
+        index
+        for time in times
+        if time.part not in kept
+        for index in range(time.part.first, time.part.last + 1)
+    }
+
+
+def _named(planned: Plan, steps: Sequence[str]) -> str:
+    """Return names of steps in a row, the first few where parts repeat them."""
+    if not planned.job.cycle.parts or len(steps) <= NAMED:
+        return "; ".join(steps)
+    return f"{'; '.join(steps[:NAMED])}; and {len(steps) - NAMED} more"
+
+
 def _most(shares: dict[str, float]) -> str:
     """Return the greatest share of a limit in percent, and the axis that uses it."""
     axis, share = max(shares.items(), key=lambda item: item[1], default=("", 0.0))
@@ -187,7 +240,8 @@ def _met(finding: Finding) -> str:
 
 
 def _required(finding: Finding) -> str:
-    return f"{finding.axis} {finding.check}" if finding.axis else finding.check
+    named = f"{finding.axis} {finding.check}" if finding.axis else finding.check
+    return f"{named}, {finding.what}" if finding.what else named
 
 
 def _short(value: float, digits: int = 6) -> str:
@@ -196,8 +250,9 @@ def _short(value: float, digits: int = 6) -> str:
 
 
 def _at(finding: Finding) -> str:
-    """Return where the worst case is; nowhere in particular where it is 0."""
-    parts = [finding.step] if finding.step and round(finding.value, 9) else []
-    if finding.time is not None and round(finding.value, 9):
+    """Return where the worst case is; nowhere in particular where nothing is amiss at 0."""
+    somewhere = bool(round(finding.value, 9)) or bool(finding.what)
+    parts = [finding.step] if finding.step and somewhere else []
+    if finding.time is not None and somewhere:
         parts.append(f"at {finding.time:.3f} s")
     return " ".join(parts)

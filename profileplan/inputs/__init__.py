@@ -28,6 +28,7 @@ from profileplan.inputs.machine import (
     Tool,
 )
 from profileplan.inputs.machine_file import read_machine
+from profileplan.inputs.patterns import Expansion, Part, Pattern, expand
 from profileplan.inputs.rules import Outline, Positions
 from profileplan.inputs.source import load_job
 from profileplan.inputs.waypoints import read_waypoints
@@ -38,6 +39,7 @@ __all__ = [
     "AxisLimits",
     "Circle",
     "Cycle",
+    "Expansion",
     "Job",
     "Keepout",
     "LawName",
@@ -45,7 +47,9 @@ __all__ = [
     "Machine",
     "Move",
     "Outline",
+    "Part",
     "PathStep",
+    "Pattern",
     "Payload",
     "Place",
     "Positions",
@@ -57,6 +61,7 @@ __all__ = [
     "Transfer",
     "Wait",
     "Waypoint",
+    "expand",
     "load_job",
     "read_cycle",
     "read_machine",

@@ -12,6 +12,7 @@ from types import MappingProxyType
 from typing import TYPE_CHECKING, ClassVar, Literal, TypeAlias
 
 from profileplan.inputs.machine import judge_footprint
+from profileplan.inputs.patterns import Part, Written
 from profileplan.inputs.rules import (
     DURATION,
     EXTENT,
@@ -472,6 +473,10 @@ class Cycle:
         The machine file that the cycle file names.
     source : Path, optional
         The file it was read from.
+    parts : tuple of Part
+        Which steps handle which part, in order; steps may belong to none.
+    written : tuple of Written
+        Where each step stands in the file, if the steps are not numbered as they are there.
     """
 
     steps: tuple[Step, ...]
@@ -481,6 +486,8 @@ class Cycle:
     law: LawName = "trapezoidal"
     machine: Path | None = None
     source: Path | None = None
+    parts: tuple[Part, ...] = ()
+    written: tuple[Written, ...] = field(default=(), compare=False, repr=False)
 
     def __post_init__(self) -> None:
         judge = Judge()
@@ -488,10 +495,16 @@ class Cycle:
         object.__setattr__(self, "steps", steps)
         if not steps and not judge.faults:
             judge.note("steps", "no steps; at least one is needed")
+        if self.written and len(self.written) != len(self.steps):
+            judge.note(
+                "written", f"{len(self.written)} of {len(self.steps)} steps; give all or none"
+            )
+            object.__setattr__(self, "written", ())
         object.__setattr__(self, "start", judge.positions("start", self.start))
         judge.optional("target", self.target, DURATION, "s")
         judge.choice("law", self.law, LAW_NAMES)
         self._judge_labels(judge)
+        self._judge_parts(judge)
         judge.finish()
 
     def step_label(self, index: int) -> str:
@@ -505,6 +518,45 @@ class Cycle:
         step = self.steps[index]
         return step.name or f"{step.kind} {index + 1}"
 
+    def step_place(self, index: int) -> str:
+        """Return the key path of a step in the cycle file.
+
+        Parameters
+        ----------
+        index : int
+            Counted from 0.
+        """
+        return self.written[index].place if self.written else f"steps[{index + 1}]"
+
+    def where(self, index: int, key: str) -> str:
+        """Return the key path of a step's key in the cycle file, and the part that it is for.
+
+        Parameters
+        ----------
+        index : int
+            Counted from 0.
+        key : str
+            Of the step.
+        """
+        part = self.written[index].part if self.written else ""
+        return f"{self.step_place(index)}.{key}{f' ({part})' if part else ''}"
+
+    def _judge_parts(self, judge: Judge) -> None:
+        parts = judge.records("parts", self.parts, (Part,))
+        object.__setattr__(self, "parts", parts)
+        judge.unique(
+            ((f"parts[{i}].name", part.name) for i, part in enumerate(parts, start=1)),
+            "names of parts are unique",
+        )
+        free = 0
+        for number, part in enumerate(parts, start=1):
+            if part.first < free:
+                judge.note(f"parts[{number}].first", f"{part.first}; parts follow each other")
+            elif part.last >= len(self.steps):
+                message = f"{part.last}; there are {len(self.steps)} steps, counted from 0"
+                judge.note(f"parts[{number}].last", message)
+            free = part.last + 1
+
     def _judge_labels(self, judge: Judge) -> None:
         labels = [self.step_label(index) for index in range(len(self.steps))]
         first: dict[str, int] = {}
@@ -514,8 +566,9 @@ class Cycle:
                 faulty = index if self.steps[index].name else earlier
                 other = earlier if faulty == index else index
                 judge.note(
-                    f"steps[{faulty + 1}].name",
-                    f"{shown(label)} stands for steps[{other + 1}] already; step names are unique",
+                    f"{self.step_place(faulty)}.name",
+                    f"{shown(label)} stands for {self.step_place(other)} already; "
+                    "step names are unique",
                 )
 
 

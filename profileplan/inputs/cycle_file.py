@@ -1,5 +1,7 @@
 """What a cycle file says, with the waypoint files that it names.
 
+Groups of steps (``for_each``) are expanded here: a cycle has plain steps alone.
+
 A step that is faulty is stood in for by a harmless one, so that the others keep their numbers and
 can be judged too.
 """
@@ -30,15 +32,17 @@ from profileplan.inputs.cycle import (
     Wait,
     Waypoint,
 )
+from profileplan.inputs.groups import Groups, read_patterns
 from profileplan.inputs.quantities import Quantity
-from profileplan.inputs.rules import POSITION, is_number, near, shown, tidy
-from profileplan.inputs.table import Table, open_table
+from profileplan.inputs.rules import POSITION, near, shown, tidy
+from profileplan.inputs.table import Table, is_like_number, open_table
 from profileplan.inputs.waypoints import waypoint_reading
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Mapping
 
     from profileplan.inputs.machine import AxisKind, Machine
+    from profileplan.inputs.patterns import Written
     from profileplan.inputs.rules import Positions
 
     Kinds: TypeAlias = Mapping[str, AxisKind]
@@ -50,6 +54,7 @@ class Reading(NamedTuple):
     cycle: Cycle | None
     start: Positions
     steps: tuple[Step, ...]
+    written: tuple[Written, ...]
     faults: list[Fault]
 
 
@@ -89,19 +94,23 @@ def cycle_reading(table: Table, machine: Machine | None) -> Reading:
     tables = table.tables("steps")
     if tables is None:
         table.note("steps", "missing; at least one step is needed: [[steps]]")
-    steps = tuple(_step(inner, kinds) or Wait(0) for inner in tables or ())
+    groups = Groups(read_patterns(table, kinds), kinds, lambda inner: _step(inner, kinds))
+    made = groups.expanded(tables or ())
     named = machine_path(table)
     cycle = table.build(
         lambda: Cycle(
-            steps,
+            made.steps,
             start,
             target=table.optional_number("target", Quantity.TIME),
             law=table.choice("law", LAW_NAMES, default=Cycle.law),
             machine=named,
             source=table.file,
+            parts=made.parts,
+            # without groups the steps are numbered as they are in the file
+            written=made.written if made.parts else (),
         )
     )
-    return Reading(cycle, _harmless(start), steps, table.faults)
+    return Reading(cycle, _harmless(start), made.steps, made.written, table.faults)
 
 
 def machine_path(table: Table) -> Path | None:
@@ -141,7 +150,7 @@ def _step(table: Table, kinds: Kinds) -> Step | None:
 def _which_step(table: Table, found: list[str]) -> str:
     if found:
         return f"has {' and '.join(found)}; one step does one thing"
-    hints = (near(key, READERS) for key in table.raw)
+    hints = (near(key, (*READERS, "for_each")) for key in table.raw)
     hint = next((hint for hint in hints if hint), "")
     return f"does nothing; one of {', '.join(READERS)} is needed{hint}"
 
@@ -340,11 +349,7 @@ def _trace_axes(table: Table, kinds: Kinds) -> list[str]:
     others = [key for key in table.raw if key not in READERS and key not in STEP_KEYS["trace"]]
     if kinds:
         return [key for key in others if key in kinds]
-    return [key for key in others if not _belongs(key, "trace") and _is_like_number(table.raw[key])]
-
-
-def _is_like_number(raw: object) -> bool:
-    return is_number(raw) or (isinstance(raw, str) and raw[:1] in "+-.0123456789")
+    return [key for key in others if not _belongs(key, "trace") and is_like_number(table.raw[key])]
 
 
 def _place(table: Table) -> Place:

@@ -6,7 +6,7 @@ columns of the waypoint file that a point came from.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from types import MappingProxyType
 from typing import TYPE_CHECKING
 
@@ -26,13 +26,15 @@ from profileplan.inputs.cycle import (
     Waypoint,
 )
 from profileplan.inputs.machine import SETPOINT_UNITS
+from profileplan.inputs.patterns import Written
 from profileplan.inputs.rules import join, near, shown, tidy
 
 if TYPE_CHECKING:
-    from collections.abc import Iterable, Iterator, Mapping
+    from collections.abc import Iterable, Iterator, Mapping, Sequence
     from pathlib import Path
 
     from profileplan.inputs.machine import Axis, Machine
+    from profileplan.inputs.patterns import Placed
     from profileplan.inputs.rules import Positions
 
 
@@ -57,7 +59,9 @@ class Job:
 
     def __post_init__(self) -> None:
         cycle = self.cycle
-        faults = fit_faults(self.machine, cycle.start, cycle.steps, cycle.source)
+        faults = fit_faults(
+            self.machine, cycle.start, cycle.steps, cycle.source, written=cycle.written
+        )
         if not faults and _does_nothing(cycle):
             message = "nothing to do: no step moves an axis, and no step waits"
             faults = [Fault("", message, cycle.source)]
@@ -124,7 +128,12 @@ class Job:
 
 
 def fit_faults(
-    machine: Machine, start: Positions, steps: Iterable[Step], file: Path | None
+    machine: Machine,
+    start: Positions,
+    steps: Iterable[Step],
+    file: Path | None,
+    *,
+    written: Sequence[Written] = (),
 ) -> list[Fault]:
     """Return what does not fit between a machine and a cycle's values, in their order.
 
@@ -138,13 +147,72 @@ def fit_faults(
         What is done.
     file : Path, optional
         The cycle file.
+    written : sequence of Written
+        Where each step stands in the file, if the steps are not numbered as they are there.
     """
     axes = {axis.name: axis for axis in machine.axes}
     faults = [*_position_faults(axes, start, "start"), *_start_faults(axes, start)]
-    for index, step in enumerate(steps, start=1):
-        place = f"steps[{index}]"
-        faults += [f if f.file else f.within(place) for f in _step_faults(machine, axes, step)]
+    # the steps of a group come once for each place: a place in the file keeps the rank of its first
+    found: dict[str, list[Fault]] = {}
+    outside: dict[Placed, _Outside] = {}
+    for index, step in enumerate(steps):
+        own = written[index] if written else Written(f"steps[{index + 1}]")
+        here = found.setdefault(own.place, [])
+        for fault in _step_faults(machine, axes, step):
+            if placed := own.placed.get(fault.place):
+                outside.setdefault(placed, _Outside(own, fault)).numbers.add(own.number)
+            else:
+                here.append(fault if fault.file else fault.within(own.place))
+    for placed, places in outside.items():
+        _add(found[places.first.place], places.told(placed, known=placed.axis in axes))
+    faults += [fault for at_place in found.values() for fault in at_place]
     return [fault.within("", file) for fault in faults]
+
+
+def _add(faults: list[Fault], new: Fault) -> None:
+    """Add a fault, or its message to the fault that stands at its place already."""
+    for index, fault in enumerate(faults):
+        if fault.place == new.place:
+            faults[index] = replace(fault, message=f"{fault.message}; {new.message}")
+            return
+    faults.append(new)
+
+
+@dataclass(frozen=True)
+class _Outside:
+    """The places of a pattern that one axis of a machine cannot reach.
+
+    Parameters
+    ----------
+    first : Written
+        The first step that goes to one of them.
+    fault : Fault
+        The fault of that step, relative to it.
+    numbers : set of int
+        The numbers of all of them.
+    """
+
+    first: Written
+    fault: Fault
+    numbers: set[int] = field(default_factory=set)
+
+    def told(self, placed: Placed, *, known: bool) -> Fault:
+        """Return one fault for all the places.
+
+        Parameters
+        ----------
+        placed : Placed
+            What they have in common.
+        known : bool
+            Whether the machine has the axis.
+        """
+        place = f"{self.first.place}.{self.fault.place.split('.')[0]}.place"
+        if not known:
+            return Fault(place, f"{placed.axis} of {placed.pattern}: {self.fault.message}")
+        offset = f" with {shown(placed.offset)} added" if placed.offset else ""
+        total = f" ({len(self.numbers)} places in all)" if len(self.numbers) > 1 else ""
+        message = f"place {self.first.number} of {placed.pattern}{offset}: {placed.axis} = "
+        return Fault(place, f"{message}{self.fault.message}{total}")
 
 
 def _start_faults(axes: Mapping[str, Axis], start: Positions) -> Iterator[Fault]:

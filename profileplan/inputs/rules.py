@@ -100,6 +100,13 @@ class Judge:
         if value is not None:
             self.number(place, value, allowed, unit)
 
+    def whole(self, place: str, value: object, least: int, most: int) -> None:
+        """Note a value that is no whole number from `least` to `most`."""
+        if isinstance(value, bool) or not isinstance(value, int):
+            self.note(place, f"{shown(value)}; a whole number is needed")
+        elif not least <= value <= most:
+            self.note(place, f"{shown(value)}; allowed: {least:,} to {most:,}")
+
     def choice(self, place: str, value: object, names: tuple[str, ...]) -> None:
         """Note a value that is none of `names`."""
         if value not in names:

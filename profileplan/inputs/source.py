@@ -90,7 +90,7 @@ def _cycle_job(source: Path, machine_file: Path | None, faults: list[Fault]) -> 
     faults += reading.faults
     if machine is None or reading.cycle is None or faults:
         if machine is not None:
-            fit = fit_faults(machine, reading.start, reading.steps, source)
+            fit = fit_faults(machine, reading.start, reading.steps, source, written=reading.written)
             faults += _not_covered(fit, reading.faults)
         raise InputError(tidy(faults))
     return Job(machine, reading.cycle)

@@ -87,6 +87,16 @@ class Table:
             return default
         return self._parsed(join(self.place, key), raw, Quantity.LENGTH)
 
+    def whole(self, key: str, default: int) -> int:
+        """Return a whole number."""
+        raw = self._take(key)
+        if raw is None:
+            return default
+        if isinstance(raw, bool) or not isinstance(raw, int):
+            self.note(key, f"{shown(raw)}; a whole number is needed")
+            return default
+        return raw
+
     def text(self, key: str, default: str | None = None) -> str:
         """Return a text; without a default it must be given."""
         value = self.optional_text(key)
@@ -282,6 +292,11 @@ class Table:
 def is_array(raw: object) -> TypeGuard[list[object]]:
     """Tell whether a TOML value is an array."""
     return isinstance(raw, list)
+
+
+def is_like_number(raw: object) -> bool:
+    """Tell whether a TOML value is a number, or a text that begins like one."""
+    return is_number(raw) or (isinstance(raw, str) and raw[:1] in "+-.0123456789")
 
 
 def open_table(path: Path) -> Table:

@@ -54,7 +54,7 @@ What they leave over is scaled away. All of them keep the limits and regions to 
 REGULARISATION = 1e-9
 """What the solver adds to its pivots where it does not refine its solutions."""
 
-LOWNESS = 0.05
+LOWNESS = 1.0
 """Weight of the mean height, as a share of the greatest, against the jerk, in ``calm``."""
 
 
@@ -255,6 +255,7 @@ class _Program:
         self.count = self.first = 0
         self.parts: list[tuple[Indices, Indices, Array]] = []
         self.right: list[Array] = []
+        self.linear: list[Indices] = []
         self.cones: list[object] = []
         self.marks: list[_Mark] = []
         self.velocity = [group.levels(spline.spans)[0].values for group in spline.groups]
@@ -332,6 +333,7 @@ class _Program:
             self.cones += [clarabel.SecondOrderConeT(cone)] * (right.size // cone)
         else:
             self.cones.append(clarabel.NonnegativeConeT(right.size))
+            self.linear.append(np.arange(self.first, self.count))
 
     def priced(
         self, quantity: str, axis: int, interval: Indices, weight: Array, rows: Indices
@@ -360,6 +362,11 @@ class _Program:
         kept = (columns >= 0) & (values != 0)
         entries = (values[kept], (rows[kept], columns[kept]))
         matrix = sp.csc_matrix(entries, shape=(self.count, self.cost.size))
+        right, empty = np.concatenate(self.right), np.ones(self.count, dtype=bool)
+        empty[rows[kept]] = False
+        # What no unknown can change, such as the bound at a fixed end, is no matter of this round.
+        linear = np.concatenate(self.linear)
+        right[linear[empty[linear]]] = 1.0
         settings = clarabel.DefaultSettings()
         settings.verbose = False
         settings.presolve_enable = False
@@ -371,7 +378,7 @@ class _Program:
             settings.iterative_refinement_enable = False
             settings.static_regularization_constant = REGULARISATION
         solution = clarabel.DefaultSolver(
-            self.quadratic, self.cost, matrix, np.concatenate(self.right), self.cones, settings
+            self.quadratic, self.cost, matrix, right, self.cones, settings
         ).solve()
         if str(solution.status) not in {"Solved", "AlmostSolved"}:
             return Outcome(None)

@@ -9,7 +9,8 @@ To add a kind of step, write a function that turns its ``Task`` into a ``Motion`
 
 from __future__ import annotations
 
-from dataclasses import replace
+from collections.abc import Mapping
+from dataclasses import fields, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -25,8 +26,11 @@ from profileplan.inputs import (
     PathStep,
     Payload,
     Signal,
+    Step,
     Trace,
+    Transfer,
     Wait,
+    Waypoint,
     load_job,
 )
 from profileplan.motion.laws import Limits
@@ -76,11 +80,12 @@ def plan(
     positions = job.positions({index: own.end for index, own in drawn.items()})
     steps: list[PlannedStep] = []
     notes: list[str] = []
+    alike = _Alike()
     start = 0.0
     for index, step in enumerate(job.cycle.steps):
         ends = (np.array(positions[index]), np.array(positions[index + 1]))
         within = None if progress is None else _within(progress, index, len(job.cycle.steps))
-        motion = _motion(Task(job, index, step, ends, limits, within), drawn.get(index))
+        motion = alike.motion(Task(job, index, step, ends, limits, within), drawn.get(index))
         duration, least = motion.trajectory.duration, motion.least_time
         steps.append(
             PlannedStep(
@@ -153,25 +158,74 @@ def _within(
     return lambda share: progress(index + share, count)
 
 
-def _motion(task: Task, drawn: Traced | None) -> Motion:
-    step = task.step
-    if isinstance(step, Move):
-        return plan_move(task, step)
-    if isinstance(step, Line):
-        return plan_line(task, step)
-    if isinstance(step, PathStep):
-        return plan_path(task, step)
-    if isinstance(step, Wait):
-        held = Limit(None, "time")
-        rest = Trajectory.rest(task.axes, task.ends[0], step.seconds)
-        return Motion(rest, (held,) if step.seconds else (), step.seconds)
-    if isinstance(step, Signal | Payload):
-        return Motion(Trajectory.rest(task.axes, task.ends[0]))
-    if isinstance(step, Trace) and drawn is not None:
-        from profileplan.planning.traces import plan_trace  # noqa: PLC0415
+class _Alike:
+    """Plans a step once and takes its motion for all that are alike.
 
-        return plan_trace(task, step, drawn)
-    raise task.error(step.kind, f"this version does not plan steps of the kind {step.kind}")
+    Steps are alike that differ in their names only, begin and end at the same positions to the last
+    bit, and have the same payload. What follows a drawing is planned each time.
+    """
+
+    def __init__(self) -> None:
+        self._known: dict[tuple[object, ...], tuple[str, Motion]] = {}
+        self._payload: tuple[object, ...] = ()
+
+    def motion(self, task: Task, drawn: Traced | None) -> Motion:
+        """Return the motion of a step; the steps are given in their order."""
+        step, label = task.step, task.job.cycle.step_label(task.index)
+        if isinstance(step, Payload):
+            self._payload = _content(step)
+        if isinstance(step, Trace):
+            return _motion(task, drawn)
+        key = (*(end.tobytes() for end in task.ends), self._payload, _content(step))
+        if key not in self._known:
+            self._known[key] = label, _motion(task, drawn)
+        first, motion = self._known[key]
+        if first != label and motion.note.startswith(f"{first}: "):
+            return replace(motion, note=f"{label}: {motion.note.removeprefix(f'{first}: ')}")
+        return motion
+
+
+def _content(step: Step) -> tuple[object, ...]:
+    """Return all that a step asks for besides its name, to be compared and hashed."""
+    own = (_hashable(getattr(step, f.name)) for f in fields(step) if f.name != "name")
+    return (step.kind, *own)
+
+
+def _hashable(value: object) -> object:
+    if isinstance(value, Mapping):
+        return tuple(value.items())
+    if isinstance(value, tuple):
+        return tuple(map(_hashable, value))
+    if isinstance(value, Waypoint):
+        return (tuple(value.to.items()), value.speed, value.wait, value.tolerance)
+    return value
+
+
+def _motion(task: Task, drawn: Traced | None) -> Motion:
+    """Return the motion of a step; what only some kinds need is imported with these."""
+    match task.step:
+        case Move() as step:
+            found = plan_move(task, step)
+        case Line() as step:
+            found = plan_line(task, step)
+        case PathStep() as step:
+            found = plan_path(task, step)
+        case Trace() as step:
+            from profileplan.planning.traces import plan_trace  # noqa: PLC0415
+
+            if drawn is None:
+                raise task.error(step.kind, "its drawing was not read")
+            found = plan_trace(task, step, drawn)
+        case Transfer() as step:
+            from profileplan.planning.transfers import plan_transfer  # noqa: PLC0415
+
+            found = plan_transfer(task, step)
+        case Wait(seconds=seconds):
+            rest = Trajectory.rest(task.axes, task.ends[0], seconds)
+            found = Motion(rest, (Limit(None, "time"),) if seconds else (), seconds)
+        case _:
+            found = Motion(Trajectory.rest(task.axes, task.ends[0]))
+    return found
 
 
 def _events(job: Job, steps: Sequence[PlannedStep]) -> tuple[SignalEvent, ...]:
@@ -188,7 +242,7 @@ def _events(job: Job, steps: Sequence[PlannedStep]) -> tuple[SignalEvent, ...]:
     for index, (asked, step) in enumerate(zip(job.cycle.steps, steps, strict=True)):
         if not isinstance(asked, Signal | Trace):
             continue
-        place = f"{job.cycle.source or 'cycle'}: steps[{index + 1}].lead: {asked.lead:g} s"
+        place = f"{job.cycle.source or 'cycle'}: {job.cycle.where(index, 'lead')}: {asked.lead:g} s"
         for time, signal, state in _switched(asked, step):
             if time < -EVENT_ROUNDING or time > duration + EVENT_ROUNDING:
                 message = (
@@ -222,10 +276,8 @@ def _notes(job: Job) -> tuple[str, ...]:
     """Return what this version leaves out of what the job's files say."""
     machine, steps = job.machine, job.cycle.steps
     notes = []
-    if machine.keepouts:
-        notes.append(f"clearance is not checked ({len(machine.keepouts)} keep-outs recorded)")
     if any(axis.mechanics for axis in machine.axes):
         notes.append("loads on motors and mechanics are not checked (axes with mechanics)")
     if any(isinstance(step, Payload) for step in steps):
-        notes.append("payloads are recorded; their mass and size do not enter the plan")
+        notes.append("the mass of payloads is recorded; it does not enter the plan")
     return tuple(notes)

@@ -15,6 +15,7 @@ if TYPE_CHECKING:
 
     from profileplan.motion.paths import Run
     from profileplan.planning.tasks import Task
+    from profileplan.planning.transfers import Carry
 
 COUNTS = 2e-3
 """Seconds that a bound must give for each share of it, as a share of the step, to be named."""
@@ -37,7 +38,7 @@ class Ride(NamedTuple):
 
 def ride(
     task: Task,
-    parts: Sequence[Run | Trajectory],
+    parts: Sequence[Run | Carry | Trajectory],
     *,
     time: float | None,
     saves: Mapping[tuple[str, str | None], float] | None = None,
@@ -87,7 +88,7 @@ def _axis(task: Task, column: int) -> str | None:
 
 def _held(
     task: Task,
-    runs: Sequence[Run],
+    runs: Sequence[Run | Carry],
     saves: Mapping[tuple[str, str | None], float],
     duration: float,
 ) -> tuple[Limit, ...]:
@@ -105,7 +106,7 @@ def _held(
     )
 
 
-def _settled(runs: Sequence[Run], task: Task) -> str:
+def _settled(runs: Sequence[Run | Carry], task: Task) -> str:
     """Return a note on runs that may not be the fastest found, and by what they still hold."""
     name = task.job.cycle.step_label(task.index)
     stops = sum(run.passage is None and not run.single for run in runs)

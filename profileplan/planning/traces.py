@@ -1,6 +1,6 @@
 """How is a drawing traced: from outline to outline, and along each in least time?
 
-Between outlines the tool is lifted, goes across, and is lowered, one after the other.
+Between outlines the tool is carried as by a transfer: straight up by the lift, across, and down.
 """
 
 from __future__ import annotations
@@ -13,18 +13,22 @@ from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 
+from profileplan.geometry.cell import obstacles
 from profileplan.geometry.sleeve import Sleeve, sleeve
 from profileplan.geometry.trace import traced
+from profileplan.inputs import Transfer
 from profileplan.motion.laws import LAWS, Limits
 from profileplan.motion.paths import Near, plan_run, stopping_run
 from profileplan.motion.schedule import Tracing
 from profileplan.motion.synchronisation import Way, move, move_duration
 from profileplan.planning.rides import ride
 from profileplan.planning.tasks import Motion, held_by
+from profileplan.planning.transfers import Carry, carry, payload_before
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
+    from profileplan.geometry.cell import Obstacle
     from profileplan.geometry.order import Travel
     from profileplan.geometry.shapes import Outline
     from profileplan.geometry.trace import Traced
@@ -96,14 +100,19 @@ def plan_trace(task: Task, step: Trace, drawn: Traced) -> Motion:
     """Plan the tracing of outlines, in their order."""
     cell = _cell(task, step)
     runs = _runs(task, step, drawn, cell)
-    law = LAWS[task.job.cycle.law]
-    parts: list[Run | Trajectory] = []
+    parts: list[Run | Carry | Trajectory] = []
     ways: list[tuple[Array, Array]] = []
     now, places = task.ends[0], []
+    blocks = obstacles(task.job.machine, payload_before(task)) if task.job.machine.keepouts else ()
     for run in runs:
-        way = list(pairwise(_between(cell, now, run.way.points[0], step.lift)))
-        ways += way
-        parts += [_moved(task, ends) for ends in way]
+        then = run.way.points[0]
+        carried = _carried(task, step, (now, then), cell, blocks)
+        if carried is None:
+            way = list(pairwise(_between(cell, now, then, step.lift)))
+            ways += way
+            parts += [_moved(task, ends) for ends in way]
+        else:
+            parts.append(carried)
         places.append(len(parts))
         parts.append(run)
         now = run.way.points[-1]
@@ -112,6 +121,8 @@ def plan_trace(task: Task, step: Trace, drawn: Traced) -> Motion:
         ways.append((now, raised))
         parts.append(_moved(task, ways[-1]))
     distance = np.array([end - start for start, end in ways]).reshape(-1, len(now))
+
+    law = LAWS[task.job.cycle.law]
 
     def total(probe: Probe) -> Array:
         by_way = Limits(*(np.asarray(limit)[:, np.newaxis] for limit in probe.limits))
@@ -123,6 +134,27 @@ def plan_trace(task: Task, step: Trace, drawn: Traced) -> Motion:
     ridden = ride(task, parts, time=step.time, saves=saves)
     starts = [ridden.starts[place] for place in places]
     return replace(ridden.motion, tracing=_tracing(runs, starts, ridden.slower, drawn))
+
+
+def _carried(
+    task: Task,
+    step: Trace,
+    ends: tuple[Array, Array],
+    cell: _Cell,
+    blocks: Sequence[Obstacle],
+) -> Carry | Trajectory | None:
+    """Return the transfer from one outline to the next, or None where nothing is lifted.
+
+    It goes straight up by the lift and down again, so that nothing is touched that was laid.
+    """
+    now, then = ends
+    if cell.up is None or not step.lift or (now[cell.plan] == then[cell.plan]).all():
+        return None
+    height = cell.lifted(now, step.lift)[cell.up]
+    lift, lower = (float(cell.sign * (height - place[cell.up])) for place in ends)
+    lower = min(lower, step.lift)
+    to = dict(zip(task.axes, then.tolist(), strict=True))
+    return carry(task, Transfer(to, lift=lift, lower=lower), ends, blocks)
 
 
 def _cell(task: Task, step: Trace) -> _Cell:
