@@ -42,7 +42,7 @@ WITHIN = {
         "least_time",
         "paths",
     ),
-    "checks": ("findings", "ways", "traces", "schedules", "tables"),
+    "checks": ("findings", "ways", "traces", "clearance", "schedules", "tables"),
     "geometry": (
         "corridor",
         "shapes",
@@ -55,6 +55,10 @@ WITHIN = {
         "drawing",
         "overlaps",
         "outlines",
+        "cell",
+        "clearance",
+        "transfer",
+        "detour",
         "exchanges",
         "order",
         "listing",
@@ -64,7 +68,7 @@ WITHIN = {
         "trace",
     ),
     "cli": ("frame", "tables", "jobs", "drawings"),
-    "planning": ("results", "tasks", "rides", "steps", "transfers", "traces", "cycle"),
+    "planning": ("results", "tasks", "rides", "steps", "transfers", "matching", "traces", "cycle"),
 }
 """Modules of a room from the ground up."""
 

@@ -16,7 +16,7 @@ from numpy.testing import assert_allclose
 from shapely import affinity
 
 import profileplan as pp
-from profileplan.geometry.cell import blocks, bodies, difference, obstacles
+from profileplan.geometry.cell import blocks, bodies, difference, judge, obstacles
 from profileplan.inputs.machine import Circle, Keepout, Tool
 
 if TYPE_CHECKING:
@@ -218,3 +218,16 @@ def test_a_footprint_that_crosses_itself_is_refused(of: str) -> None:
     part = pp.Payload(outline=crossed) if of == "payload" else None
     with pytest.raises(pp.InputError, match=rf"{of}.outline: crosses or touches itself"):
         obstacles(machine(POST, tool=tool), part)
+
+
+def test_faults_of_cell_and_payloads_are_told_before_anything_is_planned() -> None:
+    """Keep-out, tool and part at once, each at its place in the files."""
+    crossed = ((0.0, 0.0), (10.0, 0.0), (0.0, 10.0), (20.0, 12.0))
+    cell = machine(Keepout("a", outline=crossed), tool=Tool(outline=crossed))
+    steps = (pp.Wait(1.0), pp.Payload(outline=crossed), pp.Payload())
+    with pytest.raises(pp.InputError) as refused:
+        judge(pp.Job(cell, pp.Cycle(steps=steps, start=dict.fromkeys("xyz", 0.0))))
+    places = [fault.place for fault in refused.value.faults]
+    assert places == ["keepouts[1].outline", "tool.outline", "steps[2].payload.outline"]
+    sound = pp.Cycle(steps=(pp.Wait(1.0), pp.Payload(radius=3.0)), start=dict.fromkeys("xyz", 0.0))
+    judge(pp.Job(machine(POST), sound))

@@ -219,18 +219,12 @@ def test_signals_outside_the_cycle_or_out_of_order_are_refused(
         pp.plan(loader(), cycle(*steps))
 
 
-def test_steps_of_later_versions_are_refused_by_name() -> None:
-    """Nothing is planned as something else in silence."""
-    with pytest.raises(pp.PlanError, match=r"steps\[1\]\.transfer: this version does not plan"):
-        pp.plan(loader(up="+z"), cycle(pp.Transfer({"x": 500.0})))
-
-
 def test_notes_say_what_does_not_enter_the_plan() -> None:
-    """Nobody may believe that a clearance or a load was looked at."""
+    """Nobody may believe that a load was looked at."""
     post = pp.Keepout(name="post", circle=pp.Circle(1000.0, 0.0, 50.0))
     steps = (pp.Payload(mass=3.0), pp.Move({"x": 900.0}))
     plan = pp.plan(loader(keepouts=(post,)), cycle(*steps))
-    assert len(plan.notes) == 2
+    assert len(plan.notes) == 1
     assert pp.plan(loader(), cycle(pp.Wait(1.0))).notes == ()
 
 

@@ -233,8 +233,9 @@ def _nearest(body: Body, block: Block, motion: _Motion, *, sought: float) -> Nea
     found = None
     for pair in Pair.of(body, block):
         near = np.flatnonzero(bound < sought - CLEARANCE_TOLERANCE)
+        near = near[pair.at_least(low[near], high[near]) < sought - CLEARANCE_TOLERANCE]
         if not near.size:
-            break
+            continue
         own = motion.chosen(near)
         value, piece, time = _smallest(pair, own, sought)
         if value < sought:

@@ -229,6 +229,9 @@ def _asks_for_time(step: PlannedStep) -> bool:
 
 
 def _name(limit: Limit) -> str:
+    """Return what could be changed; less of what stands in the way is meant, and more of others."""
+    if limit.quantity == "clearance":
+        return "height of what is in the way, 10 % less"
     return f"{limit.axis} {limit.quantity}" if limit.axis else _plain(limit.quantity)
 
 

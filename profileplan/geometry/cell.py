@@ -17,6 +17,7 @@ import numpy as np
 import shapely
 
 from profileplan.errors import Fault, InputError
+from profileplan.inputs import Payload
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -25,7 +26,7 @@ if TYPE_CHECKING:
     from shapely.geometry.base import BaseGeometry
 
     from profileplan.geometry.drawing import Drawing
-    from profileplan.inputs import Keepout, Machine, Payload, Tool
+    from profileplan.inputs import Job, Keepout, Machine, Tool
     from profileplan.inputs.rules import Outline
 
 Core: TypeAlias = shapely.Polygon | shapely.Point
@@ -171,6 +172,33 @@ def obstacles(machine: Machine, payload: Payload | None) -> tuple[Obstacle, ...]
     return _obstacles(_Cell.of(machine), payload)
 
 
+def judge(job: Job) -> None:
+    """Find everything that is wrong with a job's cell, before anything is planned in it.
+
+    Raises
+    ------
+    InputError
+        With the faults of keep-outs, of the tool and of all payloads.
+    """
+    cell, cycle = _Cell.of(job.machine), job.cycle
+    faults: list[Fault] = []
+    for made in (_blocks, _tool):
+        try:
+            made(cell)
+        except InputError as error:
+            faults += error.faults
+    for index, step in enumerate(cycle.steps):
+        if not isinstance(step, Payload):
+            continue
+        try:
+            _part(cell, step)
+        except InputError as error:
+            place = cycle.step_place(index)
+            faults += [fault.within(place, cycle.source) for fault in error.faults]
+    if faults:
+        raise InputError(dict.fromkeys(faults))
+
+
 def difference(core: Core, other: Core) -> BaseGeometry:
     """Return where the origin of one shape is when it touches another: the other less the one.
 
@@ -266,18 +294,24 @@ def _blocks(cell: _Cell) -> tuple[Block, ...]:
 
 @lru_cache(maxsize=MOST_KEPT)
 def _bodies(cell: _Cell, payload: Payload | None) -> tuple[Body, ...]:
+    tool = _tool(cell)
+    return (tool,) if payload is None or not _reaches(payload) else (tool, _part(cell, payload))
+
+
+def _tool(cell: _Cell) -> Body:
     tool = cell.tool
     try:
-        found = [Body("tool", _footprint(tool.radius, tool.outline, turns=cell.turns), 0.0)]
+        return Body("tool", _footprint(tool.radius, tool.outline, turns=cell.turns), 0.0)
     except InputError as error:
         raise InputError(fault.within("tool", cell.source) for fault in error.faults) from None
-    if payload is not None and _reaches(payload):
-        try:
-            shape = _footprint(payload.radius, payload.outline, turns=cell.turns)
-        except InputError as error:
-            raise InputError(fault.within("payload") for fault in error.faults) from None
-        found.append(Body("part", shape, payload.below))
-    return tuple(found)
+
+
+def _part(cell: _Cell, payload: Payload) -> Body:
+    try:
+        shape = _footprint(payload.radius, payload.outline, turns=cell.turns)
+    except InputError as error:
+        raise InputError(fault.within("payload") for fault in error.faults) from None
+    return Body("part", shape, payload.below)
 
 
 def _reaches(payload: Payload) -> bool:

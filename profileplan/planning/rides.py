@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from itertools import accumulate
-from typing import TYPE_CHECKING, NamedTuple
+from typing import TYPE_CHECKING, NamedTuple, Protocol
 
 from profileplan.motion.laws import DURATION_TOLERANCE
 from profileplan.motion.trajectory import Trajectory
@@ -13,12 +13,40 @@ from profileplan.planning.tasks import RAISE, Motion
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
 
-    from profileplan.motion.paths import Run
+    from profileplan.motion.least_time import Passage, Stretch
     from profileplan.planning.tasks import Task
-    from profileplan.planning.transfers import Carry
 
 COUNTS = 2e-3
 """Seconds that a bound must give for each share of it, as a share of the step, to be named."""
+
+
+class Ridden(Protocol):
+    """A part that can be slowed down: a run along a path, or a transfer."""
+
+    @property
+    def duration(self) -> float:
+        """Its duration [s]."""
+
+    @property
+    def least(self) -> float:
+        """A time [s] that it cannot be shorter than."""
+
+    @property
+    def passage(self) -> Passage | None:
+        """Its motion through a corridor, where it is one."""
+
+    @property
+    def single(self) -> bool:
+        """Whether nothing is left to be said where it is none."""
+
+    def trajectory(self, axes: tuple[str, ...], *, duration: float) -> Trajectory:
+        """Return the motion in a time [s]."""
+
+    def gains(self) -> Mapping[tuple[str, int], float]:
+        """Return how much sooner it ends for each share that a bound is loosened [s]."""
+
+    def stretches(self) -> tuple[Stretch, ...]:
+        """Return what holds it back where."""
 
 
 class Ride(NamedTuple):
@@ -38,7 +66,7 @@ class Ride(NamedTuple):
 
 def ride(
     task: Task,
-    parts: Sequence[Run | Carry | Trajectory],
+    parts: Sequence[Ridden | Trajectory],
     *,
     time: float | None,
     saves: Mapping[tuple[str, str | None], float] | None = None,
@@ -48,7 +76,7 @@ def ride(
     Parameters
     ----------
     task : Task
-    parts : sequence of Run and Trajectory
+    parts : sequence of Ridden and Trajectory
         Each begins where the one before ends.
     time : float, optional [s]
         Duration asked for.
@@ -88,7 +116,7 @@ def _axis(task: Task, column: int) -> str | None:
 
 def _held(
     task: Task,
-    runs: Sequence[Run | Carry],
+    runs: Sequence[Ridden],
     saves: Mapping[tuple[str, str | None], float],
     duration: float,
 ) -> tuple[Limit, ...]:
@@ -106,7 +134,7 @@ def _held(
     )
 
 
-def _settled(runs: Sequence[Run | Carry], task: Task) -> str:
+def _settled(runs: Sequence[Ridden], task: Task) -> str:
     """Return a note on runs that may not be the fastest found, and by what they still hold."""
     name = task.job.cycle.step_label(task.index)
     stops = sum(run.passage is None and not run.single for run in runs)

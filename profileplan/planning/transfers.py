@@ -8,6 +8,7 @@ where the search finds nothing faster.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from itertools import pairwise
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
@@ -15,13 +16,14 @@ import numpy as np
 from profileplan.geometry.cell import obstacles as obstacles_of
 from profileplan.geometry.detour import detour
 from profileplan.geometry.transfer import Blocked, Errand, edges, over
-from profileplan.inputs import Payload
+from profileplan.inputs import Move, Payload
 from profileplan.motion import least_time as search
 from profileplan.motion.laws import LAWS, Limits
 from profileplan.motion.rounds import Bounds
 from profileplan.motion.synchronisation import move, move_duration
 from profileplan.motion.trajectory import Trajectory
 from profileplan.planning.rides import ride
+from profileplan.planning.steps import plan_move
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Mapping, Sequence
@@ -162,6 +164,8 @@ def plan_transfer(task: Task, step: Transfer) -> Motion:
     PlanError
         There is no way: the message names the keep-out, the height needed and the height there is.
     """
+    if _errand(task, step, task.ends) is None:
+        return plan_move(task, Move(step.to, law="trapezoidal", time=step.time))
     blocks = obstacles_of(task.job.machine, payload_before(task))
     return ride(task, [carry(task, step, task.ends, blocks)], time=step.time).motion
 
@@ -190,6 +194,37 @@ def carry(
         message = _refusal(task, space) if isinstance(space, Blocked) else "no motion was found"
         raise task.error(task.step.kind, message)
     return min(carried, key=lambda one: one.duration)
+
+
+def quick_duration(
+    task: Task, step: Transfer, ends: tuple[Array, Array], obstacles: Sequence[Obstacle]
+) -> float:
+    """Return the time of a transfer by laws [s], without a search; infinite: it is blocked.
+
+    Round what cannot be gone over it is up, from corner to corner, and down.
+    """
+    errand = _errand(task, step, ends)
+    if errand is None:
+        return _least(task, ends)
+    space = over(errand, obstacles)
+    if not isinstance(space, Blocked):
+        by_laws = _overlapped(task, errand, ends, obstacles)
+        return np.inf if by_laws is None else by_laws.duration
+    roof = errand.roof if errand.height is None else min(errand.roof, errand.height)
+    never = [obstacle for obstacle in obstacles if obstacle.top > roof]
+    via = detour(errand.start[:2], errand.end[:2], never, room=errand.room)
+    way = replace(errand, free=True, via=via)
+    if space.where != "on the way" or not via or isinstance(over(way, obstacles), Blocked):
+        return np.inf
+    heights = np.concatenate(edges(way, obstacles))[:, 1]
+    top = max(float(heights.max()), errand.start[2], errand.end[2], errand.height or -np.inf)
+    sign, names = task.job.machine.up_sign, list(task.axes)
+    plan = [names.index(name) for name in task.job.machine.horizontal_axes[:2]]
+    stops = np.linspace(ends[0], ends[1], len(way.corners) + 2)
+    stops[0], stops[1:-1, plan], stops[-1] = ends[0], way.corners[:, : len(plan)], ends[1]
+    if task.job.machine.up_axis is not None:
+        stops[1:-1, names.index(task.job.machine.up_axis)] = sign * top
+    return sum(_least(task, leg) for leg in pairwise(stops))
 
 
 def _errand(task: Task, step: Transfer, ends: tuple[Array, Array]) -> Errand | None:
