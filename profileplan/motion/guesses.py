@@ -25,6 +25,9 @@ if TYPE_CHECKING:
 INTERVALS = 6
 """Least number of intervals of a region: as many as a start and a stop need, and some."""
 
+WHOLE = 20
+"""Least number of intervals of a corridor: in one region several axes may start and stop."""
+
 MOST_FEW = 3
 """Most intervals of a region of a long chain that is passed much sooner than a stop in it takes."""
 
@@ -95,7 +98,7 @@ def _counts(stopping: Array, passing: Array, own: Limits, bounds: Bounds) -> Ind
     In a long chain a region that is passed much sooner than a stop in it would take needs few, and
     the fewer the shorter it takes against the time in which an acceleration is built up.
     """
-    counts = np.full(stopping.size, INTERVALS)
+    counts = np.full(stopping.size, max(INTERVALS, math.ceil(WHOLE / stopping.size)))
     if stopping.size < LONG_CHAIN:
         return counts
     built_up = float((bounds.acceleration / bounds.jerk).min())
