@@ -27,8 +27,8 @@ class Fault:
     ----------
     place : str
         Where: a key path such as ``axes.x.velocity``, a line of a CSV file, an entity of a
-        drawing. Steps are counted from 1, as in the step table: ``steps[3].move.x``.
-        Empty for the whole file.
+        drawing. Steps are counted from 1, as in the step table: ``steps[3].move.x``; those of a
+        group in the group: ``steps[4].steps[2].move.place``. Empty for the whole file.
     message : str
         What is wrong: the value found and what is allowed, in the user's units.
     file : Path or str, optional

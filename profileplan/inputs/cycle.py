@@ -12,7 +12,7 @@ from types import MappingProxyType
 from typing import TYPE_CHECKING, ClassVar, Literal, TypeAlias
 
 from profileplan.inputs.machine import judge_footprint
-from profileplan.inputs.patterns import Part, Written
+from profileplan.inputs.patterns import Free, Part, Written
 from profileplan.inputs.rules import (
     DURATION,
     EXTENT,
@@ -475,6 +475,8 @@ class Cycle:
         The file it was read from.
     parts : tuple of Part
         Which steps handle which part, in order; steps may belong to none.
+    free : tuple of Free
+        Parts whose places may be used in any order: a plan takes the shortest that it finds.
     written : tuple of Written
         Where each step stands in the file, if the steps are not numbered as they are there.
     """
@@ -487,6 +489,7 @@ class Cycle:
     machine: Path | None = None
     source: Path | None = None
     parts: tuple[Part, ...] = ()
+    free: tuple[Free, ...] = ()
     written: tuple[Written, ...] = field(default=(), compare=False, repr=False)
 
     def __post_init__(self) -> None:
@@ -505,6 +508,9 @@ class Cycle:
         judge.choice("law", self.law, LAW_NAMES)
         self._judge_labels(judge)
         self._judge_parts(judge)
+        object.__setattr__(self, "free", judge.records("free", self.free, (Free,)))
+        if not judge.faults:
+            self._judge_free(judge)
         judge.finish()
 
     def step_label(self, index: int) -> str:
@@ -556,6 +562,15 @@ class Cycle:
                 message = f"{part.last}; there are {len(self.steps)} steps, counted from 0"
                 judge.note(f"parts[{number}].last", message)
             free = part.last + 1
+
+    def _judge_free(self, judge: Judge) -> None:
+        begin = 0
+        for number, free in enumerate(self.free, start=1):
+            if free.judge(judge, f"free[{number}]", self.parts, begin=begin):
+                own = self.parts[free.parts[0] : free.parts[1] + 1]
+                if any(isinstance(s, Trace) for s in self.steps[own[0].first : own[-1].last + 1]):
+                    judge.note(f"free[{number}].parts", "trace; only what goes to places is free")
+            begin = free.parts[1] + 1
 
     def _judge_labels(self, judge: Judge) -> None:
         labels = [self.step_label(index) for index in range(len(self.steps))]

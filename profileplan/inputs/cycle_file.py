@@ -106,6 +106,7 @@ def cycle_reading(table: Table, machine: Machine | None) -> Reading:
             machine=named,
             source=table.file,
             parts=made.parts,
+            free=made.free,
             # without groups the steps are numbered as they are in the file
             written=made.written if made.parts else (),
         )

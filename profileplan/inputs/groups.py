@@ -3,7 +3,8 @@
 In a group (``for_each``) a position table of a move, a line, a transfer or a point of a path may
 have two keys that are no axes there: ``place = "NAME"`` gives every axis of that pattern its
 current place, and ``offset = { z = 50 }`` is added to it. Other keys are positions of axes, as
-everywhere, and override the place. Groups do not nest.
+everywhere, and override the place. Groups do not nest. With ``order = "shortest"`` the places of a
+group may be used in any order, and those of two patterns matched freely.
 
 A group is read once, with its first places, so that each fault in it is found once. A faulty one is
 stood in for by a wait of no time.
@@ -15,18 +16,24 @@ from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, NamedTuple, TypeGuard
 
 from profileplan.errors import Fault, InputError
-from profileplan.inputs.cycle import Line, Move, PathStep, Transfer, Wait
+from profileplan.inputs.cycle import Line, Move, PathStep, Trace, Transfer, Wait
 from profileplan.inputs.patterns import (
+    GROUP_ORDERS,
+    MOST_FREE,
     MOST_STEPS,
     ROW_ORDERS,
+    Free,
+    GroupOrder,
     Part,
     Pattern,
     Placed,
     Written,
+    back_again,
     expand,
     judge_places,
     judge_span,
     tidied,
+    too_free,
     too_many,
 )
 from profileplan.inputs.rules import Judge, join, near, quoted, shown
@@ -46,7 +53,10 @@ STAND_IN = Pattern("-", {"-": 0.0})
 
 PLACE_KEYS = ("place", "offset")
 
-GROUP_KEYS = ("for_each", "name", "steps", "from", "to")
+GROUP_KEYS = ("for_each", "name", "steps", "from", "to", "order")
+
+MOST_MATCHED = 2
+"""How many patterns a group may have whose order is free."""
 
 
 class Known(NamedTuple):
@@ -58,11 +68,12 @@ class Known(NamedTuple):
 
 @dataclass(frozen=True)
 class Expanded:
-    """What tables of steps give: the steps, where each stands, and the parts."""
+    """What tables of steps give: the steps, where each stands, the parts, and which are free."""
 
     steps: tuple[Step, ...]
     written: tuple[Written, ...]
     parts: tuple[Part, ...] = ()
+    free: tuple[Free, ...] = ()
 
 
 class Slot(NamedTuple):
@@ -145,6 +156,7 @@ class Groups:
         steps: list[Step] = []
         written: list[Written] = []
         parts: dict[str, Part] = {}
+        free: list[Free] = []
         left = MOST_STEPS
         for table in tables:
             if "for_each" not in table.raw:
@@ -154,6 +166,9 @@ class Groups:
             made = self._group(table, len(steps), left)
             twice = next((part.name for part in made.parts if part.name in parts), None)
             if twice is None:
+                free += (
+                    replace(own, parts=(len(parts), len(parts) + own.parts[1])) for own in made.free
+                )
                 parts |= {part.name: part for part in made.parts}
                 steps += made.steps
             else:
@@ -162,7 +177,7 @@ class Groups:
                 steps += (replace(step, name=None) for step in made.steps)
             written += made.written
             left -= len(made.steps)
-        return Expanded(tuple(steps), tuple(written), tuple(parts.values()))
+        return Expanded(tuple(steps), tuple(written), tuple(parts.values()), tuple(free))
 
     def _group(self, table: Table, index: int, most: int) -> Expanded:
         """Return what a group gives, at most so many steps, from an index on."""
@@ -177,6 +192,8 @@ class Groups:
         if not inner:
             table.note("steps", "missing; at least one step is needed: steps = [{ ... }]")
         templates = [self._template(each, gone) for each in inner or ()]
+        order = table.choice("order", GROUP_ORDERS, default=GROUP_ORDERS[0])
+        slots = _free_slots(table, list(gone), templates, last - first + 1, order=order)
         name = table.text("name", "part")
         judge.name("name", name)
         usable = "-" if any(fault.place == "name" for fault in judge.faults) else name
@@ -190,7 +207,10 @@ class Groups:
         table.finish()
         if not sound or not templates:
             return Expanded((Wait(0),), (Written(table.place),))
-        return _made(table, usable, templates, patterns=patterns, span=(index, first, last))
+        made = _made(table, usable, templates, patterns=patterns, span=(index, first, last))
+        if not slots or not made.parts:
+            return made
+        return replace(made, free=(Free((0, len(made.parts) - 1), slots),))
 
     def _gone_through(self, table: Table) -> dict[str, Known]:
         """Return the patterns that a group goes through; what stands in for those unknown."""
@@ -358,6 +378,53 @@ def _axes(table: Table, key: str, kinds: Mapping[str, AxisKind]) -> Positions:
             hint = near(axis, kinds) or f"; this machine has {', '.join(kinds)}"
             inner.note(axis, f"unknown axis{hint}")
     return inner.positions([axis for axis in inner.raw if not kinds or axis in kinds], kinds)
+
+
+def _free_slots(
+    table: Table,
+    names: Sequence[str],
+    templates: Sequence[Template],
+    count: int,
+    *,
+    order: GroupOrder,
+) -> tuple[int, ...]:
+    """Return for each step of a group the pattern that it goes to; none: the order is as given."""
+    if order == "given" or not names:
+        return ()
+    if len(names) > MOST_MATCHED:
+        message = f'"shortest" is for one pattern or two; for_each has {len(names)}'
+        table.note("order", message)
+        return ()
+    before = len(table.faults)
+    if count > MOST_FREE:
+        table.note("order", too_free(count))
+    slots = _slots(table, names, templates)
+    if len(table.faults) == before:
+        for number, name in enumerate(names):
+            if number not in slots:
+                table.note("order", f'"shortest"; no step goes to a place of {name}')
+    return slots if len(table.faults) == before else ()
+
+
+def _slots(table: Table, names: Sequence[str], templates: Sequence[Template]) -> tuple[int, ...]:
+    """Return the number of each step's pattern, -1 for none, and note what cannot be free."""
+    slots: list[int] = []
+    used: list[int] = []
+    for template in templates:
+        own = list(dict.fromkeys(names.index(slot.pattern) for slot in template.slots))
+        if isinstance(template.step, Trace):
+            message = 'a group of order = "shortest" goes to places only; trace outside of it'
+            _note(table, join(template.place, "trace"), message)
+        if len(own) > 1:
+            other = next(s for s in template.slots if s.pattern != template.slots[0].pattern)
+            message = f'goes to {quoted(names)} in one step; order = "shortest" needs a step each'
+            _note(table, f"{template.place}.{other.key}", message)
+        elif own and back_again([*used, *own]) is not None:
+            message = f'goes back to {names[own[0]]}; order = "shortest" has its steps together'
+            _note(table, f"{template.place}.{template.slots[0].key}", message)
+        slots.append(own[0] if own else -1)
+        used += own
+    return tuple(slots)
 
 
 def _made(

@@ -23,6 +23,12 @@ if TYPE_CHECKING:
 RowOrder: TypeAlias = Literal["rows", "back and forth"]
 ROW_ORDERS: tuple[RowOrder, ...] = ("rows", "back and forth")
 
+GroupOrder: TypeAlias = Literal["given", "shortest"]
+GROUP_ORDERS: tuple[GroupOrder, ...] = ("given", "shortest")
+
+MOST_FREE = 60
+"""How many parts may be put into the shortest order: all ways between their places are timed."""
+
 MOST_STEPS = 100_000
 """How many steps parts may expand to, and how many places a pattern may have."""
 
@@ -181,6 +187,58 @@ class Part:
         judge.finish()
 
 
+@dataclass(frozen=True)
+class Free:
+    """Parts whose places may be used in any order.
+
+    Each part's steps go to the places of a first pattern, and after that to those of a second, if
+    there is one. Every place of the one may be matched with any of the other.
+
+    Parameters
+    ----------
+    parts : tuple of int
+        The first and the last of the parts in the cycle, counted from 0.
+    slots : tuple of int
+        For each step of a part the pattern whose place it goes to, 0 or 1; -1: to none.
+    """
+
+    parts: tuple[int, int]
+    slots: tuple[int, ...]
+
+    def __post_init__(self) -> None:
+        judge = Judge()
+        parts = judge.records("parts", self.parts, (int,))
+        object.__setattr__(self, "parts", parts)
+        object.__setattr__(self, "slots", judge.records("slots", self.slots, (int,)))
+        if not judge.faults:
+            if len(parts) != len(("first", "last")) or not 0 <= parts[0] <= parts[1]:
+                judge.note("parts", f"{shown(parts)}; the first and the last part are needed")
+            elif parts[1] - parts[0] >= MOST_FREE:
+                judge.note("parts", too_free(parts[1] - parts[0] + 1))
+            used = [slot for slot in self.slots if slot != -1]
+            if not used or not set(used) <= {0, 1}:
+                judge.note("slots", "0, 1 or -1 for each step are needed, and not -1 alone")
+            elif back_again(used) is not None:
+                judge.note("slots", "go back to a pattern that was left; each is gone to once")
+        judge.finish()
+
+    def judge(self, judge: Judge, key: str, parts: Sequence[Part], *, begin: int) -> bool:
+        """Note what does not fit the parts of a cycle, from one on, and tell if all does."""
+        first, last = self.parts
+        own = parts[first : last + 1]
+        if first < begin or last >= len(parts):
+            message = f"{first} to {last}; groups follow each other"
+            judge.note(f"{key}.parts", f"{message}, and there are {len(parts)} parts")
+        elif any(part.last - part.first + 1 != len(self.slots) for part in own):
+            message = f"{len(self.slots)}; as many as each of the parts has steps are needed"
+            judge.note(f"{key}.slots", message)
+        elif own[-1].last - own[0].first + 1 != len(own) * len(self.slots):
+            judge.note(f"{key}.parts", f"{first} to {last}; there are steps between them")
+        else:
+            return True
+        return False
+
+
 class Expansion(NamedTuple):
     """The steps for all parts, and which of them belong to which part."""
 
@@ -319,6 +377,19 @@ def too_many(places: int, steps: int) -> str:
         f"{places:,} places of {steps:,} steps each; "
         f"all parts together may have {MOST_STEPS:,} steps"
     )
+
+
+def too_free(parts: int) -> str:
+    """Say that there are too many parts to put into the shortest order."""
+    return f"{parts:,} parts; the shortest order is sought for at most {MOST_FREE}"
+
+
+def back_again(used: Sequence[int]) -> int | None:
+    """Return which of the patterns that steps go to, in order, was left before; None: none."""
+    for number in range(1, len(used)):
+        if used[number] != used[number - 1] and used[number] in used[: number - 1]:
+            return number
+    return None
 
 
 def tidied(position: float) -> float:

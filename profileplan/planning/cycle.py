@@ -75,8 +75,17 @@ def plan(
         The job cannot be planned; the message says what would have to change.
     """
     job = _job(source, cycle)
+    _judge_cell(job)
     limits = Limits.of(job.machine)
     drawn = _drawn(job, limits)
+    orders: tuple[str, ...] = ()
+    if job.cycle.free:
+        # scipy and shapely cost more start-up than all else: only a free order pays for them.
+        from profileplan.planning.matching import ordered  # noqa: PLC0415
+
+        job, orders = ordered(job, {index: own.end for index, own in drawn.items()})
+        # What is traced after a group begins where the group now ends.
+        drawn = _drawn(job, limits)
     positions = job.positions({index: own.end for index, own in drawn.items()})
     steps: list[PlannedStep] = []
     notes: list[str] = []
@@ -109,7 +118,18 @@ def plan(
             progress(index + 1, len(job.cycle.steps))
     for own in drawn.values():
         notes += own.notes
-    return Plan(job, tuple(steps), _events(job, steps), notes=(*_notes(job), *notes), drawn=drawn)
+    return Plan(
+        job, tuple(steps), _events(job, steps), notes=(*_notes(job), *orders, *notes), drawn=drawn
+    )
+
+
+def _judge_cell(job: Job) -> None:
+    """Find what is wrong with keep-outs, tool and payloads, before anything is planned."""
+    if job.machine.keepouts:
+        # shapely costs more start-up than all else: only a cell pays for it.
+        from profileplan.geometry.cell import judge  # noqa: PLC0415
+
+        judge(job)
 
 
 def _drawn(job: Job, limits: Limits) -> dict[int, Traced]:
@@ -279,5 +299,5 @@ def _notes(job: Job) -> tuple[str, ...]:
     if any(axis.mechanics for axis in machine.axes):
         notes.append("loads on motors and mechanics are not checked (axes with mechanics)")
     if any(isinstance(step, Payload) for step in steps):
-        notes.append("the mass of payloads is recorded; it does not enter the plan")
+        notes.append("payloads are recorded; their mass does not enter the plan")
     return tuple(notes)

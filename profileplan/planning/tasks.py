@@ -65,7 +65,7 @@ class Task:
 
     def error(self, key: str, message: str) -> PlanError:
         """Return what says why the step cannot be planned."""
-        place = f"steps[{self.index + 1}].{key}"
+        place = self.job.cycle.where(self.index, key)
         parts = [str(self.job.cycle.source)] if self.job.cycle.source else []
         return PlanError(": ".join([*parts, place, message]))
 

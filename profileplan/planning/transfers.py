@@ -8,10 +8,10 @@ where the search finds nothing faster.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from itertools import pairwise
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
+import shapely
 
 from profileplan.geometry.cell import obstacles as obstacles_of
 from profileplan.geometry.detour import detour
@@ -26,7 +26,7 @@ from profileplan.planning.rides import ride
 from profileplan.planning.steps import plan_move
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Mapping, Sequence
+    from collections.abc import Callable, Iterator, Mapping, Sequence
 
     from profileplan.geometry.cell import Obstacle
     from profileplan.geometry.corridor import Corridor, Regions
@@ -40,6 +40,12 @@ NO_WAY = 1e-9
 
 NUDGE = 1e-4
 """Share by which a limit is raised to find what the laws gain by it."""
+
+TOUCH = 1e-6
+"""Distance [mm] from free space at which a place counts as in it."""
+
+ROUND_WORTH = 1.1
+"""A transfer that takes so many times the least of its axes, or less, is not timed round."""
 
 HALVINGS = 60
 """Times that an interval is halved to find when a height or a place is reached."""
@@ -199,32 +205,48 @@ def carry(
 def quick_duration(
     task: Task, step: Transfer, ends: tuple[Array, Array], obstacles: Sequence[Obstacle]
 ) -> float:
-    """Return the time of a transfer by laws [s], without a search; infinite: it is blocked.
+    """Return about how long a transfer takes [s], without a search; infinite: it is blocked.
 
-    Round what cannot be gone over it is up, from corner to corner, and down.
+    Over what is in the way it is the time by laws; round it, that of the slowest axis over all of
+    its ways, as corners are hardly felt.
     """
     errand = _errand(task, step, ends)
     if errand is None:
         return _least(task, ends)
     space = over(errand, obstacles)
+    by_laws = None
     if not isinstance(space, Blocked):
         by_laws = _overlapped(task, errand, ends, obstacles)
-        return np.inf if by_laws is None else by_laws.duration
-    roof = errand.roof if errand.height is None else min(errand.roof, errand.height)
-    never = [obstacle for obstacle in obstacles if obstacle.top > roof]
-    via = detour(errand.start[:2], errand.end[:2], never, room=errand.room)
-    way = replace(errand, free=True, via=via)
-    if space.where != "on the way" or not via or isinstance(over(way, obstacles), Blocked):
+    elif space.where != "on the way":
         return np.inf
-    heights = np.concatenate(edges(way, obstacles))[:, 1]
-    top = max(float(heights.max()), errand.start[2], errand.end[2], errand.height or -np.inf)
-    sign, names = task.job.machine.up_sign, list(task.axes)
-    plan = [names.index(name) for name in task.job.machine.horizontal_axes[:2]]
-    stops = np.linspace(ends[0], ends[1], len(way.corners) + 2)
-    stops[0], stops[1:-1, plan], stops[-1] = ends[0], way.corners[:, : len(plan)], ends[1]
-    if task.job.machine.up_axis is not None:
-        stops[1:-1, names.index(task.job.machine.up_axis)] = sign * top
-    return sum(_least(task, leg) for leg in pairwise(stops))
+    names, plan = list(task.axes), task.job.machine.horizontal_axes[:2]
+    found = [np.inf if by_laws is None else by_laws.duration]
+    if found[0] <= ROUND_WORTH * _least(task, ends) or (
+        by_laws is not None and not _may_go_round(errand, obstacles)
+    ):
+        return found[0]
+    for way, _ in _ways_round(errand, obstacles):
+        distance = np.abs(ends[1] - ends[0])
+        legs = np.abs(np.diff(way.corners, axis=0)).sum(axis=0)
+        distance[[names.index(name) for name in plan]] = legs[: len(plan)]
+        if task.job.machine.up_axis is not None:
+            top = max(np.concatenate(edges(way, obstacles))[:, 1].max(), way.height or -np.inf)
+            rise = np.maximum(top - np.array([errand.start[2], errand.end[2]]), 0.0).sum()
+            up = names.index(task.job.machine.up_axis)
+            distance[up] = max(distance[up], rise)
+        found.append(_least(task, (np.zeros(len(names)), distance)))
+    return min(found)
+
+
+def _may_go_round(errand: Errand, obstacles: Sequence[Obstacle]) -> bool:
+    """Tell whether something is in the way and does not part the room from side to side."""
+    if len(edges(errand, obstacles)[0]) == 1:
+        return False
+    ground = min(float(errand.start[2]), float(errand.end[2]))
+    low = shapely.union_all([own.outline for own in obstacles if own.top > ground])
+    parts = shapely.get_parts(shapely.difference(shapely.box(*errand.room.ravel()), low))
+    ends = shapely.points([errand.start[:2], errand.end[:2]])
+    return bool((shapely.distance(parts[:, np.newaxis], ends) <= TOUCH).all(axis=1).any())
 
 
 def _errand(task: Task, step: Transfer, ends: tuple[Array, Array]) -> Errand | None:
@@ -260,11 +282,16 @@ def _round(
     task: Task, errand: Errand, ends: tuple[Array, Array], obstacles: Sequence[Obstacle]
 ) -> list[Carry | None]:
     """Return the transfers round what cannot be gone over, and round all that is in the way."""
+    ways = _ways_round(errand, obstacles)
+    return [_planned(task, way, ends, obstacles, space) for way, space in ways]
+
+
+def _ways_round(errand: Errand, obstacles: Sequence[Obstacle]) -> Iterator[tuple[Errand, Corridor]]:
+    """Yield the ways round, with their free space."""
     roof = errand.roof if errand.height is None else min(errand.roof, errand.height)
     never = [obstacle for obstacle in obstacles if obstacle.top > roof]
     ground = min(float(errand.start[2]), float(errand.end[2]))
     low = [obstacle for obstacle in obstacles if obstacle.top > ground]
-    found = []
     for avoided in (never, low):
         if not avoided or (avoided is low and len(low) == len(never)):
             continue
@@ -274,8 +301,7 @@ def _round(
         way = replace(errand, free=True, via=via)
         space = over(way, obstacles)
         if not isinstance(space, Blocked):
-            found.append(_planned(task, way, ends, obstacles, space))
-    return found
+            yield way, space
 
 
 def _refusal(task: Task, blocked: Blocked) -> str:
@@ -289,6 +315,8 @@ def _refusal(task: Task, blocked: Blocked) -> str:
     what = f"{blocked.obstacle} ({blocked.body} and margin)"
     if not np.isfinite(blocked.needed):
         needed = f"{what} may not be entered at any height"
+        if blocked.where != "on the way":
+            return f"{needed}, and {blocked.where} the tool is in it"
     else:
         needed = f"{what} needs {axis} = {sign * blocked.needed:.6g} mm"
     if blocked.where != "on the way":
@@ -473,17 +501,23 @@ def _when(motion: Trajectory, way: float, *, last: bool = False) -> float:
 
     Or, with ``last``, when it has not yet gone more.
     """
-    end = float(motion.at([motion.duration])[0, 0])
-    sign = 1.0 if end >= 0 else -1.0
-    early, late = 0.0, motion.duration
+    breaks = motion.at(motion.breaks)[1:, 0]
+    sign = 1.0 if breaks[-1] >= 0 else -1.0
+    reached = np.maximum.accumulate(sign * breaks)
+    piece = int(np.searchsorted(reached[:-1], sign * way, side="right" if last else "left"))
+    # One number at a time costs less without arrays.
+    powers = (sign * motion.coefficients[piece, ::-1, 0]).tolist()
+    early, late = 0.0, float(motion.durations[piece])
     for _ in range(HALVINGS):
         middle = 0.5 * (early + late)
-        gone = sign * float(motion.at([middle])[0, 0])
+        gone = 0.0
+        for power in powers:
+            gone = gone * middle + power
         if gone < sign * way or (last and gone <= sign * way):
             early = middle
         else:
             late = middle
-    return early if last else late
+    return float(motion.breaks[piece]) + (early if last else late)
 
 
 def _played(
