@@ -42,7 +42,17 @@ WITHIN = {
         "least_time",
         "paths",
     ),
-    "checks": ("findings", "ways", "traces", "clearance", "schedules", "tables"),
+    "checks": (
+        "findings",
+        "ways",
+        "traces",
+        "clearance",
+        "schedules",
+        "table_axes",
+        "table_extremes",
+        "table_clearance",
+        "tables",
+    ),
     "geometry": (
         "corridor",
         "shapes",
@@ -67,7 +77,7 @@ WITHIN = {
         "deviation",
         "trace",
     ),
-    "cli": ("frame", "tables", "jobs", "drawings"),
+    "cli": ("frame", "tables", "jobs", "exports", "drawings"),
     "planning": ("results", "tasks", "rides", "steps", "transfers", "matching", "traces", "cycle"),
 }
 """Modules of a room from the ground up."""

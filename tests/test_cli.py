@@ -11,8 +11,8 @@ from pathlib import Path
 import pytest
 from click.testing import CliRunner, Result
 
-from profileplan import setpoints
 from profileplan.cli import cli
+from profileplan.setpoints import digits
 
 SAMPLES = Path(__file__).parents[1] / "samples"
 LOADER = str(SAMPLES / "kiln-loader" / "cycle.toml")
@@ -147,7 +147,8 @@ def test_json_of_check_and_export(tmp_path: Path) -> None:
     assert [f["check"] for f in found["checks"] if not f["ok"]] == ["cycle time"]
     file = tmp_path / "table.csv"
     told = json.loads(run("export", LOADER, "-o", str(file), "--json").stdout)
-    assert told == {"file": str(file), "rows": len(file.read_text().splitlines()) - 1}
+    rows = len(file.read_text().splitlines()) - 1
+    assert told == {"file": str(file), "files": [str(file)], "rows": rows}
 
 
 @pytest.mark.parametrize("command", ["plan", "check"])
@@ -252,7 +253,7 @@ def test_an_interrupt_leaves_nothing_half_written(
     def interrupted(*_: object, **__: object) -> None:
         raise KeyboardInterrupt
 
-    monkeypatch.setattr(setpoints, "sample", interrupted)
+    monkeypatch.setattr(digits, "text", interrupted)
     result = run("export", LOADER, "-o", str(file))
     assert result.exit_code == 130
     assert file.read_text() == "old"

@@ -13,6 +13,7 @@ from numpy.testing import assert_allclose, assert_array_equal
 
 import profileplan as pp
 from profileplan import setpoints
+from profileplan.setpoints import pace
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -159,7 +160,7 @@ def test_rows_written_in_parts_are_those_of_one_table(
     """A long table is written in parts; the joints must not show."""
     whole, parts = tmp_path / "whole.csv", tmp_path / "parts.csv"
     pp.write_csv(PLAN, whole)
-    monkeypatch.setattr(setpoints, "ROWS_AT_A_TIME", 7)
+    monkeypatch.setattr(pace, "ROWS_AT_A_TIME", 7)
     seen: list[tuple[int, int]] = []
     count = pp.write_csv(PLAN, parts, progress=lambda *done: seen.append(done))
     assert whole.read_bytes() == parts.read_bytes()

@@ -43,6 +43,13 @@ SHARED = (*QUANTITIES, "speed", "cycle time", "tolerance")
 """Checks whose limits are used up in part."""
 
 
+class Row(NamedTuple):
+    """A row of a table: its line in the file, and its time [s]."""
+
+    line: int
+    time: float
+
+
 @dataclass(frozen=True)
 class Finding:
     """One requirement, and what the motion makes of it.
@@ -69,6 +76,10 @@ class Finding:
         The step in which it occurs.
     what : str
         What it is between: "tool to kiln car post"; empty where axis and step say all.
+    line : int, optional
+        The line of a table's file in which the worst value occurs.
+    first : Row, optional
+        The first row of a table that does not meet it.
     """
 
     check: str
@@ -82,6 +93,8 @@ class Finding:
     time: float | None = None
     step: str | None = None
     what: str = ""
+    line: int | None = None
+    first: Row | None = None
 
     @property
     def use(self) -> float | None:

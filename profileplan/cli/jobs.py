@@ -1,4 +1,4 @@
-"""Commands on jobs: plan, check, export."""
+"""Commands on jobs: plan, check."""
 
 from __future__ import annotations
 
@@ -54,17 +54,24 @@ def plan(  # noqa: PLR0913 - one parameter an option
     The table has a row for each step: when it begins, how long it takes, what limits it (the
     strongest first), and how much of each limit it uses in percent, with the axis that uses most.
     """  # noqa: D301 - click's mark for lines to keep as they are
-    planned = _planned(_job(source, machine, speed, tolerance), talk=not (as_json or quiet))
+    planned = planned_of(job_of(source, machine, speed, tolerance), talk=not (as_json or quiet))
     from profileplan import setpoints, summary  # noqa: PLC0415
 
     values = summary.summarise(planned)
     if output is not None:
         _make_folder(output)
-        frame.keep(_sources(planned.job), output / "setpoints.csv", output / "summary.json")
+        frame.keep(sources_of(planned.job), output / "setpoints.csv", output / "summary.json")
+        own = planned.job.machine.setpoints
         with frame.Progress("writing setpoints", wanted=not (as_json or quiet)) as progress:
-            setpoints.write_csv(planned, output / "setpoints.csv", progress=progress)
+            setpoints.write_table(
+                planned,
+                output / "setpoints.csv",
+                content=setpoints.Content.of(planned.job.machine),
+                dialect=own.dialect,
+                progress=progress,
+            )
         summary.write_json(values, output / "summary.json")
-        _tell_unplayed(planned, None)
+        tell_unplayed(planned, None)
     if as_json:
         click.echo(summary.text(values), nl=False)
     elif quiet:
@@ -111,8 +118,8 @@ def check(
             raise InputError([Fault("", message, source)])
         findings = _table_findings(source, machine)
     else:
-        job = _job(source, machine, speed, tolerance)
-        findings = _planned(job, talk=not (as_json or quiet)).check()
+        job = job_of(source, machine, speed, tolerance)
+        findings = planned_of(job, talk=not (as_json or quiet)).check()
     met = all(finding.ok for finding in findings)
     if as_json:
         from profileplan import summary  # noqa: PLC0415
@@ -126,76 +133,14 @@ def check(
     frame.finish(met=met)
 
 
-@frame.cli.command()
-@frame.source
-@frame.machine
-@click.option(
-    "-o",
-    "--output",
-    type=click.Path(path_type=Path, dir_okay=False),
-    required=True,
-    help="The table to write; replaced when complete.",
-)
-@click.option(
-    "--period",
-    type=frame.Measure("time"),
-    help='Time between rows, s or with unit: 0.001, "250 us".',
-)
-@click.option(
-    "--columns",
-    default="pos,vel,acc",
-    show_default=True,
-    help="What to write for each axis: any of pos, vel, acc, jerk.",
-)
-@frame.speed
-@frame.tolerance
-@frame.as_json
-@frame.quiet
-def export(  # noqa: PLR0913 - one parameter an option
-    *,
-    source: Path,
-    machine: Path | None,
-    output: Path,
-    period: float | None,
-    columns: str,
-    speed: float | None,
-    tolerance: float | None,
-    as_json: bool,
-    quiet: bool,
-) -> None:
-    """Write the setpoint table alone.
-
-    \b
-    Examples:
-      profileplan export samples/kiln-loader/cycle.toml -o setpoints.csv
-      profileplan export cycle.toml -o setpoints.csv --period "250 us" --columns pos,vel
-
-    The last row is the first tick at or after the end of the motion, at rest and on target.
-    """  # noqa: D301 - click's mark for lines to keep as they are
-    planned = _planned(_job(source, machine, speed, tolerance), talk=not (as_json or quiet))
-    from profileplan import setpoints, summary  # noqa: PLC0415
-
-    names = [name.strip() for name in columns.split(",") if name.strip()]
-    frame.keep(_sources(planned.job), output)
-    with frame.Progress("writing setpoints", wanted=not (as_json or quiet)) as progress:
-        rows = setpoints.write_csv(planned, output, period=period, columns=names, progress=progress)
-    _tell_unplayed(planned, period)
-    if as_json:
-        click.echo(summary.text({"file": str(output), "rows": rows}), nl=False)
-    else:
-        click.echo(f"{output}: {rows} rows; {tables.verdict(planned)}", color=frame.color())
-        if not quiet:
-            click.echo(summary.CAUTION, err=True)
-    frame.finish(met=all(finding.ok for finding in planned.check()))
-
-
-def _job(source: Path, machine: Path | None, speed: float | None, tolerance: float | None) -> Job:
+def job_of(source: Path, machine: Path | None, speed: float | None, tolerance: float | None) -> Job:
+    """Read a job."""
     from profileplan.inputs import load_job  # noqa: PLC0415
 
     return load_job(source, machine=machine, speed=speed, tolerance=tolerance)
 
 
-def _planned(job: Job, *, talk: bool) -> Plan:
+def planned_of(job: Job, *, talk: bool) -> Plan:
     """Plan a job, with progress, and say on stderr what the plan leaves out."""
     from profileplan import planning  # noqa: PLC0415
 
@@ -217,7 +162,7 @@ def _table_findings(source: Path, machine: Path | None) -> Sequence[Finding]:
     return checks.check_table(setpoints.read_csv(source, limits), limits)
 
 
-def _sources(job: Job) -> list[Path | None]:
+def sources_of(job: Job) -> list[Path | None]:
     """Return the files that a job is read from."""
     from profileplan.inputs import PathStep, Trace  # noqa: PLC0415
 
@@ -230,7 +175,7 @@ def _sources(job: Job) -> list[Path | None]:
     return files
 
 
-def _tell_unplayed(planned: Plan, period: float | None) -> None:
+def tell_unplayed(planned: Plan, period: float | None) -> None:
     """Say on stderr which signals change back before a row shows them."""
     from profileplan import setpoints  # noqa: PLC0415
 

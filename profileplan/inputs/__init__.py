@@ -17,6 +17,8 @@ from profileplan.inputs.cycle import (
     Waypoint,
 )
 from profileplan.inputs.cycle_file import read_cycle
+from profileplan.inputs.dialect import Dialect
+from profileplan.inputs.drive import Drive, Twin
 from profileplan.inputs.job import Job
 from profileplan.inputs.machine import (
     Axis,
@@ -29,6 +31,7 @@ from profileplan.inputs.machine import (
 )
 from profileplan.inputs.machine_file import read_machine
 from profileplan.inputs.patterns import Expansion, Part, Pattern, expand
+from profileplan.inputs.periods import base_from_period, period_from_base
 from profileplan.inputs.rules import Outline, Positions
 from profileplan.inputs.source import load_job
 from profileplan.inputs.waypoints import read_waypoints
@@ -39,6 +42,8 @@ __all__ = [
     "AxisLimits",
     "Circle",
     "Cycle",
+    "Dialect",
+    "Drive",
     "Expansion",
     "Job",
     "Keepout",
@@ -59,10 +64,13 @@ __all__ = [
     "Tool",
     "Trace",
     "Transfer",
+    "Twin",
     "Wait",
     "Waypoint",
+    "base_from_period",
     "expand",
     "load_job",
+    "period_from_base",
     "read_cycle",
     "read_machine",
     "read_waypoints",

@@ -12,6 +12,7 @@ from dataclasses import KW_ONLY, dataclass, field
 from types import MappingProxyType
 from typing import TYPE_CHECKING, Literal, NamedTuple, TypeAlias
 
+from profileplan.inputs.dialect import KINDS, Dialect
 from profileplan.inputs.rules import (
     EXTENT,
     LIMIT,
@@ -30,8 +31,12 @@ from profileplan.inputs.rules import (
 if TYPE_CHECKING:
     from pathlib import Path
 
+    from profileplan.inputs.drive import Drive
+
 AxisKind: TypeAlias = Literal["linear", "rotary"]
+TableUnits: TypeAlias = Literal["axis", "increments"]
 AXIS_KINDS: tuple[AxisKind, ...] = ("linear", "rotary")
+TABLE_UNITS: tuple[TableUnits, ...] = ("axis", "increments")
 
 SETPOINT_UNITS = {
     "pos": "{}",
@@ -42,6 +47,9 @@ SETPOINT_UNITS = {
     "torque": "Nm",
 }
 """What a setpoint table can hold of an axis → its unit in the heading, {} for the axis's own."""
+
+DEFAULT_COLUMNS = ("pos", "vel", "acc")
+"""What is written of each axis unless something else is asked for."""
 
 MOST_AXES = 12
 WHOLE_NANOSECOND_TOLERANCE = 1e-6  # ns: a period of 1 s in double precision is rounded by 2e-7 ns
@@ -78,6 +86,8 @@ class Axis:
         What a drive increment stands for [mm or deg].
     mechanics : mapping, optional
         The table of that name as it was written.
+    drive : Drive, optional
+        What counts its position.
     """
 
     name: str
@@ -90,6 +100,7 @@ class Axis:
     jerk: float | None = None
     resolution: float | None = None
     mechanics: Mapping[str, object] | None = None
+    drive: Drive | None = None
 
     def __post_init__(self) -> None:
         judge = Judge()
@@ -213,14 +224,36 @@ class Tool:
 
 @dataclass(frozen=True)
 class SetpointSettings:
-    """How the motion is sampled: `period` in s, a whole number of ns from 50 µs to 1 s."""
+    """How the motion is sampled and written.
+
+    Parameters
+    ----------
+    period : float
+        Time between rows [s]: a whole number of ns from 50 µs to 1 s.
+    columns : tuple of str
+        What is written of each axis: pos, vel, acc, jerk.
+    units : {"axis", "increments"}
+        Whether axes with a drive are written in its increments.
+    dialect : Dialect
+        How the table is written.
+    """
 
     period: float = 0.001
+    _: KW_ONLY
+    columns: tuple[str, ...] = DEFAULT_COLUMNS
+    units: TableUnits = "axis"
+    dialect: Dialect = field(default_factory=Dialect)
 
     def __post_init__(self) -> None:
         judge = Judge()
+        object.__setattr__(self, "columns", tuple(self.columns))
+        for index, column in enumerate(self.columns, start=1):
+            judge.choice(f"columns[{index}]", column, KINDS)
+        if len(set(self.columns)) != len(self.columns) or not self.columns:
+            judge.note("columns", "at least one is needed, and none twice")
+        judge.choice("units", self.units, TABLE_UNITS)
         judge.number("period", self.period, PERIOD, "s")
-        if not judge.faults:
+        if is_number(self.period) and PERIOD.holds(self.period):
             nanoseconds = self.period * 1e9
             if abs(nanoseconds - round(nanoseconds)) > WHOLE_NANOSECOND_TOLERANCE:
                 nearest = f"{round(nanoseconds)}e-9"

@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from profileplan.errors import InputError
+from profileplan.inputs.dialect import TIME_UNITS, Dialect
+from profileplan.inputs.drive import Drive, Twin
 from profileplan.inputs.machine import (
     AXIS_KINDS,
+    TABLE_UNITS,
     Axis,
     AxisKind,
     Circle,
@@ -16,6 +20,7 @@ from profileplan.inputs.machine import (
     SetpointSettings,
     Tool,
 )
+from profileplan.inputs.periods import period_from_base
 from profileplan.inputs.quantities import Quantity
 from profileplan.inputs.rules import tidy
 from profileplan.inputs.table import Table, open_table
@@ -28,6 +33,12 @@ ROTARY = (
     *(Quantity.ANGLE, Quantity.ANGULAR_VELOCITY),
     *(Quantity.ANGULAR_ACCELERATION, Quantity.ANGULAR_JERK),
 )
+
+TWIN_KEYS = {"name": "also", "direction": "also_direction", "offset": "also_offset"}
+"""What a twin's values are called in its drive's table."""
+
+FULL_TURN = 360.0
+"""Travel of a rotary axis in a turn of its gear's output [deg]."""
 
 
 def read_machine(path: Path | str) -> Machine:
@@ -92,6 +103,7 @@ def _axis(table: Table, name: str, substitute: str) -> Axis:
             jerk=table.optional_number("jerk", jerk),
             resolution=table.optional_number("resolution", position),
             mechanics=_mechanics(table),
+            drive=_drive(table.table("drive"), position),
         ),
         lambda: _harmless_axis(name, kind),
     )
@@ -148,10 +160,101 @@ def _circle(table: Table) -> Circle:
     return circle or Circle(0, 0, 1)
 
 
+def _drive(table: Table | None, position: Quantity) -> Drive | None:
+    """Return the drive of an axis whose positions are lengths or angles."""
+    if table is None:
+        return None
+    gear = table.wholes("gear")
+    if "lead" not in table.raw and position is Quantity.LENGTH:
+        table.note("lead", "missing; travel in a turn of the gear's output is needed")
+    return table.build(
+        lambda: Drive(
+            table.whole("increments", default=0),
+            lead=table.number("lead", position, default=FULL_TURN),
+            gear=Drive.gear if gear is None else _two(table, gear),
+            direction=table.whole("direction", default=Drive.direction),
+            offset=table.number("offset", position, default=Drive.offset),
+            wrap=table.optional_number("wrap", position),
+            also=_twin(table, position),
+        )
+    )
+
+
+def _twin(table: Table, position: Quantity) -> Twin | None:
+    """Return the second drive of an axis."""
+    name = table.optional_text("also")
+    direction = table.whole("also_direction", default=Twin.direction)
+    offset = table.number("also_offset", position, default=Twin.offset)
+    if name is None:
+        return None
+    try:
+        return Twin(name, direction=direction, offset=offset)
+    except InputError as error:
+        raise InputError(
+            replace(fault, place=TWIN_KEYS[fault.place]) for fault in error.faults
+        ) from None
+
+
+def _two(table: Table, gear: tuple[int, ...]) -> tuple[int, int]:
+    if len(gear) != 2:
+        table.note("gear", f"an array of {len(gear)}; [turns of motor, turns of output] is needed")
+        return Drive.gear
+    return (gear[0], gear[1])
+
+
 def _setpoints(table: Table) -> SetpointSettings:
+    columns = table.texts("columns")
     settings = table.build(
         lambda: SetpointSettings(
-            table.number("period", Quantity.TIME, default=SetpointSettings.period)
+            _period(table),
+            columns=SetpointSettings.columns if columns is None else columns,
+            units=table.choice("units", TABLE_UNITS, default=SetpointSettings.units),
+            dialect=_dialect(table),
         )
     )
     return settings or SetpointSettings()
+
+
+def _period(table: Table) -> float:
+    """Return the period, given as it is or by base and exponent."""
+    period = table.number("period", Quantity.TIME, default=SetpointSettings.period)
+    inner = table.table("interpolation")
+    if inner is None:
+        return period
+    if "period" in table.raw:
+        table.note("interpolation", "is a period too; give one of them")
+    found = inner.build(
+        lambda: period_from_base(inner.whole("base", default=0), inner.whole("exponent", default=0))
+    )
+    return found or SetpointSettings.period
+
+
+def _dialect(table: Table) -> Dialect:
+    rows = table.whole("rows_a_file", default=0)
+    return Dialect(
+        delimiter=table.text("delimiter", default=Dialect.delimiter),
+        decimal=table.text("decimal", default=Dialect.decimal),
+        line_end=table.choice("line_end", ("crlf", "lf"), default=Dialect.line_end),
+        decimals=_digits(table, "decimals"),
+        significant=_digits(table, "significant"),
+        header=table.boolean("header", default=Dialect.header),
+        names=_names(table),
+        time=table.choice("time", TIME_UNITS, default=Dialect.time),
+        comments=table.texts("comments") or (),
+        comment_mark=table.text("comment_mark", default=Dialect.comment_mark),
+        axis_files=table.boolean("axis_files", default=Dialect.axis_files),
+        rows_a_file=rows if "rows_a_file" in table.raw else None,
+        tell_joins=table.boolean("tell_joins", default=Dialect.tell_joins),
+    )
+
+
+def _digits(table: Table, key: str) -> dict[str, int]:
+    """Return digits by kinds of columns."""
+    inner = table.table(key)
+    return {} if inner is None else {kind: inner.whole(kind, default=1) for kind in inner.raw}
+
+
+def _names(table: Table) -> dict[str, str]:
+    """Return new names by usual headings."""
+    inner = table.table("names")
+    return {} if inner is None else {heading: inner.text(heading) for heading in inner.raw}

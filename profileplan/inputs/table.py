@@ -97,6 +97,19 @@ class Table:
             return default
         return raw
 
+    def wholes(self, key: str) -> tuple[int, ...] | None:
+        """Return an array of whole numbers, or None where it is left out."""
+        raw = self._take(key)
+        if raw is None:
+            return None
+        numbers = is_array(raw) and [
+            item for item in raw if isinstance(item, int) and not isinstance(item, bool)
+        ]
+        if not is_array(raw) or not numbers or len(numbers) != len(raw):
+            self.note(key, f"{shown(raw)}; an array of whole numbers is needed")
+            return None
+        return tuple(numbers)
+
     def text(self, key: str, default: str | None = None) -> str:
         """Return a text; without a default it must be given."""
         value = self.optional_text(key)

@@ -1,0 +1,223 @@
+"""What does a drive make of rounded positions: how far do derived rates pass the limits?
+
+A drive that takes differences of the positions it is given finds velocity, acceleration and jerk
+of the motion with noise: every position is off by half of its last digit at most.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, NamedTuple
+
+import numpy as np
+
+from profileplan.inputs.dialect import Dialect
+from profileplan.setpoints.content import Content
+from profileplan.setpoints.digits import rounded
+from profileplan.setpoints.drives import judge_drives
+from profileplan.setpoints.sampling import COLUMNS, Sampler
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Iterator, Mapping
+
+    from profileplan.inputs import Axis
+    from profileplan.motion.polynomials import Array
+    from profileplan.motion.schedule import Schedule
+
+QUANTITIES = {"velocity": 1, "acceleration": 2, "deceleration": 2, "jerk": 3}
+"""Quantities that a drive derives → how many differences that takes."""
+
+NOISY = 0.1
+"""Share of a limit from which noise of rounding is worth advice: common practice, no source."""
+
+LIMIT_TOLERANCE = 1e-9
+"""Share of a limit by which rounding of doubles may pass it."""
+
+ROWS_AT_A_TIME = 16384
+
+
+@dataclass(frozen=True)
+class Noise:
+    """What rounding does to a quantity of an axis, as a drive derives it.
+
+    Parameters
+    ----------
+    axis : str
+    quantity : str
+        A key of ``QUANTITIES``.
+    limit : float [mm/s, mm/s² or mm/s³; a rotary axis: deg for mm]
+    exact : float
+        The greatest from positions that are not rounded.
+    derived : float
+        The greatest from the positions as they are written.
+    rounding : float
+        What rounding alone can add at most, and no table of this resolution and period avoids.
+    time : float [s]
+        Where ``derived`` is first taken.
+    advice : str, optional
+        What makes the noise small, where it is large.
+    """
+
+    axis: str
+    quantity: str
+    limit: float
+    exact: float
+    derived: float
+    rounding: float
+    time: float
+    advice: str | None = None
+
+    @property
+    def excess(self) -> float:
+        """By how much of the limit the derived quantity passes it; negative below it."""
+        return self.derived / self.limit - 1
+
+    @property
+    def ok(self) -> bool:
+        """Whether no more than rounding explains what passes the limit."""
+        return self.derived <= self.limit * (1 + LIMIT_TOLERANCE) + self.rounding
+
+
+class _Grid(NamedTuple):
+    """What the positions of an axis are rounded to: steps of ``step`` [mm or deg]."""
+
+    step: float
+    per_unit: float
+    offset: float
+    decimals: int
+
+
+def rounding_noise(
+    schedule: Schedule,
+    *,
+    content: Content | None = None,
+    dialect: Dialect | None = None,
+    progress: Callable[[int, int], None] | None = None,
+) -> tuple[Noise, ...]:
+    """Return what rounding does to every limited quantity of every axis.
+
+    Parameters
+    ----------
+    schedule : Schedule
+    content : Content, optional
+        Its period and drives: where an axis has one, its increments are the steps.
+    dialect : Dialect, optional
+        Its decimals of positions are the steps of the other axes.
+    progress : callable, optional
+        Called with the rows looked at so far and the rows in all.
+
+    Raises
+    ------
+    InputError
+        A period out of range, or drives that cannot play the schedule.
+
+    Notes
+    -----
+    The weights of an n-th difference sum to 2^n in magnitude, so positions that are off by half a
+    step change it by 2^(n-1) steps at most.
+    """
+    content, dialect = content or Content(), dialect or Dialect()
+    judge_drives(schedule, content.drives)
+    sampler = Sampler(schedule, period=content.period, columns=("pos",))
+    axes = schedule.job.machine.axes
+    grids = [_grid(axis, content, dialect) for axis in axes]
+    exact: dict[tuple[str, str], tuple[float, float]] = {}
+    derived: dict[tuple[str, str], tuple[float, float]] = {}
+    for start in range(0, sampler.count, ROWS_AT_A_TIME):
+        rows = range(max(start - 3, 0), min(start + ROWS_AT_A_TIME, sampler.count))
+        position = sampler.table(rows).position
+        # The machine stands before the first row and behind the last one.
+        ends = (3 if start == 0 else 0, 3 if rows.stop == sampler.count else 0)
+        first = rows.start - ends[0]
+        for column, (axis, grid) in enumerate(zip(axes, grids, strict=True)):
+            own = np.pad(position[:, column], ends, mode="edge")
+            for store, steps in ((exact, own / grid.step), (derived, _steps(own, grid))):
+                for quantity, sizes in _rates(steps, grid.step, sampler.period, axis):
+                    at = int(sizes.argmax())
+                    row = min(max(first + at + QUANTITIES[quantity], 0), sampler.count - 1)
+                    found = (float(sizes[at]), row * sampler.period)
+                    key = (axis.name, quantity)
+                    store[key] = max(store.get(key, (-1.0, 0.0)), found, key=lambda one: one[0])
+        if progress:
+            progress(rows.stop, sampler.count)
+    return tuple(_findings(axes, grids, exact, derived, sampler.period))
+
+
+def _findings(
+    axes: tuple[Axis, ...],
+    grids: list[_Grid],
+    exact: Mapping[tuple[str, str], tuple[float, float]],
+    derived: Mapping[tuple[str, str], tuple[float, float]],
+    period: float,
+) -> Iterator[Noise]:
+    for axis, grid in zip(axes, grids, strict=True):
+        for row, (quantity, order) in enumerate(QUANTITIES.items()):
+            limit = axis.limits[row]
+            if math.isinf(limit):
+                continue
+            value, time = derived[axis.name, quantity]
+            rounding = 2 ** (order - 1) * grid.step / period**order
+            yield Noise(
+                axis=axis.name,
+                quantity=quantity,
+                limit=limit,
+                exact=exact[axis.name, quantity][0],
+                derived=value,
+                rounding=rounding,
+                time=time,
+                advice=_advice(axis, order, rounding / limit, grid.step, period),
+            )
+
+
+def _advice(axis: Axis, order: int, share: float, step: float, period: float) -> str | None:
+    """Return what keeps noise below what is worth a word."""
+    if share <= NOISY:
+        return None
+    finer = step * NOISY / share
+    longer = period * (share / NOISY) ** (1 / order)
+    return (
+        f"rounding alone is up to {share:.0%} of the limit: steps of {finer:.2g} {axis.unit} or "
+        f"finer (now {step:.2g}), or a period of {longer:.2g} s or longer (now {period:.2g}), keep "
+        f"it below {NOISY:.0%}; else filter what the drive derives, or give it the velocity too"
+    )
+
+
+def _grid(axis: Axis, content: Content, dialect: Dialect) -> _Grid:
+    drive = content.drives.get(axis.name)
+    if drive is None:
+        decimals = dialect.decimals.get("pos", COLUMNS["pos"].decimals)
+        return _Grid(10.0**-decimals, 10.0**decimals, 0.0, decimals)
+    return _Grid(drive.resolution, float(drive.ratio), drive.offset, -1)
+
+
+def _steps(position: Array, grid: _Grid) -> Array:
+    """Return positions rounded, in whole steps."""
+    if grid.decimals >= 0:
+        return rounded(position, grid.decimals)[0]
+    steps: Array = np.rint((position + grid.offset) * grid.per_unit)
+    return steps
+
+
+def _rates(steps: Array, step: float, period: float, axis: Axis) -> Iterator[tuple[str, Array]]:
+    """Yield the magnitudes of the rates that a drive derives from positions in steps.
+
+    A second difference is a deceleration where it opposes the velocities before and after it. The
+    axis may have stood still between them if both are small: there the greater limit counts.
+    """
+    first = np.diff(steps)
+    second = np.diff(first)
+    velocity = first * (step / period)
+    acceleration = second * (step / period**2)
+    limits = axis.limits
+    before, after = velocity[:-1], velocity[1:]
+    still = 0.5 * period * max(limits.acceleration, limits.deceleration)
+    one_way = (np.minimum(np.abs(before), np.abs(after)) > still) & (before * after > 0)
+    slows = np.where(
+        one_way, acceleration * (before + after) < 0, limits.deceleration > limits.acceleration
+    )
+    size = np.abs(acceleration)
+    yield "velocity", np.abs(velocity)
+    yield "acceleration", np.where(slows, 0.0, size)
+    yield "deceleration", np.where(slows, size, 0.0)
+    yield "jerk", np.abs(np.diff(second)) * (step / period**3)
