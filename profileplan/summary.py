@@ -110,6 +110,12 @@ def finding_values(finding: checks.Finding) -> dict[str, object]:
         "time_s": finding.time,
         "step": finding.step,
         **({"what": finding.what} if finding.what else {}),
+        **({} if finding.line is None else {"line": finding.line}),
+        **(
+            {}
+            if finding.first is None
+            else {"first_line": finding.first.line, "first_time_s": finding.first.time}
+        ),
     }
 
 

@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from profileplan.checks import Finding
-    from profileplan.inputs import Job
+    from profileplan.inputs import Job, Machine
     from profileplan.planning import Plan
 
 
@@ -102,8 +102,9 @@ def check(
     """Judge every requirement, with value, limit and margin.
 
     SOURCE is a cycle file (.toml), or with -m a waypoint file (.csv), a drawing (.dxf), or a
-    setpoint table (.csv with a column t_s): of that the positions are judged, by travel and by
-    their differences against the limits.
+    setpoint table (.csv with a time column), ours or another's. Of a table all columns that are
+    known are judged: travel, steps, differences and rates against the limits, agreement of
+    positions and velocities, time, rest at both ends, clearance; with the first row of each fault.
 
     \b
     Examples:
@@ -116,7 +117,7 @@ def check(
         if speed is not None or tolerance is not None:
             message = "--speed and --tolerance are for waypoints; this is a setpoint table"
             raise InputError([Fault("", message, source)])
-        findings = _table_findings(source, machine)
+        findings = _table_findings(source, machine, talk=not (as_json or quiet))
     else:
         job = job_of(source, machine, speed, tolerance)
         findings = planned_of(job, talk=not (as_json or quiet)).check()
@@ -151,15 +152,29 @@ def planned_of(job: Job, *, talk: bool) -> Plan:
     return planned
 
 
-def _table_findings(source: Path, machine: Path | None) -> Sequence[Finding]:
-    from profileplan import checks, setpoints  # noqa: PLC0415
+def _limits(source: Path, machine: Path | None) -> Machine:
+    """Return the machine that a table is judged by."""
     from profileplan.inputs import read_machine  # noqa: PLC0415
 
     if machine is None:
         message = "a setpoint table is judged by a machine's limits: give its file with -m"
         raise InputError([Fault("", message, source)])
-    limits = read_machine(machine)
-    return checks.check_table(setpoints.read_csv(source, limits), limits)
+    return read_machine(machine)
+
+
+def _table_findings(source: Path, machine: Path | None, *, talk: bool) -> Sequence[Finding]:
+    """Judge a table, with progress, and say on stderr which columns are not judged."""
+    from profileplan import checks  # noqa: PLC0415
+
+    limits = _limits(source, machine)
+    # Where the machine file says nothing of its own, the table says how it is written.
+    own = limits.setpoints.dialect
+    dialect = None if own == type(own)() else own
+    with frame.Progress("checking", wanted=talk) as progress:
+        judged = checks.judge_file(source, limits, dialect=dialect, progress=progress)
+    if judged.unjudged:
+        click.echo(f"note: not judged: {', '.join(judged.unjudged)}", err=True)
+    return judged.findings
 
 
 def sources_of(job: Job) -> list[Path | None]:

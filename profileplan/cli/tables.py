@@ -258,4 +258,8 @@ def _at(finding: Finding) -> str:
     parts = [finding.step] if finding.step and somewhere else []
     if finding.time is not None and somewhere:
         parts.append(f"at {finding.time:.3f} s")
+    if finding.first is not None and not finding.ok:
+        parts = [f"first in line {finding.first.line}, at {finding.first.time:.6g} s"]
+    elif finding.line is not None and somewhere:
+        parts.append(f"in line {finding.line}")
     return " ".join(parts)
