@@ -44,6 +44,9 @@ COARSE_ROUNDS, FINE_ROUNDS = 25, 12
 REFITS, SETTLED = 6, 0.15
 """Most refits in a row, and the gain at which another is not worth it."""
 
+ALONE = 2e-4
+"""Share by which a motion may be longer than the slowest axis alone to be as short as any."""
+
 HEADROOM = 2e-6
 """Share of time given up, so that the last round has room for its accuracy."""
 
@@ -124,7 +127,9 @@ def least_time(
     """
     gentle = np.minimum(bounds.acceleration, bounds.deceleration)
     found = _searched(corridor, bounds, progress)
-    if (bounds.acceleration == bounds.deceleration).all():
+    if (bounds.acceleration == bounds.deceleration).all() or _least_there_is(
+        found, corridor, bounds
+    ):
         return found
     # Which limit counts depends on the direction, and its search may end in a worse place than one
     # that begins with the motion under the smaller limit for both.
@@ -140,6 +145,13 @@ def least_time(
         candidates.append(_joined(again, corridor, bounds))
     motions = [passage for passage in candidates if passage is not None]
     return min(motions, key=lambda passage: passage.spline.duration, default=None)
+
+
+def _least_there_is(found: Passage | None, corridor: Corridor, bounds: Bounds) -> bool:
+    """Return whether a motion takes no longer than the slowest axis alone."""
+    limits = Limits(bounds.velocity, bounds.acceleration, bounds.deceleration, bounds.jerk)
+    alone = LAWS["trapezoidal"].solve(corridor.points[-1] - corridor.points[0], limits).duration
+    return found is not None and found.spline.duration <= float(alone.max()) * (1 + ALONE)
 
 
 def _searched(
