@@ -1,22 +1,27 @@
-"""Setpoint tables: what a drive plays, as files that it can read."""
+"""Setpoint tables: what a drive plays, as files that it can read.
 
-from profileplan.inputs.dialect import Dialect
-from profileplan.inputs.drive import Drive, Twin
-from profileplan.inputs.periods import base_from_period, period_from_base
-from profileplan.setpoints.binary import write_npy, write_parquet
-from profileplan.setpoints.content import Content
-from profileplan.setpoints.files import replacing
-from profileplan.setpoints.points import PvtTable, pvt
-from profileplan.setpoints.reading import is_table, read_csv
-from profileplan.setpoints.rounding import Noise, rounding_noise
-from profileplan.setpoints.sampling import COLUMNS, SetpointTable, sample, unplayed
-from profileplan.setpoints.writing import (
-    Part,
-    write_csv,
-    write_json_lines,
-    write_pvt,
-    write_table,
-)
+Names are loaded from their modules when they are first used: most jobs need few of them.
+"""
+
+from typing import TYPE_CHECKING
+
+from profileplan.inputs import Dialect, Drive, Twin, base_from_period, period_from_base
+
+if TYPE_CHECKING:
+    from profileplan.setpoints.binary import write_npy, write_parquet
+    from profileplan.setpoints.content import Content
+    from profileplan.setpoints.files import replacing
+    from profileplan.setpoints.points import PvtTable, pvt
+    from profileplan.setpoints.reading import is_table, read_csv
+    from profileplan.setpoints.rounding import Noise, rounding_noise
+    from profileplan.setpoints.sampling import COLUMNS, SetpointTable, sample, unplayed
+    from profileplan.setpoints.writing import (
+        Part,
+        write_csv,
+        write_json_lines,
+        write_pvt,
+        write_table,
+    )
 
 __all__ = [
     "COLUMNS",
@@ -44,3 +49,25 @@ __all__ = [
     "write_pvt",
     "write_table",
 ]
+
+_HOMES = {
+    "binary": ("write_npy", "write_parquet"),
+    "content": ("Content",),
+    "files": ("replacing",),
+    "points": ("PvtTable", "pvt"),
+    "reading": ("is_table", "read_csv"),
+    "rounding": ("Noise", "rounding_noise"),
+    "sampling": ("COLUMNS", "SetpointTable", "sample", "unplayed"),
+    "writing": ("Part", "write_csv", "write_json_lines", "write_pvt", "write_table"),
+}
+
+
+def __getattr__(name: str) -> object:
+    """Load a name from the module that it lives in (PEP 562)."""
+    from importlib import import_module  # noqa: PLC0415
+
+    for module, names in _HOMES.items():
+        if name in names:
+            return getattr(import_module(f"{__name__}.{module}"), name)
+    message = f"module {__name__!r} has no attribute {name!r}"
+    raise AttributeError(message)
