@@ -15,7 +15,7 @@ from profileplan.errors import Fault, InputError
 if TYPE_CHECKING:
     from collections.abc import Iterable, Sequence
 
-    from profileplan.setpoints import Noise
+    from profileplan.setpoints import Dialect, Noise
 
 Word = TypeVar("Word", bound=str)
 
@@ -123,6 +123,7 @@ def export(  # noqa: PLR0913 - one parameter an option
         axis_files=axis_files or own.dialect.axis_files,
         rows_a_file=rows_a_file or own.dialect.rows_a_file,
     )
+    _judge_split(dialect, output, form)
     planned = planned_of(job, talk=talk)
     from profileplan import setpoints, summary  # noqa: PLC0415
 
@@ -177,6 +178,13 @@ def _form(output: Path, points: str) -> str:
         message = f'"{form}" is not written; {", ".join(allowed)} can be'
         raise InputError([Fault("", message, output)])
     return form
+
+
+def _judge_split(dialect: Dialect, output: Path, form: str) -> None:
+    """Refuse what would be left out in silence: only .csv tables are split."""
+    if form != ".csv" and (dialect.axis_files or dialect.rows_a_file is not None):
+        message = f"axis_files and rows_a_file are for .csv tables; this is {form}"
+        raise InputError([Fault("", message, output)])
 
 
 def _word(given: str | None, words: Iterable[Word], otherwise: Word) -> Word:

@@ -38,7 +38,7 @@ FIRST_TRUST, WIDEST_TRUST, LEAST_TRUST = 0.3, 0.5, 2e-3
 COARSE_GAIN, FINE_GAIN = 4e-3, 5e-4
 """Share of the duration that a step must promise for the rounds to go on."""
 
-COARSE_ROUNDS, FINE_ROUNDS = 25, 12
+COARSE_ROUNDS, FINE_ROUNDS = 25, 8
 """Most turns before and after the intervals are cut in two."""
 
 REFITS, SETTLED = 6, 0.15
