@@ -11,14 +11,14 @@ from typing import TYPE_CHECKING, NamedTuple
 
 from profileplan import checks, setpoints
 from profileplan.inputs import PathStep
-from profileplan.planning import RAISE
+from profileplan.results import RAISE
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
     from pathlib import Path
 
     from profileplan.inputs import Part
-    from profileplan.planning import Limit, Plan, PlannedStep
+    from profileplan.results import Limit, PlannedCycle, PlannedStep
 
 CAUTION = (
     "A plan is not a safety function. Try every motion at reduced speed first. Risk assessment, "
@@ -27,12 +27,12 @@ CAUTION = (
 """What goes with every plan that leaves the program."""
 
 
-def summarise(plan: Plan) -> dict[str, object]:
+def summarise(plan: PlannedCycle) -> dict[str, object]:
     """Return a plan and the findings on it as plain values, ready for JSON.
 
     Parameters
     ----------
-    plan : Plan
+    plan : PlannedCycle
 
     Returns
     -------
@@ -73,7 +73,7 @@ class PartTime(NamedTuple):
     duration: float
 
 
-def part_times(plan: Plan) -> tuple[PartTime, ...]:
+def part_times(plan: PlannedCycle) -> tuple[PartTime, ...]:
     """Return the times of all parts of a plan, in order."""
     times = []
     for part in plan.job.cycle.parts:
@@ -136,7 +136,7 @@ def text(values: Mapping[str, object]) -> str:
     return json.dumps(values, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
 
 
-def uses(plan: Plan, step: PlannedStep) -> dict[str, dict[str, float]]:
+def uses(plan: PlannedCycle, step: PlannedStep) -> dict[str, dict[str, float]]:
     """Return the share of each limit that a step uses at most: quantity → axis → share.
 
     Limits that an axis does not have are left out.
@@ -153,7 +153,7 @@ def uses(plan: Plan, step: PlannedStep) -> dict[str, dict[str, float]]:
     }
 
 
-def _parts(plan: Plan) -> dict[str, object]:
+def _parts(plan: PlannedCycle) -> dict[str, object]:
     """Return the times of parts; nothing where there are none."""
     times = part_times(plan)
     if not times:
@@ -168,7 +168,7 @@ def _parts(plan: Plan) -> dict[str, object]:
     }
 
 
-def _step(plan: Plan, step: PlannedStep, asked: object) -> dict[str, object]:
+def _step(plan: PlannedCycle, step: PlannedStep, asked: object) -> dict[str, object]:
     return {
         "name": step.name,
         "kind": step.kind,
@@ -205,7 +205,7 @@ def _limit(limit: Limit) -> dict[str, str | None]:
     return {"axis": limit.axis, "quantity": limit.quantity}
 
 
-def _peaks(plan: Plan, step: PlannedStep) -> dict[str, dict[str, float | None]]:
+def _peaks(plan: PlannedCycle, step: PlannedStep) -> dict[str, dict[str, float | None]]:
     """Return the peaks of every axis. Without a jerk limit the acceleration may jump: no number."""
     rows: Sequence[list[float]] = [peak.value.tolist() for peak in step.trajectory.peaks]
     return {

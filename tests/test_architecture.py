@@ -22,8 +22,11 @@ ORDER = (
     "motion",
     "setpoints",
     "checks",
-    "planning",
+    "results",
+    "wording",
     "summary",
+    "report",
+    "planning",
     "cli",
     "__main__",
 )
@@ -78,11 +81,11 @@ WITHIN = {
         "trace",
     ),
     "cli": ("frame", "tables", "jobs", "exports", "drawings"),
-    "planning": ("results", "tasks", "rides", "steps", "transfers", "matching", "traces", "cycle"),
+    "planning": ("plan", "tasks", "rides", "steps", "transfers", "matching", "traces", "cycle"),
 }
 """Modules of a room from the ground up."""
 
-OPENERS = {"inputs", "setpoints"}
+OPENERS = {"inputs", "setpoints", "report"}
 """The rooms that open files."""
 
 HEAVY = ("numpy", "scipy", "shapely", "ezdxf", "tabulate")

@@ -7,18 +7,16 @@ from typing import TYPE_CHECKING
 
 import click
 
+from profileplan import wording
+
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from profileplan.checks import Finding
-    from profileplan.planning import Limit, Plan, PlannedStep
+    from profileplan.planning import Plan, PlannedStep
 
 NARROW, WIDE = 60, 160
 """Fewest and most columns that tables are fitted to."""
-
-SHORT = {"velocity": "vel", "acceleration": "acc", "deceleration": "dec", "jerk": "jerk"}
-"""How the step table abbreviates what limits a step."""
-
 
 NAMED = 5
 """How many of the steps that a limit holds back are named, where a cycle has parts."""
@@ -33,7 +31,7 @@ def step_table(planned: Plan) -> str:
 
     left_out = _left_out(planned)
 
-    uses_of = [f"{word} %" for word in SHORT.values()]
+    uses_of = [f"{word} %" for word in wording.SHORT.values()]
     heads = ["#", "step", "kind", "start s", "time s", "limited by", *uses_of]
     rows = []
     for number, step in enumerate(planned.steps, start=1):
@@ -41,7 +39,7 @@ def step_table(planned: Plan) -> str:
             continue
         shares = [_most(by_axis) for by_axis in uses(planned, step).values()]
         times = [f"{step.start:.3f}", f"{step.duration:.3f}"]
-        rows.append([str(number), step.name, step.kind, *times, _held(step), *shares])
+        rows.append([str(number), step.name, step.kind, *times, wording.held(step), *shares])
     shown = table(heads, rows, text=("step", "kind", "limited by"))
     if not left_out:
         return shown
@@ -69,7 +67,7 @@ def levers(planned: Plan) -> str:
     """Return what would shorten the cycle, and the steps by the time that they take."""
     heads = ["what limits", "saved by 10 % more, s", "steps that it limits"]
     rows = [
-        [_name(lever.limit), f"{lever.limit.saves:.3f}", _named(planned, lever.steps)]
+        [wording.lever(lever.limit), f"{lever.limit.saves:.3f}", _named(planned, lever.steps)]
         for lever in planned.levers
         if lever.limit.quantity != "time"
     ]
@@ -91,51 +89,18 @@ def findings_table(findings: Sequence[Finding]) -> str:
     heads = ["requirement", "value", "limit", "margin", "unit", "use %", "where", "met"]
     rows = [
         [
-            _required(finding),
-            _short(finding.value),
-            _short(finding.limit),
-            _short(finding.margin, 3),
+            wording.required(finding),
+            wording.short(finding.value),
+            wording.short(finding.limit),
+            wording.short(finding.margin, 3),
             finding.unit,
             "" if finding.use is None else f"{100 * finding.use:.1f}",
-            _at(finding),
+            wording.at(finding),
             _met(finding),
         ]
         for finding in findings
     ]
     return table(heads, rows, text=("requirement", "unit", "where", "met"))
-
-
-def where(finding: Finding) -> str:
-    """Return in a line how a requirement is not met, and where."""
-    allowed = "at least" if finding.value < finding.limit else "allowed"
-    return (
-        f"{_required(finding)}: {finding.value:.6g} {finding.unit}, "
-        f"{allowed} {finding.limit:.6g} {finding.unit}, {_at(finding)}"
-    )
-
-
-def verdict(planned: Plan) -> str:
-    """Return the cycle time, and whether it meets its target."""
-    taken = f"cycle time {planned.duration:.3f} s"
-    if planned.target is None:
-        return taken
-    apart = abs(planned.target - planned.duration)
-    if planned.meets_target:
-        return f"{taken}; target {planned.target:g} s {good('met')}, {apart:.3f} s to spare"
-    short = f"{apart:.3f}" if apart >= 0.0005 else f"{apart:.1g}"
-    return f"{taken}; target {planned.target:.9g} s {bad('MISSED')} by {short} s"
-
-
-def requirements(findings: Sequence[Finding]) -> str:
-    """Return in a line whether all requirements are met."""
-    failed = sum(not finding.ok for finding in findings)
-    if failed:
-        return f"{bad('NOT MET')}: {failed} of {len(findings)} requirements"
-    open_ones = sum(not finding.decided for finding in findings)
-    if open_ones:
-        rest = len(findings) - open_ones
-        return f"{rest} requirements {good('met')}; {open_ones} cannot be told from so few decimals"
-    return f"all {len(findings)} requirements {good('met')}"
 
 
 def table(heads: Sequence[str], rows: Sequence[Sequence[str]], *, text: Sequence[str]) -> str:
@@ -167,6 +132,16 @@ def table(heads: Sequence[str], rows: Sequence[Sequence[str]], *, text: Sequence
 def width() -> int:
     """Return how many columns a table may have."""
     return min(max(shutil.get_terminal_size((100, 24)).columns, NARROW), WIDE)
+
+
+def verdict(planned: Plan) -> str:
+    """Return the cycle time, and whether it meets its target, in colour."""
+    return wording.verdict(planned, good=good, bad=bad)
+
+
+def requirements(findings: Sequence[Finding]) -> str:
+    """Return in a line whether all requirements are met, in colour."""
+    return wording.requirements(findings, good=good, bad=bad)
 
 
 def good(word: str) -> str:
@@ -206,33 +181,8 @@ def _most(shares: dict[str, float]) -> str:
     return f"{100 * share:.0f} {axis}" if share > 0 else ""
 
 
-def _held(step: PlannedStep) -> str:
-    """Return what limits a step, axis by axis, the strongest first."""
-    by_axis: dict[str, list[str]] = {}
-    for limit in step.limited_by:
-        word = SHORT.get(limit.quantity, limit.quantity)
-        by_axis.setdefault(limit.axis or _plain(limit.quantity), []).append(
-            word if limit.axis else ""
-        )
-    return "; ".join(
-        f"{name} {', '.join(quantities)}".strip() for name, quantities in by_axis.items()
-    )
-
-
-def _plain(quantity: str) -> str:
-    """Return what limits a step as a whole, in words."""
-    return {"speed": "speed asked for", "time": "time asked for"}.get(quantity, quantity)
-
-
 def _asks_for_time(step: PlannedStep) -> bool:
     return any(limit.quantity == "time" for limit in step.limited_by)
-
-
-def _name(limit: Limit) -> str:
-    """Return what could be changed; less of what stands in the way is meant, and more of others."""
-    if limit.quantity == "clearance":
-        return "height of what is in the way, 10 % less"
-    return f"{limit.axis} {limit.quantity}" if limit.axis else _plain(limit.quantity)
 
 
 def _met(finding: Finding) -> str:
@@ -240,26 +190,3 @@ def _met(finding: Finding) -> str:
     if not finding.decided:
         return "?"
     return good("yes") if finding.ok else bad("NO")
-
-
-def _required(finding: Finding) -> str:
-    named = f"{finding.axis} {finding.check}" if finding.axis else finding.check
-    return f"{named}, {finding.what}" if finding.what else named
-
-
-def _short(value: float, digits: int = 6) -> str:
-    """Return a number in few digits. What rounding alone makes, below a billionth, is 0."""
-    return f"{round(value, 9) + 0.0:.{digits}g}"
-
-
-def _at(finding: Finding) -> str:
-    """Return where the worst case is; nowhere in particular where nothing is amiss at 0."""
-    somewhere = bool(round(finding.value, 9)) or bool(finding.what)
-    parts = [finding.step] if finding.step and somewhere else []
-    if finding.time is not None and somewhere:
-        parts.append(f"at {finding.time:.3f} s")
-    if finding.first is not None and not finding.ok:
-        parts = [f"first in line {finding.first.line}, at {finding.first.time:.6g} s"]
-    elif finding.line is not None and somewhere:
-        parts.append(f"in line {finding.line}")
-    return " ".join(parts)

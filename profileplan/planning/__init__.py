@@ -1,7 +1,7 @@
 """How a cycle is played, how long it takes, what limits it, and what would shorten it."""
 
 from profileplan.planning.cycle import plan
-from profileplan.planning.results import HeldStretch, Lever, Limit, Plan, PlannedStep
-from profileplan.planning.tasks import RAISE
+from profileplan.planning.plan import Plan
+from profileplan.results import HeldStretch, Lever, Limit, PlannedStep
 
-__all__ = ["RAISE", "HeldStretch", "Lever", "Limit", "Plan", "PlannedStep", "plan"]
+__all__ = ["HeldStretch", "Lever", "Limit", "Plan", "PlannedStep", "plan"]

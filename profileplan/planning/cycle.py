@@ -36,9 +36,10 @@ from profileplan.inputs import (
 from profileplan.motion.laws import Limits
 from profileplan.motion.schedule import SignalEvent
 from profileplan.motion.trajectory import Trajectory
-from profileplan.planning.results import Limit, Plan, PlannedStep
+from profileplan.planning.plan import Plan
 from profileplan.planning.steps import plan_line, plan_move, plan_path
 from profileplan.planning.tasks import Motion, Task
+from profileplan.results import Limit, PlannedStep
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Sequence

@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING, NamedTuple, Protocol
 
 from profileplan.motion.laws import DURATION_TOLERANCE
 from profileplan.motion.trajectory import Trajectory
-from profileplan.planning.results import HeldStretch, Limit
-from profileplan.planning.tasks import RAISE, Motion
+from profileplan.planning.tasks import Motion
+from profileplan.results import RAISE, HeldStretch, Limit
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence

@@ -16,7 +16,7 @@ import numpy as np
 from profileplan import checks
 from profileplan.errors import PlanError
 from profileplan.motion.laws import DURATION_TOLERANCE, LAWS, Limits
-from profileplan.planning.results import Limit
+from profileplan.results import RAISE, Limit
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -26,13 +26,10 @@ if TYPE_CHECKING:
     from profileplan.motion.polynomials import Array, Flags
     from profileplan.motion.schedule import Tracing
     from profileplan.motion.trajectory import Trajectory
-    from profileplan.planning.results import HeldStretch
+    from profileplan.results import HeldStretch
 
 PROBE = 0.01
 """Share by which a limit is lowered to see whether it holds a step back."""
-
-RAISE = 0.10
-"""Share by which a limit is raised to see how much time that would save."""
 
 SLOWER = 1e-9
 """Share by which a step must become longer before a lowered limit counts as one that holds it."""

@@ -13,6 +13,10 @@ if TYPE_CHECKING:
     from collections.abc import Sequence
 
 
+RAISE = 0.10
+"""Share by which a limit is raised to see how much time that would save."""
+
+
 @dataclass(frozen=True)
 class Limit:
     """Something that holds a step back.
@@ -25,7 +29,7 @@ class Limit:
         "velocity", "acceleration", "deceleration" or "jerk" of an axis; without an axis "speed"
         along the path, or "time": a duration that was asked for.
     saves : float [s]
-        How much shorter the step would be with this limit a tenth higher and all else kept.
+        How much shorter the step would be with this limit higher by ``RAISE``, and all else kept.
     """
 
     axis: str | None
@@ -81,8 +85,8 @@ class Lever:
 
 
 @dataclass(frozen=True, eq=False)
-class Plan(Schedule):
-    """A planned cycle.
+class PlannedCycle(Schedule):
+    """A planned cycle: all that there is to tell of it.
 
     Parameters
     ----------
@@ -90,17 +94,6 @@ class Plan(Schedule):
         One for each step of the cycle.
     notes : tuple of str
         What the reader of this plan must know and may not expect.
-
-    Examples
-    --------
-    >>> from profileplan import Axis, Cycle, Machine, Move, plan
-    >>> machine = Machine(
-    ...     name="feeder",
-    ...     axes=(Axis("x", travel=(0.0, 500.0), velocity=1000.0, acceleration=5000.0),),
-    ... )
-    >>> cycle = Cycle(steps=(Move({"x": 300.0}),), start={"x": 0.0})
-    >>> plan(machine, cycle).duration
-    0.5
     """
 
     steps: tuple[PlannedStep, ...]
