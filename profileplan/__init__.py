@@ -18,6 +18,7 @@ __version__ = "0.1.0"
 
 _HOMES = {
     "checks": ("Finding", "check", "check_table"),
+    "dynamics": ("AxisLoad", "forces", "loads", "torques"),
     "errors": ("Fault", "InputError", "PlanError", "ProfileplanError"),
     "inputs": (
         "Axis",
@@ -27,6 +28,8 @@ _HOMES = {
         "Keepout",
         "Line",
         "Machine",
+        "Mechanics",
+        "Motor",
         "Move",
         "Part",
         "PathStep",

@@ -9,6 +9,18 @@ from profileplan.checks import (
 from profileplan.checks import (
     check_table as check_table,
 )
+from profileplan.dynamics import (
+    AxisLoad as AxisLoad,
+)
+from profileplan.dynamics import (
+    forces as forces,
+)
+from profileplan.dynamics import (
+    loads as loads,
+)
+from profileplan.dynamics import (
+    torques as torques,
+)
 from profileplan.errors import (
     Fault as Fault,
 )
@@ -41,6 +53,12 @@ from profileplan.inputs import (
 )
 from profileplan.inputs import (
     Machine as Machine,
+)
+from profileplan.inputs import (
+    Mechanics as Mechanics,
+)
+from profileplan.inputs import (
+    Motor as Motor,
 )
 from profileplan.inputs import (
     Move as Move,

@@ -14,6 +14,10 @@ SHORT = {"velocity": "vel", "acceleration": "acc", "deceleration": "dec", "jerk"
 """How tables of steps abbreviate what limits a step."""
 
 
+NAMED = 5
+"""How many steps of many are named."""
+
+
 def verdict(
     planned: PlannedCycle, *, good: Callable[[str], str] = str, bad: Callable[[str], str] = str
 ) -> str:
@@ -72,6 +76,13 @@ def lever(limit: Limit) -> str:
     return f"{limit.axis} {limit.quantity}" if limit.axis else _plain(limit.quantity)
 
 
+def listed(steps: Sequence[str], most: int = NAMED) -> str:
+    """Return names of steps in a row, the first few of many."""
+    if len(steps) <= most + 1:
+        return "; ".join(steps)
+    return f"{'; '.join(steps[:most])}; and {len(steps) - most} more"
+
+
 def required(finding: Finding) -> str:
     """Return what a finding is about."""
     named = f"{finding.axis} {finding.check}" if finding.axis else finding.check
@@ -102,7 +113,8 @@ def at(finding: Finding) -> str:
 
 def short(value: float, digits: int = 6) -> str:
     """Return a number in few digits. What rounding alone makes, below a billionth, is 0."""
-    return f"{round(value, 9) + 0.0:.{digits}g}"
+    rounded = float(f"{round(value, 9) + 0.0:.{digits}g}")
+    return f"{rounded:.15g}" if abs(rounded) < 1e9 else f"{rounded:.{digits}g}"
 
 
 def _plain(quantity: str) -> str:

@@ -20,6 +20,7 @@ ORDER = (
     "inputs",
     "geometry",
     "motion",
+    "dynamics",
     "setpoints",
     "checks",
     "results",
@@ -50,9 +51,14 @@ WITHIN = {
         "ways",
         "traces",
         "clearance",
+        "motors",
         "schedules",
         "table_extremes",
+        "table_cubics",
+        "table_turns",
+        "table_twins",
         "table_axes",
+        "table_notes",
         "table_clearance",
         "tables",
     ),
@@ -80,7 +86,20 @@ WITHIN = {
         "deviation",
         "trace",
     ),
-    "cli": ("frame", "tables", "jobs", "exports", "drawings"),
+    "cli": ("frame", "tables", "jobs", "settings", "exports", "drawings", "pictures"),
+    "report": (
+        "curves",
+        "scene",
+        "picture_rows",
+        "picture_style",
+        "picture_views",
+        "picture_sheet",
+        "pictures",
+        "loads",
+        "rows",
+        "notebook",
+        "page",
+    ),
     "planning": ("plan", "tasks", "rides", "steps", "transfers", "matching", "traces", "cycle"),
 }
 """Modules of a room from the ground up."""
@@ -88,7 +107,7 @@ WITHIN = {
 OPENERS = {"inputs", "setpoints", "report"}
 """The rooms that open files."""
 
-HEAVY = ("numpy", "scipy", "shapely", "ezdxf", "tabulate")
+HEAVY = ("numpy", "scipy", "shapely", "ezdxf", "tabulate", "matplotlib")
 """Libraries that cost start-up time."""
 
 LONGEST_FILE, LONGEST_FUNCTION = 600, 60
@@ -195,7 +214,7 @@ with contextlib.redirect_stdout(io.StringIO()), contextlib.redirect_stderr(io.St
 
 @pytest.mark.parametrize(
     "words",
-    [["--help"], *([name, "--help"] for name in ("plan", "check", "export", "outline"))],
+    [["--help"], *([name, "--help"] for name in ("plan", "check", "export", "outline", "plot"))],
 )
 def test_help_loads_no_heavy_library(words: list[str]) -> None:
     """Help that makes one wait is not read."""

@@ -16,8 +16,10 @@ from profileplan.inputs import (
     Axis,
     AxisLimits,
     Circle,
+    Dialect,
     Keepout,
     Machine,
+    Mechanics,
     SetpointSettings,
     Tool,
     read_machine,
@@ -37,7 +39,8 @@ deceleration = 9000            # mm/s², slowing down; default: acceleration
 jerk = 200000                  # mm/s³; leave out: not limited
 resolution = 0.001             # mm a drive increment stands for; optional
 
-[axes.x.mechanics]             # optional: recorded as it is
+[axes.x.mechanics]             # optional
+mass = 85
 
 [tool]
 radius = 45                    # footprint around the tool point, mm; or outline = [[x, y], ...]
@@ -127,7 +130,7 @@ def test_the_whole_format_is_read(tmp_path: Path) -> None:
                 deceleration=9000,
                 jerk=200000,
                 resolution=0.001,
-                mechanics={},
+                mechanics=Mechanics(mass=85),
             ),
             Axis("y", travel=(0, 1200), velocity=1500, acceleration=4903.325),
             Axis("c", kind="rotary", travel=(-180, 180), velocity=360, acceleration=3600),
@@ -165,13 +168,6 @@ def test_a_machine_finds_its_axes_by_name() -> None:
     assert machine.axis("x") is axis
     with pytest.raises(KeyError):
         machine.axis("y")
-
-
-def test_mechanics_are_kept_as_written(tmp_path: Path) -> None:
-    """The table is judged by what uses it; nothing of it may get lost before."""
-    text = SMALL.replace("[axes.z]", '[axes.x.mechanics]\nmass = 3\nbelt = "5 mm"\n[axes.z]')
-    axis = read_machine(write(tmp_path, text)).axis("x")
-    assert axis.mechanics == {"mass": 3, "belt": "5 mm"}
 
 
 def test_paths_of_drawings_count_from_the_machine_file(tmp_path: Path) -> None:
@@ -403,10 +399,10 @@ def test_records_built_in_code_are_judged_by_the_same_rules(
 
 def test_records_do_not_share_what_they_were_made_of() -> None:
     """A frozen record that changes with the caller's dict would be frozen in name only."""
-    raw: dict[str, object] = {"mass": 3}
-    axis = Axis("x", travel=(0, 1), velocity=1, acceleration=1, mechanics=raw)
-    raw["mass"] = 4
-    assert axis.mechanics == {"mass": 3}
+    raw = {"x_pos_mm": "X"}
+    dialect = Dialect(names=raw)
+    raw["x_pos_mm"] = "Y"
+    assert dialect.names == {"x_pos_mm": "X"}
 
 
 PROGRAM = """

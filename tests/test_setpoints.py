@@ -186,8 +186,8 @@ def test_periods_that_no_drive_has_are_refused(tmp_path: Path, period: float) ->
 @pytest.mark.parametrize(
     ("columns", "words"),
     [
-        (["pos", "speed"], '"speed" is not written; pos, vel, acc, jerk are'),
-        (["force"], '"force" is not written'),
+        (["pos", "speed"], '"speed" is not written; pos, vel, acc, jerk, force, torque are'),
+        (["force"], '"force"; no axis has mechanics'),
         (["pos", "pos"], '"pos" is named twice'),
         ([], "names no column"),
     ],

@@ -17,7 +17,7 @@ from numpy.testing import assert_allclose
 
 import profileplan as pp
 from profileplan.checks.findings import Row
-from profileplan.checks.tables import check_file, judge_file
+from profileplan.checks.tables import Manner, check_file, judge_file
 from profileplan.inputs import Dialect, Drive
 from profileplan.setpoints import Content, is_table, read_csv, write_table
 
@@ -471,10 +471,10 @@ def test_a_table_without_a_header_is_read_by_given_headings(tmp_path: Path) -> N
     cells = copied()
     file = written(tmp_path, cells[1:])
     dialect = Dialect(header=False)
-    judged = judge_file(file, MACHINE, dialect=dialect, headings=cells[0])
+    judged = judge_file(file, MACHINE, manner=Manner(dialect, headings=cells[0]))
     assert all(f.ok for f in judged.findings)
-    with pytest.raises(pp.InputError, match="its headings are needed"):
-        judge_file(file, MACHINE, dialect=dialect)
+    with pytest.raises(pp.InputError, match="line 1: 10 columns and no header; expected 7: t_s, "):
+        judge_file(file, MACHINE, manner=Manner(dialect))
 
 
 def test_headings_of_a_dialect_are_known(tmp_path: Path) -> None:

@@ -9,13 +9,20 @@ from profileplan.checks.findings import LIMIT_TOLERANCE, QUANTITIES, SHARED, Fin
 from profileplan.checks.schedules import check
 
 if TYPE_CHECKING:
-    from profileplan.checks.tables import TableJudgement, check_file, check_table, judge_file
+    from profileplan.checks.tables import (
+        Manner,
+        TableJudgement,
+        check_file,
+        check_table,
+        judge_file,
+    )
 
 __all__ = [
     "LIMIT_TOLERANCE",
     "QUANTITIES",
     "SHARED",
     "Finding",
+    "Manner",
     "Row",
     "TableJudgement",
     "check",

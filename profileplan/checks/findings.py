@@ -39,7 +39,10 @@ QUANTITIES = {"velocity": 1, "acceleration": 2, "deceleration": 2, "jerk": 3}
 """The limits of an axis, in the order of its record, and the derivatives that they bound."""
 
 
-SHARED = (*QUANTITIES, "speed", "cycle time", "tolerance")
+MOTOR_CHECKS = ("peak torque", "rms torque", "motor speed")
+"""What is judged of an axis's motor."""
+
+SHARED = (*QUANTITIES, *MOTOR_CHECKS, "speed", "cycle time", "tolerance")
 """Checks whose limits are used up in part."""
 
 

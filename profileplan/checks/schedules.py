@@ -40,8 +40,8 @@ def check(schedule: Schedule) -> tuple[Finding, ...]:
 
     Travel, velocity, acceleration, deceleration and jerk of every axis; no jump in position,
     velocity or, where the jerk is limited, acceleration, within steps and between them; arrival
-    where the cycle says; speed along the path and duration where they are given; clearance of
-    keep-outs; the target.
+    where the cycle says; torque and speed of motors; speed along the path and duration where they
+    are given; clearance of keep-outs; the target.
 
     Parameters
     ----------
@@ -54,6 +54,7 @@ def check(schedule: Schedule) -> tuple[Finding, ...]:
     """
     by_axis = zip(
         *(_travel(schedule), _limits(schedule), _continuity(schedule), _arrival(schedule)),
+        _motors(schedule),
         strict=True,
     )
     findings = [finding for groups in by_axis for group in groups for finding in group]
@@ -152,6 +153,18 @@ def _arrival(schedule: Schedule) -> Iterator[list[Finding]]:
         time = step.end if index else 0.0
         worst = Worst(float(missed[index, column]), time, step.name)
         yield [upper(worst, "arrival", nearness(axis), axis.unit, axis)]
+
+
+def _motors(schedule: Schedule) -> Iterator[list[Finding]]:
+    """Judge the motors axis by axis, where there are any."""
+    axes = schedule.job.machine.axes
+    if all(axis.motor is None for axis in axes):
+        yield from ([] for _ in axes)
+        return
+    # Only a machine with motors pays for it.
+    from profileplan.checks.motors import motor_findings  # noqa: PLC0415
+
+    yield from motor_findings(schedule)
 
 
 def _clearance(schedule: Schedule) -> Iterator[Finding]:

@@ -15,20 +15,27 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 
 from profileplan.checks.findings import FLOAT_ROUNDING, QUANTITIES, nearness, rate_unit
+from profileplan.checks.table_cubics import LONG, Cubics, Points, cubics, doubts
 from profileplan.checks.table_extremes import Doubt, Extreme, Places, Steps
+from profileplan.checks.table_turns import HIGH, LOW
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
 
-    from profileplan.checks.findings import Finding
+    from profileplan.checks.findings import Finding, Row
+    from profileplan.checks.table_turns import TravelTurns
     from profileplan.inputs import Axis
     from profileplan.motion.polynomials import Array
 
+BETWEEN = "{} between points"
+"""What a drive does that follows cubics between rows."""
+
 CHECKS = {
-    "travel, low end": 0,
-    "travel, high end": 0,
+    LOW: 0,
+    HIGH: 0,
     "step": 0,
     **QUANTITIES,
+    **{BETWEEN.format(quantity): order for quantity, order in QUANTITIES.items()},
     "rest at start": 1,
     "rest at end": 1,
     "velocity column": 1,
@@ -42,7 +49,7 @@ CHECKS = {
 }
 """What is judged of an axis, and the derivatives whose unit it has."""
 
-UNROUNDED = ("travel, high end", "velocity column, start", "velocity column, end")
+UNROUNDED = (HIGH, "velocity column, start", "velocity column, end")
 """Checks with limits that may be 0, beside which a share of rounding says nothing."""
 
 BEFORE = 3
@@ -92,6 +99,14 @@ class Held(NamedTuple):
     jerk: int | None = None
 
 
+class Leap(NamedTuple):
+    """A change of an axis's acceleration in no time, and where it is."""
+
+    axis: Axis
+    size: float
+    row: Row
+
+
 class AxisJudge:
     """Judges an axis.
 
@@ -100,14 +115,30 @@ class AxisJudge:
     axis : Axis
     held : Held
     steps : Steps
+    turns : TravelTurns, optional
+        What judges the travel, where the counter does not tell the turn.
+    between : bool
+        Whether the axis follows cubics between rows.
     """
 
-    def __init__(self, axis: Axis, held: Held, steps: Steps) -> None:
+    def __init__(
+        self,
+        axis: Axis,
+        held: Held,
+        steps: Steps,
+        *,
+        turns: TravelTurns | None = None,
+        between: bool = False,
+    ) -> None:
         self._axis = axis
         self._held = held
+        self._between = held.velocity if between else None
         self._steps = steps
+        self._turns = turns
         self._found: dict[str, Extreme] = {}
         self._most = max(axis.limits.acceleration, axis.limits.deceleration)
+        self._last_acceleration = 0.0
+        self.leap: Leap | None = None
 
     def see(self, window: Window) -> None:
         """Judge the rows of a window."""
@@ -117,6 +148,8 @@ class AxisJudge:
             self._see_differences(window, noise)
             self._see_columns(window)
             self._see_agreement(window, noise)
+            if self._between is not None:
+                self._see_cubics(window, (self._held.position, self._between))
 
     def see_standstill(self, window: Window) -> None:
         """Judge the differences of the last rows and the standstill behind them."""
@@ -141,19 +174,27 @@ class AxisJudge:
             value = np.array([abs(velocity)])
             self._extreme(f"velocity column, {name}").see(value, 0.0, places, doubt)
 
+    def see_last(self, places: Places) -> None:
+        """Take account of the standstill behind the last row, where a cubic ends."""
+        size = abs(self._last_acceleration)
+        if self.leap is not None and size > self.leap.size:
+            self.leap = Leap(self._axis, size, places.row(-1))
+
     def velocity(self, values: Array) -> float:
         """Return what the column of velocity says in a row, (k,); 0 where there is none."""
         return 0.0 if self._held.velocity is None else float(values[self._held.velocity])
 
     def findings(self) -> Iterator[Finding]:
         """Yield what was found."""
+        if self._turns is not None:
+            self._found |= self._turns.chosen()
         for check, order in CHECKS.items():
             extreme = self._found.get(check)
             unit = rate_unit(self._axis, order)
             finding = extreme.finding(check, unit, self._axis) if extreme else None
             if finding is None:
                 continue
-            if check == "travel, low end":
+            if check == LOW:
                 # Positions were judged with the other sign.
                 finding = replace(
                     finding, value=-finding.value, limit=self._axis.travel[0], rounding=0.0
@@ -167,11 +208,67 @@ class AxisJudge:
 
     def _see_travel(self, window: Window) -> None:
         position = window.values[BEFORE:, self._held.position]
-        places = window.upto(position.size)
-        low, high = self._axis.travel
         doubt = Doubt((self._held.position,), (0.5,), nearness(self._axis))
-        self._extreme("travel, low end").see(-position, -low, places, doubt)
-        self._extreme("travel, high end").see(position, high, places, doubt)
+        if self._between is not None:
+            # As of cubics, with which these are judged together.
+            doubt = Doubt((*doubt.columns, self._between), (0.5, 0.0), doubt.noise)
+        self._see_ends(position, position, window.upto(position.size), doubt)
+
+    def _see_cubics(self, window: Window, columns: tuple[int, int]) -> None:
+        """Judge the cubics that end in the rows of a window, by columns of position and velocity.
+
+        Of points that do not follow each other nothing can be told.
+        """
+        start = max(BEFORE - 1, window.real)
+        rows, spans = window.values[start:, columns], window.spans[start:]
+        position, velocity = (self._steps.coarsest(column) for column in columns)
+        slow = SLOW * self._axis.limits.velocity + velocity + 3 * position / spans
+        points = Points(rows[:, 0], rows[:, 1], spans, slow)
+        found = cubics(points)
+        allowed = doubts(points, window.places.time[start:], columns)
+        if self._axis.jerk is not None:
+            self._see_leaps(found, window.upto(len(rows)))
+        follow = np.flatnonzero(spans < LONG)
+        found = Cubics(*(part[follow] for part in found))
+        places = window.upto(spans.size)
+        ends = Places(places.lines[follow], places.time[follow])
+        place = allowed[0].of(follow)
+        place = place._replace(noise=place.noise + nearness(self._axis))
+        self._see_ends(found.lowest, found.highest, ends, place)
+        limits = self._axis.limits
+        sizes = {
+            "velocity": found.velocity,
+            "acceleration": found.speeding,
+            "deceleration": found.slowing,
+            "jerk": found.jerk,
+        }
+        greater = max(("acceleration", "deceleration"), key=lambda name: getattr(limits, name))
+        sizes[greater] = np.maximum(sizes[greater], found.standing)
+        for row, (quantity, order) in enumerate(QUANTITIES.items()):
+            if np.isfinite(limits[row]):
+                doubt = allowed[order].of(follow)
+                extreme = self._extreme(BETWEEN.format(quantity))
+                extreme.see(sizes[quantity], limits[row], ends, doubt)
+
+    def _see_ends(self, lowest: Array, highest: Array, places: Places, doubt: Doubt) -> None:
+        """Judge whether lowest and highest positions are in the travel."""
+        if self._turns is not None:
+            self._turns.see(lowest, highest, places, doubt)
+            return
+        low, high = self._axis.travel
+        self._extreme(LOW).see(-lowest, -low, places, doubt)
+        self._extreme(HIGH).see(highest, high, places, doubt)
+
+    def _see_leaps(self, found: Cubics, places: Places) -> None:
+        """Find the greatest change of acceleration where cubics meet, or the first one begins."""
+        if not found.begin.size:
+            return
+        before = np.concatenate([[self._last_acceleration], found.end[:-1]])
+        sizes = np.abs(found.begin - before)
+        most = int(sizes.argmax())
+        if self.leap is None or sizes[most] > self.leap.size:
+            self.leap = Leap(self._axis, float(sizes[most]), places.row(most))
+        self._last_acceleration = float(found.end[-1])
 
     def _see_differences(self, window: Window, noise: Array) -> None:
         """Judge the differences that end in the rows of a window.

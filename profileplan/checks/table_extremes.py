@@ -54,11 +54,17 @@ class Steps:
         self._positions = positions
         self._known = known
         self._decimals = np.array(decimals, dtype=np.intp)
+        self._coarsest = self._decimals.copy()
 
     def see(self, numbers: Array) -> None:
         """Take account of numbers as they are in the file: (n, k)."""
         if self._known is None:
             self._decimals = last_decimals(numbers, self._decimals)
+
+    def coarsest(self, column: int) -> float:
+        """Return what the last decimal of a column stood for before any row was seen."""
+        decimals = 0 if self._known is not None else int(self._coarsest[column])
+        return self._step(column, decimals)
 
     def possible(self, columns: tuple[int, ...]) -> Iterator[tuple[tuple[int, ...], list[float]]]:
         """Yield each number of decimals that columns may turn out to have, and their steps."""
@@ -112,6 +118,11 @@ class Doubt(NamedTuple):
         """Return that of one value."""
         weights = tuple(_at(weight, index) for weight in self.weights)
         return Doubt(self.columns, weights, _at(self.noise, index))
+
+    def of(self, chosen: Indices) -> Doubt:
+        """Return that of some values."""
+        weights = tuple(_of(weight, chosen) for weight in self.weights)
+        return Doubt(self.columns, weights, _of(self.noise, chosen))
 
     def rounding(self, steps: list[float]) -> float | Array:
         """Return how far values may be off."""
@@ -193,3 +204,7 @@ class Extreme:
 
 def _at(values: float | Array, index: int) -> float:
     return float(values if np.ndim(values) == 0 else np.asarray(values)[index])
+
+
+def _of(values: float | Array, chosen: Indices) -> float | Array:
+    return values if np.ndim(values) == 0 else np.asarray(values)[chosen]

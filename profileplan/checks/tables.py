@@ -9,21 +9,30 @@ import numpy as np
 
 from profileplan.checks.findings import TICK_TOLERANCE, Finding
 from profileplan.checks.table_axes import BEFORE, AxisJudge, Held, Window
+from profileplan.checks.table_cubics import LONG, refined
 from profileplan.checks.table_extremes import Doubt, Extreme, Places, Steps
+from profileplan.checks.table_notes import leap_note, notes_on, placed
+from profileplan.checks.table_turns import TravelTurns
+from profileplan.checks.table_twins import TwinJudge
 from profileplan.errors import Fault, InputError
 from profileplan.inputs.rules import PERIOD
-from profileplan.setpoints.layout import layout_of
-from profileplan.setpoints.reading import BLOCK, Rows, converted, last_decimals, read_rows
+from profileplan.setpoints.reading import BLOCK, Rows, converted, last_decimals
+from profileplan.setpoints.sets import table_files
+from profileplan.setpoints.turns import Turns
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Iterator, Sequence
     from pathlib import Path
 
+    import numpy.typing as npt
+
+    from profileplan.checks.table_axes import Leap
     from profileplan.checks.table_clearance import ClearanceJudge
     from profileplan.inputs import Dialect, Machine
     from profileplan.motion.polynomials import Array
     from profileplan.setpoints import SetpointTable
-    from profileplan.setpoints.layout import Layout
+    from profileplan.setpoints.columns import Sheet
+    from profileplan.setpoints.sets import TableFiles
 
 FIRST_ROWS = 1000
 """Rows that tell the period."""
@@ -34,8 +43,8 @@ MANY = 0.9
 REPEATED = 1e-15
 """A step backward in time [s] that stands for none at all: a repeated stamp has it."""
 
-LONG = 1e6
-"""Time [s] that is taken for a step backward in time, so that nothing is told of it."""
+LEAST = 1e-12
+"""Time [s] between two rows below which they have the same stamp."""
 
 RARE = 0.01
 """Share of rows in which a column may hold something else than 0 and 1 and is still a signal."""
@@ -52,23 +61,44 @@ OF_POSITIONS = (
 
 
 class TableJudgement(NamedTuple):
-    """What a table in a file makes of the requirements, and which columns were not judged."""
+    """What a table in a file makes of the requirements.
+
+    ``unjudged``: names of columns that were not judged. ``notes``: what should be known of how the
+    others were.
+    """
 
     findings: tuple[Finding, ...]
     unjudged: tuple[str, ...]
+    notes: tuple[str, ...] = ()
+
+
+class Manner(NamedTuple):
+    """How a table in a file is to be understood.
+
+    ``dialect``: how it is written; default: as it looks. ``headings``: those of a table that has
+    none; or ``columns``: what such a table holds of each axis. ``points``: whether a drive follows
+    cubics from row to row; default: where rows are uneven.
+    """
+
+    dialect: Dialect | None = None
+    headings: Sequence[str] | None = None
+    columns: Sequence[str] | None = None
+    points: bool | None = None
 
 
 class Pace(NamedTuple):
     """How the times of a table go on.
 
     ``period`` [s] from row to row; ``tolerance`` [s] of it; ``even``: whether differences are
-    taken by it, or by the times; ``required``: whether times must keep it.
+    taken by it, or by the times; ``required``: whether times must keep it; ``points``: whether a
+    drive follows cubics from row to row.
     """
 
     period: float
     tolerance: float
     even: bool = True
     required: bool = True
+    points: bool = False
 
 
 def check_table(table: SetpointTable, machine: Machine) -> tuple[Finding, ...]:
@@ -95,8 +125,11 @@ def check_table(table: SetpointTable, machine: Machine) -> tuple[Finding, ...]:
     count = len(machine.axes)
     positions = list(range(1, count + 1))
     steps = Steps(np.ones(count + 1), positions, known=table.position_step)
-    held = [Held(position) for position in positions]
-    judge = _TableJudge(machine, held, steps, Pace(period, TICK_TOLERANCE))
+    axes = [
+        AxisJudge(axis, Held(position), steps)
+        for axis, position in zip(machine.axes, positions, strict=True)
+    ]
+    judge = _TableJudge(axes, steps, Pace(period, TICK_TOLERANCE))
     # A table in memory has no lines; its rows are counted from 1.
     numbers = np.column_stack([table.time, table.position])
     judge.see(Rows(np.arange(1, len(numbers) + 1), numbers))
@@ -104,7 +137,7 @@ def check_table(table: SetpointTable, machine: Machine) -> tuple[Finding, ...]:
     kept = (*OF_POSITIONS, "even period")
     return tuple(
         replace(finding, line=None, first=None)
-        for finding in judge.findings()
+        for finding in (*judge.findings(), *judge.times())
         if finding.check in kept
     )
 
@@ -117,15 +150,14 @@ def check_file(
     progress: Callable[[int, int], None] | None = None,
 ) -> tuple[Finding, ...]:
     """Judge a setpoint table of any size in a file, as ``judge_file`` does."""
-    return judge_file(path, machine, dialect=dialect, progress=progress).findings
+    return judge_file(path, machine, manner=Manner(dialect), progress=progress).findings
 
 
 def judge_file(
     path: Path,
     machine: Machine,
     *,
-    dialect: Dialect | None = None,
-    headings: Sequence[str] | None = None,
+    manner: Manner | None = None,
     progress: Callable[[int, int], None] | None = None,
     block: int = BLOCK,
 ) -> TableJudgement:
@@ -134,11 +166,11 @@ def judge_file(
     Parameters
     ----------
     path : Path
+        A text of cells; or JSON Lines, .npy or Parquet, by its ending. If it is a part of a table
+        that is split, and others lie beside it, all are judged as one table.
     machine : Machine
-    dialect : Dialect, optional
-        How it is written; default: as it looks.
-    headings : sequence of str, optional
-        The headings of a table that has none.
+    manner : Manner, optional
+        How it is to be understood; default: as it looks.
     progress : callable, optional
         Called with the bytes read so far and the bytes in all.
     block : int
@@ -147,51 +179,113 @@ def judge_file(
     Returns
     -------
     TableJudgement
-        Findings axis by axis: travel, step, the differences of positions, columns of rates, rest at
-        both ends; then times, signals and the clearance. Each has the line of the worst value,
-        and, if it is not met, the first row that breaks it.
+        Findings axis by axis: travel, step, the differences of positions, what cubics between
+        points do, columns of rates, rest at both ends; then second drives, times, signals and the
+        clearance. Each has the line of the worst value, and, if it is not met, the first row that
+        breaks it.
 
     Raises
     ------
     InputError
         The file cannot be read, is no table for this machine, or has rows that are no numbers.
     """
-    layout = layout_of(path, machine, dialect=dialect, headings=headings)
-    columns = layout.columns
-    positions = [index for index, column in enumerate(columns) if column.quantity == "pos"]
-    held = [
-        Held(positions[axis], *(layout.find(rate, axis) for rate in ("vel", "acc", "jerk")))
-        for axis in range(len(machine.axes))
-    ]
-    units = np.abs([column.unit for column in columns])
-    steps = Steps(units, positions, decimals=layout.decimals)
-    judge: _TableJudge | None = None
-    signals = {name: _Signal(steps) for name in layout.signals()}
-    for rows in _gathered(read_rows(layout, block=block, progress=progress)):
-        numbers = converted(rows.numbers, layout)
-        steps.see(rows.numbers)
+    manner = manner or Manner()
+    files = table_files(
+        path,
+        machine,
+        dialect=manner.dialect,
+        headings=manner.headings,
+        columns=manner.columns,
+    )
+    judge: _FileJudge | None = None
+    for rows in _gathered(files.read(block=block, progress=progress)):
         if judge is None:
-            rates = all(one.velocity is not None for one in held)
-            pace = _pace(rows, layout, machine, rates=rates)
-            judge = _TableJudge(machine, held, steps, pace)
-            if machine.keepouts:
-                # Only a cell with something to hit pays for the geometry.
-                from profileplan.checks.table_clearance import ClearanceJudge  # noqa: PLC0415
-
-                judge.clearance = ClearanceJudge(machine, positions, steps)
-        judge.see(Rows(rows.lines, numbers))
-        places = Places(rows.lines, numbers[:, 0])
-        for name, column in layout.signals().items():
-            signals[name].see(numbers[:, column], places)
+            judge = _FileJudge(files.sheet, machine, rows, points=manner.points)
+        judge.see(rows)
     if judge is None:  # what has no rows has raised
         return TableJudgement((), ())
-    judge.finish()
-    found = list(judge.findings())
-    states = {name: signal.finding(name) for name, signal in signals.items()}
-    found += [finding for finding in states.values() if finding is not None]
-    found += judge.nearest()
-    none = [name for name, finding in states.items() if finding is None]
-    return TableJudgement(tuple(found), (*layout.unread, *none))
+    return judge.judgement(files)
+
+
+class _FileJudge:
+    """Judges the rows of a table in a file, in their order."""
+
+    def __init__(self, sheet: Sheet, machine: Machine, rows: Rows, *, points: bool | None) -> None:
+        self._sheet = sheet
+        self._machine = machine
+        held = {
+            number: Held(place, *(sheet.find(rate, number) for rate in ("vel", "acc", "jerk")))
+            for place, column in enumerate(sheet.columns)
+            if column.quantity == "pos" and column.drive == 0 and (number := column.axis) >= 0
+        }
+        units = np.abs([column.unit for column in sheet.columns])
+        positions = [one.position for one in held.values()]
+        self._steps = Steps(units, positions, decimals=sheet.decimals)
+        self._turns = Turns(sheet, machine)
+        pace = _pace(rows, sheet, machine, held=tuple(held.values()), points=points)
+        self._travels = {
+            number: TravelTurns(machine.axes[number], turning, self._steps)
+            for number, one in held.items()
+            if (turning := self._turns.of(one.position)) is not None
+        }
+        axes = {
+            number: AxisJudge(
+                machine.axes[number],
+                one,
+                self._steps,
+                turns=self._travels.get(number),
+                between=pace.points,
+            )
+            for number, one in held.items()
+        }
+        self._judge = _TableJudge(list(axes.values()), self._steps, pace)
+        self._pace = pace
+        if machine.keepouts and len(held) == len(machine.axes):
+            # Only a cell with something to hit pays for the geometry.
+            from profileplan.checks.table_clearance import ClearanceJudge  # noqa: PLC0415
+
+            self._judge.clearance = ClearanceJudge(machine, positions, self._steps)
+            if pace.points:
+                self._judge.cubics = [
+                    (one.position, one.velocity)
+                    for one in held.values()
+                    if one.velocity is not None
+                ]
+        self._twins = [
+            TwinJudge(sheet, number, machine.axes[number], steps=self._steps) for number in held
+        ]
+        self._signals = {name: _Signal(self._steps) for name in sheet.signals()}
+
+    def see(self, rows: Rows) -> None:
+        """Judge rows, as they stand in the file."""
+        self._steps.see(rows.numbers)
+        numbers = converted(self._turns.counted_on(rows.numbers), self._sheet)
+        self._judge.see(Rows(rows.lines, numbers))
+        places = Places(rows.lines, numbers[:, 0])
+        for twin in self._twins:
+            twin.see(numbers, places)
+        for name, column in self._sheet.signals().items():
+            self._signals[name].see(numbers[:, column], places)
+
+    def judgement(self, files: TableFiles) -> TableJudgement:
+        """Return what was found in all rows."""
+        self._judge.finish()
+        found = list(self._judge.findings())
+        found += [finding for twin in self._twins for finding in twin.findings()]
+        found += list(self._judge.times())
+        states = {name: signal.finding(name) for name, signal in self._signals.items()}
+        found += [finding for finding in states.values() if finding is not None]
+        found += self._judge.nearest()
+        none = [name for name, finding in states.items() if finding is None]
+        notes = [
+            *notes_on(files, self._machine, points=self._pace.points),
+            *self._turns.notes(),
+            *(note for travel in self._travels.values() for note in travel.notes()),
+            *(leap_note(leap, files) for leap in self._judge.leaps()),
+        ]
+        if len(files.parts) > 1:
+            found = [placed(finding, files) for finding in found]
+        return TableJudgement(tuple(found), (*self._sheet.unread, *none), tuple(notes))
 
 
 class _Signal:
@@ -222,14 +316,13 @@ class _Signal:
 class _TableJudge:
     """Judges rows in their order."""
 
-    def __init__(self, machine: Machine, held: list[Held], steps: Steps, pace: Pace) -> None:
+    def __init__(self, axes: list[AxisJudge], steps: Steps, pace: Pace) -> None:
         self._pace = pace
-        self._axes = [
-            AxisJudge(axis, one, steps) for axis, one in zip(machine.axes, held, strict=True)
-        ]
+        self._axes = axes
         self._even, self._rising = Extreme(steps), Extreme(steps)
         self._last: Window | None = None
         self.clearance: ClearanceJudge | None = None
+        self.cubics: Sequence[tuple[int, int]] = ()
 
     def see(self, rows: Rows) -> None:
         """Judge rows: lines and numbers in units of the axes, time first."""
@@ -251,7 +344,10 @@ class _TableJudge:
         self._see_times(Places(window.places.lines[start:], window.places.time[start:]))
         if self.clearance is not None:
             kept = Places(window.places.lines[BEFORE - 1 :], window.places.time[BEFORE - 1 :])
-            self.clearance.see(window.values[BEFORE - 1 :], window.spans[BEFORE - 1 :], kept)
+            values, spans = window.values[BEFORE - 1 :], window.spans[BEFORE - 1 :]
+            if self.cubics:
+                values, spans, kept = refined(values, spans, kept, held=self.cubics)
+            self.clearance.see(values, spans, kept)
         self._last = window
 
     def finish(self) -> None:
@@ -264,6 +360,7 @@ class _TableJudge:
         for axis in self._axes:
             axis.see_end(last.values[-2:], span, end, name="end")
             axis.see_end_column(axis.velocity(last.values[-1]), end, name="end")
+            axis.see_last(end)
         rows = [-3, -2, -1, -1, -1, -1]
         spans = np.concatenate([last.spans[-2:], np.full(BEFORE, span)])
         places = Places(last.places.lines[rows], last.places.time[rows])
@@ -272,14 +369,21 @@ class _TableJudge:
             axis.see_standstill(still)
 
     def findings(self) -> Iterator[Finding]:
-        """Yield the findings on axes and times."""
+        """Yield the findings on axes."""
         for axis in self._axes:
             yield from axis.findings()
+
+    def times(self) -> Iterator[Finding]:
+        """Yield the findings on times."""
         if self._pace.required and (found := self._even.finding("even period", "s")):
             yield found
         if found := self._rising.finding("rising time", "s"):
             least = -found.value if found.value != REPEATED else 0.0
             yield replace(found, value=least, limit=0.0, margin=least)
+
+    def leaps(self) -> list[Leap]:
+        """Return where the accelerations of axes with a jerk limit leap by most."""
+        return [axis.leap for axis in self._axes if axis.leap is not None]
 
     def nearest(self) -> list[Finding]:
         """Return the finding on the clearance, if there is anything to hit."""
@@ -309,7 +413,7 @@ class _TableJudge:
             return np.full(max(times.size - 1, 0), self._pace.period)
         spans = np.diff(times)
         # Nothing can be told of what happens in no time.
-        return np.where(spans > 0, spans, LONG)
+        return np.where(spans > LEAST, spans, LONG)
 
     def _see_times(self, places: Places) -> None:
         spans = np.diff(places.time)
@@ -317,7 +421,8 @@ class _TableJudge:
         uneven = np.abs(spans - self._pace.period)
         doubt = Doubt(noise=4 * np.spacing(np.abs(later.time)))
         self._even.see(uneven, self._pace.tolerance, later, doubt)
-        self._rising.see(np.where(spans == 0, REPEATED, -spans), 0.0, later)
+        backward = np.where(np.abs(spans) <= LEAST, REPEATED, -spans)
+        self._rising.see(backward, 0.0, later)
 
 
 def _gathered(blocks: Iterable[Rows]) -> Iterator[Rows]:
@@ -343,45 +448,88 @@ def _joined(blocks: list[Rows]) -> Rows:
     )
 
 
-def _pace(rows: Rows, layout: Layout, machine: Machine, *, rates: bool) -> Pace:
+def _pace(
+    rows: Rows, sheet: Sheet, machine: Machine, *, held: Sequence[Held], points: bool | None
+) -> Pace:
     """Return how the times of a table go on, by its first rows.
+
+    Uneven rows with positions and velocities, and no more, are points between which a drive follows
+    cubics; with accelerations too it is not known what it follows.
 
     Parameters
     ----------
     rows : Rows
-    layout : Layout
+    sheet : Sheet
     machine : Machine
-    rates : bool
-        Whether every axis has a column of velocity: then times may be uneven.
+    held : sequence of Held
+        What there is of each axis: if every one has a velocity, times may be uneven.
+    points : bool, optional
+        Whether the rows are known to be such points, or to be none.
 
     Raises
     ------
     InputError
-        The period is out of range.
+        The period is out of range, or velocities are missed.
     """
-    column = layout.columns[0]
-    stamps = rows.numbers[:FIRST_ROWS, :1]
-    time = stamps[:, 0] * column.unit
+    column = sheet.columns[0]
+    rates = bool(held) and all(one.velocity is not None for one in held)
+    if points and not rates:
+        message = "needed for points between which a drive follows cubics"
+        raise InputError([Fault("columns of velocity", message, sheet.file)])
+    time = rows.numbers[:FIRST_ROWS, 0] * column.unit
     spans = np.diff(time)
     if not spans.size:
         return Pace(machine.setpoints.period, TICK_TOLERANCE)
     period = float(np.median(spans))
+    bare = points is None and rates and all(one.acceleration is None for one in held)
+    cubic = Pace(period, TICK_TOLERANCE, even=False, required=False, points=True)
     # To the picosecond: differences of times are rounded.
+    if points or (bare and period > PERIOD.high):
+        return cubic
     if not PERIOD.holds(round(period, 12)):
         message = f"rows {period:g} s apart; allowed: {PERIOD.describe('s')}"
-        raise InputError([Fault(column.name, message, layout.file)])
-    off = np.abs(spans - period) - 4 * np.spacing(np.abs(time[1:]))
-    decimals = last_decimals(stamps, np.array(layout.decimals[:1], dtype=np.intp))
-    digit = float(10.0 ** -decimals[0]) * column.unit
-    mean = float((time[-1] - time[0]) / spans.size)
+        raise InputError([Fault(column.name, message, sheet.file)])
+    off = np.abs(spans - period) - 4 * np.spacing(np.abs(time[1:])) > TICK_TOLERANCE
+    found = _rounded_pace(rows.numbers[:FIRST_ROWS, :1], sheet, machine, off)
+    # Stamps as coarse as the time between them tell nothing: these are points at whole numbers.
+    if found is not None and not (bare and found.tolerance > found.period / 4):
+        return found
+    # Points may stand as far apart as allowed for most of the time.
+    ticks = abs(period - machine.setpoints.period) <= TICK_TOLERANCE
+    if np.mean(off) < (0.5 if ticks or not bare else 1 - MANY):
+        return Pace(period, TICK_TOLERANCE)
+    return (
+        cubic
+        if bare
+        else Pace(period, TICK_TOLERANCE, even=False, required=not rates or points is False)
+    )
+
+
+def _rounded_pace(
+    stamps: Array, sheet: Sheet, machine: Machine, off: npt.NDArray[np.bool_]
+) -> Pace | None:
+    """Return the pace of stamps that are rounded to fewer decimals than their period has.
+
+    Then they are as near to an even pace as their last decimal.
+
+    Parameters
+    ----------
+    stamps : (n, 1) array
+    sheet : Sheet
+    machine : Machine
+    off : (n - 1,) array of bool
+        Which of them are not a median period behind the one before.
+    """
+    unit = sheet.columns[0].unit
+    time = stamps[:, 0] * unit
+    decimals = last_decimals(stamps, np.array(sheet.decimals[:1], dtype=np.intp))
+    digit = float(10.0 ** -decimals[0]) * unit
+    mean = float((time[-1] - time[0]) / off.size)
     for likely in (machine.setpoints.period, mean):
-        # Stamps may be rounded: then they are as near to an even pace as their last decimal.
         ticks = time[0] + likely * np.arange(time.size)
         rounded = np.mean(np.abs(time - ticks) <= digit * (1 + TICK_TOLERANCE)) > MANY
         share = likely / digit
         whole = abs(share - round(share)) * digit <= TICK_TOLERANCE
-        if rounded and not whole and (likely != mean or np.mean(off <= TICK_TOLERANCE) < MANY):
+        if rounded and not whole and (likely != mean or np.mean(~off) < MANY):
             return Pace(likely, digit * (1 + TICK_TOLERANCE))
-    if np.mean(off <= TICK_TOLERANCE) > 0.5:
-        return Pace(period, TICK_TOLERANCE)
-    return Pace(period, TICK_TOLERANCE, even=False, required=not rates)
+    return None

@@ -2,33 +2,42 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+import re
+from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, TypeVar
+from typing import TYPE_CHECKING, NamedTuple
 
 import click
 
 from profileplan.cli import frame, tables
-from profileplan.cli.jobs import job_of, planned_of, sources_of, tell_unplayed
+from profileplan.cli.jobs import job_of, planned_of, tell_unplayed
+from profileplan.cli.settings import (
+    FORMS,
+    PLACES,
+    SETTINGS,
+    TEXT,
+    Interpolation,
+    Sorted,
+    dialect_options,
+)
 from profileplan.errors import Fault, InputError
 
 if TYPE_CHECKING:
-    from collections.abc import Iterable, Sequence
+    from collections.abc import Collection, Iterator, Mapping, Sequence
 
-    from profileplan.setpoints import Dialect, Noise
+    from profileplan.inputs import Drive, Job, Machine
+    from profileplan.planning import Plan
+    from profileplan.setpoints import Content, Dialect, Noise, Part, PvtTable
 
-Word = TypeVar("Word", bound=str)
+PEAK_TOLERANCE = 1e-6
+"""Share of a limit that cubics may pass it by unsaid: what usual decimals of velocities round."""
 
-DELIMITERS = {"comma": ",", "semicolon": ";", "tab": "\t", "bar": "|"}
-"""Words for delimiters that a shell would have to quote."""
-
-SIGNS = {"point": ".", "comma": ","}
-
-FORMS = (".csv", ".jsonl", ".npy", ".parquet")
-"""Endings of the files that are written."""
+PARTS_TOLD = 3
+"""Parts that begin in motion that are named; of more the number is told."""
 
 
-@frame.cli.command()
+@dialect_options
+@frame.cli.command(cls=Sorted)
 @frame.source
 @frame.machine
 @click.option(
@@ -44,18 +53,17 @@ FORMS = (".csv", ".jsonl", ".npy", ".parquet")
     help='Time between rows, s or with unit: 0.001, "250 us".',
 )
 @click.option(
+    "--interpolation",
+    type=Interpolation(),
+    metavar="BASE,EXPONENT",
+    help="The period as CiA 402 has it: 250,-6 for 250 × 10^-6 s.",
+)
+@click.option(
     "--columns",
-    help="What to write for each axis: any of pos, vel, acc, jerk; default: as the machine file "
-    "says, or pos,vel,acc.",
+    help="What to write for each axis: any of pos, vel, acc, jerk, force, torque; default: as the "
+    "machine file says, or pos,vel,acc.",
 )
 @click.option("--units", type=click.Choice(["axis", "increments"]), help="What positions count.")
-@click.option("--delimiter", type=click.Choice(list(DELIMITERS)), help="Between two cells.")
-@click.option("--decimal", type=click.Choice(list(SIGNS)), help="The decimal sign.")
-@click.option("--time", "unit", type=click.Choice(["s", "ms", "us", "tick"]), help="Of the time.")
-@click.option("--line-end", type=click.Choice(["crlf", "lf"]), help="What ends a line.")
-@click.option("--header/--no-header", default=None, help="Whether headings are written.")
-@click.option("--axis-files", is_flag=True, help="One file an axis.")
-@click.option("--rows-a-file", type=int, metavar="N", help="Split after so many rows at most.")
 @click.option(
     "--points",
     type=click.Choice(["ticks", "pvt"]),
@@ -66,9 +74,13 @@ FORMS = (".csv", ".jsonl", ".npy", ".parquet")
 @click.option(
     "--error",
     type=frame.Measure("length"),
-    default=0.001,
-    show_default=True,
-    help="Greatest distance of those cubics from the plan, mm or deg.",
+    help="Greatest distance of those cubics from the plan, rounding included, mm or deg; "
+    "default: 0.001.",
+)
+@click.option(
+    "--longest",
+    type=frame.Measure("time"),
+    help="Longest time between two of them, s or with unit.",
 )
 @frame.speed
 @frame.tolerance
@@ -80,21 +92,17 @@ def export(  # noqa: PLR0913 - one parameter an option
     machine: Path | None,
     output: Path,
     period: float | None,
+    interpolation: tuple[int, int] | None,
     columns: str | None,
     units: str | None,
-    delimiter: str | None,
-    decimal: str | None,
-    unit: str | None,
-    line_end: str | None,
-    header: bool | None,
-    axis_files: bool,
-    rows_a_file: int | None,
     points: str,
-    error: float,
+    error: float | None,
+    longest: float | None,
     speed: float | None,
     tolerance: float | None,
     as_json: bool,
     quiet: bool,
+    **written: object,
 ) -> None:
     """Write the setpoint table alone.
 
@@ -103,6 +111,8 @@ def export(  # noqa: PLR0913 - one parameter an option
       profileplan export samples/kiln-loader/cycle.toml -o setpoints.csv
       profileplan export cycle.toml -o setpoints.csv --period "250 us" --columns pos,vel
       profileplan export cycle.toml -o drive.csv --delimiter semicolon --decimal comma --time ms
+      profileplan export cycle.toml -o drive.csv --decimals pos=4,vel=2 --name x_pos_mm=POS_X
+      profileplan export cycle.toml -o drive.csv --units increments --rows-a-file 65536
       profileplan export cycle.toml -o points.csv --points pvt --error 0.005
 
     What is not said here is as the machine file's [setpoints] says. The last row is the first tick
@@ -110,59 +120,52 @@ def export(  # noqa: PLR0913 - one parameter an option
     """  # noqa: D301 - click's mark for lines to keep as they are
     talk = not (as_json or quiet)
     job = job_of(source, machine, speed, tolerance)
-    frame.keep(sources_of(job), output)
+    frame.keep(job.files, output)
     form = _form(output, points)
-    own = job.machine.setpoints
-    dialect = replace(
-        own.dialect,
-        delimiter=own.dialect.delimiter if delimiter is None else DELIMITERS[delimiter],
-        decimal=own.dialect.decimal if decimal is None else SIGNS[decimal],
-        time=_word(unit, ("s", "ms", "us", "tick"), own.dialect.time),
-        line_end=_word(line_end, ("crlf", "lf"), own.dialect.line_end),
-        header=own.dialect.header if header is None else header,
-        axis_files=axis_files or own.dialect.axis_files,
-        rows_a_file=rows_a_file or own.dialect.rows_a_file,
-    )
-    _judge_split(dialect, output, form)
-    planned = planned_of(job, talk=talk)
-    from profileplan import setpoints, summary  # noqa: PLC0415
-
-    content = setpoints.Content.of(
-        job.machine,
-        columns=None if columns is None else _words(columns),
-        period=period,
-        units=units or own.units,
-    )
-    with frame.Progress("writing setpoints", wanted=talk) as progress:
+    given = {name: value for name, value in written.items() if value not in (None, ())}
+    _judge_options(given, form)
+    asked = {"columns": columns, "units": units, "error": error, "longest": longest}
+    _judge_points(points, asked)
+    period = _period(period, interpolation)
+    asked["period"] = period
+    named = {*given, *(name for name, value in asked.items() if value is not None)}
+    with _named_by_options(named, job.machine):
+        dialect = _dialect(job.machine, given)
+        content = _content(job.machine, columns=columns, units=units, period=period)
+        planned = planned_of(job, talk=talk)
+        _judge_names(planned, content, dialect, given.get("names"))
+        order = _Order(planned, output, content, dialect, talk)
         if points == "pvt":
-            found = setpoints.pvt(planned, error=error, tick=content.period)
-            files, rows = [output], setpoints.write_pvt(planned, found, output, dialect=dialect)
-        elif form == ".csv":
-            parts = setpoints.write_table(
-                planned, output, content=content, dialect=dialect, progress=progress
-            )
-            files = [part.file for part in parts]
-            rows = sum(part.rows for part in parts if part.axis == parts[0].axis)
+            told = _write_points(order, 0.001 if error is None else error, longest)
         else:
-            write = {
-                ".jsonl": setpoints.write_json_lines,
-                ".npy": setpoints.write_npy,
-                ".parquet": setpoints.write_parquet,
-            }[form]
-            files = [output]
-            rows = write(planned, output, content=content, dialect=dialect, progress=progress)
-    if points == "ticks":
-        tell_unplayed(planned, content.period)
-        _tell_noise(setpoints.rounding_noise(planned, content=content, dialect=dialect))
-    if as_json:
-        names = [str(file) for file in files]
-        click.echo(summary.text({"file": names[0], "files": names, "rows": rows}), nl=False)
-    else:
-        more = f" and {len(files) - 1} more files" if len(files) > 1 else ""
-        click.echo(f"{files[0]}{more}: {rows} rows; {tables.verdict(planned)}", color=frame.color())
-        if not quiet:
-            click.echo(summary.CAUTION, err=True)
+            told = _write_ticks(order, form)
+    tell_unplayed(planned, content.period)
+    _tell_joins(told.parts)
+    _tell(told, planned, as_json=as_json, quiet=quiet)
     frame.finish(met=all(finding.ok for finding in planned.check()))
+
+
+class _Order(NamedTuple):
+    """What is to be written, and where."""
+
+    planned: Plan
+    output: Path
+    content: Content
+    dialect: Dialect
+    talk: bool
+
+    @property
+    def kept(self) -> list[Path]:
+        """Files that the job is read from."""
+        return list(self.planned.job.files)
+
+
+class _Told(NamedTuple):
+    """What was written, and what is said of it."""
+
+    parts: tuple[Part, ...]
+    more: str
+    values: dict[str, object]
 
 
 def _form(output: Path, points: str) -> str:
@@ -173,31 +176,301 @@ def _form(output: Path, points: str) -> str:
     InputError
         No such files are written.
     """
-    form, allowed = output.suffix.lower(), FORMS[:1] if points == "pvt" else FORMS
+    form, allowed = output.suffix.lower(), TEXT if points == "pvt" else FORMS
     if form not in allowed:
         message = f'"{form}" is not written; {", ".join(allowed)} can be'
         raise InputError([Fault("", message, output)])
     return form
 
 
-def _judge_split(dialect: Dialect, output: Path, form: str) -> None:
-    """Refuse what would be left out in silence: only .csv tables are split."""
-    if form != ".csv" and (dialect.axis_files or dialect.rows_a_file is not None):
-        message = f"axis_files and rows_a_file are for .csv tables; this is {form}"
-        raise InputError([Fault("", message, output)])
+def _judge_options(given: Collection[str], form: str) -> None:
+    """Refuse options that would have no effect."""
+    faults = [
+        Fault(setting.name, f"has no effect on {form}; only on {', '.join(setting.forms)}")
+        for setting in SETTINGS
+        if setting.field in given and form not in setting.forms
+    ]
+    if faults:
+        raise InputError(faults)
 
 
-def _word(given: str | None, words: Iterable[Word], otherwise: Word) -> Word:
-    """Return the word that is given, or another one."""
-    return next((word for word in words if word == given), otherwise)
+def _judge_points(points: str, asked: Mapping[str, object]) -> None:
+    """Refuse what only the other kind of points has."""
+    where, names = "ticks", ["columns"]
+    if points == "ticks":
+        where, names = "pvt", ["error", "longest"]
+    faults = [
+        Fault(f"--{name}", f"only with --points {where}")
+        for name in names
+        if asked[name] is not None
+    ]
+    if faults:
+        raise InputError(faults)
 
 
-def _words(columns: str) -> tuple[str, ...]:
-    return tuple(name.strip() for name in columns.split(",") if name.strip())
+def _period(period: float | None, interpolation: tuple[int, int] | None) -> float | None:
+    """Return the period that is asked for [s].
+
+    Raises
+    ------
+    InputError
+        It is given twice, or no table has it.
+    """
+    from profileplan.inputs import SetpointSettings, period_from_base  # noqa: PLC0415
+
+    if interpolation is None:
+        if period is not None:
+            with _named_by_options(("period",), None):
+                SetpointSettings(period)
+        return period
+    if period is not None:
+        raise InputError([Fault("--interpolation", "is a period too; give it or --period")])
+    try:
+        return period_from_base(*interpolation)
+    except InputError as error:
+        raise InputError(
+            Fault(f"--interpolation {fault.place}", fault.message) for fault in error.faults
+        ) from None
+
+
+def _dialect(machine: Machine, given: Mapping[str, object]) -> Dialect:
+    """Return the machine's dialect, changed by what is given."""
+    by_field = {setting.field: setting for setting in SETTINGS}
+    return machine.setpoints.dialect.changed(
+        {name: by_field[name].value(value) for name, value in given.items()}
+    )
+
+
+def _content(
+    machine: Machine, *, columns: str | None, units: str | None, period: float | None
+) -> Content:
+    """Return what is written: as the machine file says, but for what is asked for."""
+    from profileplan import setpoints  # noqa: PLC0415
+
+    words = None
+    if columns is not None:
+        words = tuple(name.strip() for name in columns.split(",") if name.strip())
+    return setpoints.Content.of(machine, columns=words, period=period, units=units)
+
+
+@contextmanager
+def _named_by_options(given: Collection[str], machine: Machine | None) -> Iterator[None]:
+    """Name the option, or else the place in the machine file, where a value is at fault."""
+    try:
+        yield
+    except InputError as error:
+        raise InputError(_placed(fault, given, machine) for fault in error.faults) from None
+
+
+def _placed(fault: Fault, given: Collection[str], machine: Machine | None) -> Fault:
+    field = re.split(r"[.\[]", fault.place, maxsplit=1)[0]
+    if field not in PLACES or (fault.file is not None and field not in given):
+        return fault
+    inner = fault.place.removeprefix(field).removeprefix(".")
+    # The two that must differ may have been given one here and one there.
+    if field == "decimal" and field not in given and "delimiter" in given:
+        field = "delimiter"
+    if field in given or machine is None or field in {"error", "longest"}:
+        return Fault(f"{PLACES[field]} {inner}".strip(), fault.message)
+    return fault.within("setpoints", machine.source)
+
+
+def _judge_names(planned: Plan, content: Content, dialect: Dialect, given: object) -> None:
+    """Refuse new names of what heads no column, and say which of the machine file head none."""
+    from profileplan import setpoints  # noqa: PLC0415
+
+    unused = setpoints.unused_names(planned, content, dialect)
+    asked = {heading for heading, _ in given} if isinstance(given, tuple) else set()
+    faults = [
+        Fault(f"--name {heading}", f"no such column; there are {', '.join(unused.headings)}")
+        for heading in unused.absent
+        if heading in asked
+    ]
+    if faults:
+        raise InputError(faults)
+    for heading in unused.unknown:
+        click.echo(f"note: setpoints.names: {heading} heads no column of this table", err=True)
+
+
+def _write_ticks(order: _Order, form: str) -> _Told:
+    """Write a table with a row a tick, and say what rounding does to it."""
+    from profileplan import setpoints  # noqa: PLC0415
+
+    write = {
+        ".csv": setpoints.write_table,
+        ".jsonl": setpoints.write_json_lines,
+        ".npy": setpoints.write_npy,
+        ".parquet": setpoints.write_parquet,
+    }[form]
+    planned, output, content, dialect, talk = order
+    with frame.Progress("writing setpoints", wanted=talk) as progress:
+        parts = write(
+            planned, output, content=content, dialect=dialect, kept=order.kept, progress=progress
+        )
+    with frame.Progress("looking at rounding", wanted=talk) as progress:
+        noises = setpoints.rounding_noise(
+            planned, content=content, dialect=dialect, progress=progress
+        )
+    if form not in TEXT:
+        # Only counts are rounded there.
+        counted = {name for drive in content.drives.items() for name in _drive_names(*drive)}
+        noises = tuple(noise for noise in noises if noise.axis in counted)
+    _tell_noise(noises)
+    if content.period is not None:
+        _tell_turns(order, content.period)
+    return _Told(parts, "", {"rounding": [_noise_values(noise) for noise in noises]})
+
+
+def _drive_names(axis: str, drive: Drive) -> tuple[str, ...]:
+    return (axis,) if drive.also is None else (axis, drive.also.name)
+
+
+def _write_points(order: _Order, error: float, longest: float | None) -> _Told:
+    """Write few uneven points, and say how far their cubics are from the plan."""
+    from profileplan import setpoints  # noqa: PLC0415
+
+    planned, output, content, dialect, talk = order
+    with frame.Progress("finding points", wanted=talk) as progress:
+        found = setpoints.pvt(
+            planned,
+            error=error,
+            content=content,
+            dialect=dialect,
+            longest=longest,
+            progress=progress,
+        )
+    with frame.Progress("writing setpoints", wanted=talk) as progress:
+        parts = setpoints.write_pvt(planned, found, output, kept=order.kept, progress=progress)
+    _tell_peaks(found, planned.job)
+    return _Told(parts, f"{_distance(found, planned.job)}; ", _distances(found))
+
+
+def _distances(found: PvtTable) -> dict[str, object]:
+    return {
+        "error": dict(zip(found.axes, found.error.tolist(), strict=True)),
+        "rounding_share": dict(zip(found.axes, found.rounding.tolist(), strict=True)),
+        "cubics": {
+            axis: {quantity: float(values[place]) for quantity, values in found.peaks.items()}
+            for place, axis in enumerate(found.axes)
+        },
+    }
+
+
+def _distance(found: PvtTable, job: Job) -> str:
+    """Return how far the cubics are from the plan, of the axis that is farthest."""
+    worst = int(found.error.argmax())
+    axis = job.machine.axes[worst]
+    return (
+        f"at most {found.error[worst]:.3g} {axis.unit} off the plan, {axis.name}, of which "
+        f"rounding up to {found.rounding[worst]:.2g}"
+    )
+
+
+def _tell_peaks(found: PvtTable, job: Job) -> None:
+    """Say on stderr where the cubics between points pass a limit."""
+    for place, axis in enumerate(job.machine.axes):
+        limits = axis.limits._asdict()
+        excess = {
+            quantity: float(values[place]) / limits[quantity] - 1
+            for quantity, values in found.peaks.items()
+        }
+        worst = max(excess, key=lambda quantity: excess[quantity])
+        if excess[worst] > PEAK_TOLERANCE:
+            click.echo(
+                f"note: {axis.name} {worst}: between points the drive's cubics reach "
+                f"{found.peaks[worst][place]:.6g}, {100 * excess[worst]:.2g} % over the limit of "
+                f"{limits[worst]:g}: a smaller --error brings them nearer to the plan; else leave "
+                "that reserve in the limits",
+                err=True,
+            )
+
+
+def _tell(told: _Told, planned: Plan, *, as_json: bool, quiet: bool) -> None:
+    """Print what was written."""
+    from profileplan import summary  # noqa: PLC0415
+
+    parts = told.parts
+    rows = sum(part.rows for part in parts if part.axis == parts[0].axis)
+    if as_json:
+        values = {
+            "file": str(parts[0].file),
+            "files": [str(part.file) for part in parts],
+            "rows": rows,
+            "parts": [_part_values(part) for part in parts],
+            **told.values,
+        }
+        click.echo(summary.text(values), nl=False)
+        return
+    more = f" and {len(parts) - 1} more files" if len(parts) > 1 else ""
+    verdict = tables.verdict(planned)
+    click.echo(f"{parts[0].file}{more}: {rows} rows; {told.more}{verdict}", color=frame.color())
+    if not quiet:
+        click.echo(summary.CAUTION, err=True)
+
+
+def _part_values(part: Part) -> dict[str, object]:
+    return {
+        "file": str(part.file),
+        "axis": part.axis or None,
+        "first_row": part.first,
+        "rows": part.rows,
+        "starts_at_rest": part.starts_at_rest,
+    }
+
+
+def _tell_joins(parts: Sequence[Part]) -> None:
+    """Say on stderr which parts begin while the axes move."""
+    moving = [part for part in parts if part.axis == parts[0].axis and not part.starts_at_rest]
+    for part in moving[:PARTS_TOLD]:
+        click.echo(f"note: {part.file.name} {part.joins}", err=True)
+    if len(moving) > PARTS_TOLD:
+        click.echo(f"note: … and {len(moving) - PARTS_TOLD} more parts in motion", err=True)
+
+
+def _tell_turns(order: _Order, period: float) -> None:
+    """Say on stderr which wrapped axes may turn so far that no one can tell which way."""
+    from profileplan import setpoints  # noqa: PLC0415
+
+    for turn in setpoints.doubtful_turns(order.planned, order.content.drives, period):
+        click.echo(
+            f"note: {turn.name} turns by up to {turn.angle:.4g} deg between two rows, half of its "
+            f"wrap of {turn.wrap:g} or more: its sense is in doubt; take a period below "
+            f"{turn.longest:.2g} s",
+            err=True,
+        )
 
 
 def _tell_noise(noises: Sequence[Noise]) -> None:
-    """Say on stderr where rounding is large against a limit, and what makes it small."""
+    """Say on stderr where rounding is large against a limit, and what makes it small.
+
+    Of each axis the loudest quantity is told.
+    """
+    loudest: dict[str, Noise] = {}
     for noise in noises:
-        if noise.advice is not None:
-            click.echo(f"note: {noise.axis} {noise.quantity}: {noise.advice}", err=True)
+        other = loudest.get(noise.axis)
+        if noise.advice is not None and (other is None or _share(other) < _share(noise)):
+            loudest[noise.axis] = noise
+    for noise in loudest.values():
+        click.echo(
+            f"note: {noise.axis} {noise.quantity}: from these positions a drive derives up to "
+            f"{noise.derived:.3g}, from exact ones {noise.exact:.3g}, the limit is "
+            f"{noise.limit:.3g}; {noise.advice}",
+            err=True,
+        )
+
+
+def _share(noise: Noise) -> float:
+    return noise.rounding / noise.limit
+
+
+def _noise_values(noise: Noise) -> dict[str, object]:
+    return {
+        "axis": noise.axis,
+        "quantity": noise.quantity,
+        "limit": noise.limit,
+        "exact": noise.exact,
+        "derived": noise.derived,
+        "rounding": noise.rounding,
+        "time_s": noise.time,
+        "ok": noise.ok,
+    }

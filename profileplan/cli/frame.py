@@ -161,9 +161,9 @@ def finish(*, met: bool) -> None:
 
 def keep(sources: Iterable[Path | None], *outputs: Path) -> None:
     """Refuse to write over what is read."""
-    taken = {file.resolve() for file in sources if file is not None}
+    taken = {os.path.realpath(file) for file in sources if file is not None}
     for output in outputs:
-        if output.resolve() in taken:
+        if os.path.realpath(output) in taken:
             message = "the job is read from this file; choose another to write to"
             raise InputError([Fault("", message, output)])
 

@@ -2,20 +2,25 @@
 
 from __future__ import annotations
 
+from datetime import datetime
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 import click
 
+from profileplan import wording
 from profileplan.cli import frame, tables
 from profileplan.errors import Fault, InputError
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Mapping, Sequence
 
     from profileplan.checks import Finding
     from profileplan.inputs import Job, Machine
     from profileplan.planning import Plan
+
+TABLES = (".jsonl", ".npy", ".parquet")
+"""Endings of setpoint tables that are no texts of cells."""
 
 
 @frame.cli.command()
@@ -25,8 +30,9 @@ if TYPE_CHECKING:
     "-o",
     "--output",
     type=click.Path(path_type=Path, file_okay=False),
-    help="Folder for setpoints.csv and summary.json; made if missing.",
+    help="Folder for setpoints.csv, summary.json and the page report.html; made if missing.",
 )
+@click.option("--dated", is_flag=True, help="Put today's date on the page.")
 @frame.speed
 @frame.tolerance
 @frame.as_json
@@ -36,6 +42,7 @@ def plan(  # noqa: PLR0913 - one parameter an option
     source: Path,
     machine: Path | None,
     output: Path | None,
+    dated: bool,
     speed: float | None,
     tolerance: float | None,
     as_json: bool,
@@ -51,49 +58,53 @@ def plan(  # noqa: PLR0913 - one parameter an option
       profileplan plan samples/kiln-loader/cycle.toml -o out --json
       profileplan plan points.csv -m machine.toml --speed "0.3 m/s"
 
+    report.html is one file that opens in any browser, without a network, and prints on A4.
+
     The table has a row for each step: when it begins, how long it takes, what limits it (the
     strongest first), and how much of each limit it uses in percent, with the axis that uses most.
     """  # noqa: D301 - click's mark for lines to keep as they are
     planned = planned_of(job_of(source, machine, speed, tolerance), talk=not (as_json or quiet))
-    from profileplan import setpoints, summary  # noqa: PLC0415
+    from profileplan import summary  # noqa: PLC0415
 
     values = summary.summarise(planned)
+    written = ""
     if output is not None:
-        _make_folder(output)
-        frame.keep(sources_of(planned.job), output / "setpoints.csv", output / "summary.json")
-        own = planned.job.machine.setpoints
-        with frame.Progress("writing setpoints", wanted=not (as_json or quiet)) as progress:
-            setpoints.write_table(
-                planned,
-                output / "setpoints.csv",
-                content=setpoints.Content.of(planned.job.machine),
-                dialect=own.dialect,
-                progress=progress,
-            )
-        summary.write_json(values, output / "summary.json")
-        tell_unplayed(planned, None)
+        written = _write(planned, values, output, dated=dated, talk=not (as_json or quiet))
     if as_json:
         click.echo(summary.text(values), nl=False)
     elif quiet:
         click.echo(tables.verdict(planned), color=frame.color())
     else:
         _show_plan(planned)
-        if output is not None:
-            click.echo(f"wrote setpoints.csv and summary.json to {output}", err=True)
+        if written:
+            click.echo(f"wrote {written} to {output}", err=True)
     frame.finish(met=all(finding.ok for finding in planned.check()))
 
 
 @frame.cli.command()
 @frame.source
 @frame.machine
+@click.option(
+    "--columns",
+    help="What a table without a header holds of each axis, behind the time: any of pos, vel, acc, "
+    "jerk, force, torque; default: as the machine file says.",
+)
+@click.option(
+    "--points",
+    type=click.Choice(["ticks", "pvt"]),
+    help="What rows of a table are: ticks; or points with cubics between them. Default: as it "
+    "looks.",
+)
 @frame.speed
 @frame.tolerance
 @frame.as_json
 @frame.quiet
-def check(
+def check(  # noqa: PLR0913 - one parameter an option
     *,
     source: Path,
     machine: Path | None,
+    columns: str | None,
+    points: str | None,
     speed: float | None,
     tolerance: float | None,
     as_json: bool,
@@ -102,22 +113,26 @@ def check(
     """Judge every requirement, with value, limit and margin.
 
     SOURCE is a cycle file (.toml), or with -m a waypoint file (.csv), a drawing (.dxf), or a
-    setpoint table (.csv with a time column), ours or another's. Of a table all columns that are
-    known are judged: travel, steps, differences and rates against the limits, agreement of
-    positions and velocities, time, rest at both ends, clearance; with the first row of each fault.
+    setpoint table (.csv with a time column, .jsonl, .npy or .parquet), ours or another's. Of a
+    table all columns that are known are judged: travel, steps, differences and rates against the
+    limits, agreement of positions and velocities, time, rest at both ends, clearance; with the
+    first row of each fault. A part of a table that is split is judged with the parts beside it.
 
     \b
     Examples:
       profileplan check samples/kiln-loader/cycle.toml
       profileplan check out/setpoints.csv -m samples/kiln-loader/machine.toml
+      profileplan check bare.csv -m machine.toml --columns pos,vel
     """  # noqa: D301 - click's mark for lines to keep as they are
-    from profileplan import setpoints  # noqa: PLC0415
-
-    if source.suffix.lower() == ".csv" and setpoints.is_table(source):
+    if _is_table(source, machine, columns):
         if speed is not None or tolerance is not None:
             message = "--speed and --tolerance are for waypoints; this is a setpoint table"
             raise InputError([Fault("", message, source)])
-        findings = _table_findings(source, machine, talk=not (as_json or quiet))
+        asked = (columns, points)
+        findings = _table_findings(source, machine, asked, talk=not (as_json or quiet))
+    elif columns is not None or points is not None:
+        message = "--columns and --points are for setpoint tables; this is none"
+        raise InputError([Fault("", message, source)])
     else:
         job = job_of(source, machine, speed, tolerance)
         findings = planned_of(job, talk=not (as_json or quiet)).check()
@@ -162,32 +177,65 @@ def _limits(source: Path, machine: Path | None) -> Machine:
     return read_machine(machine)
 
 
-def _table_findings(source: Path, machine: Path | None, *, talk: bool) -> Sequence[Finding]:
-    """Judge a table, with progress, and say on stderr which columns are not judged."""
+def _is_table(source: Path, machine: Path | None, columns: str | None) -> bool:
+    """Tell whether a file is a setpoint table: by its ending, by a column of time, or numbers."""
+    form = source.suffix.lower()
+    if form != ".csv":
+        return form in TABLES
+    from profileplan import setpoints  # noqa: PLC0415
+    from profileplan.setpoints.layout import has_numbers_only  # noqa: PLC0415
+
+    if columns is not None or setpoints.is_table(source) or has_numbers_only(source):
+        return True
+    return machine is not None and setpoints.is_table(
+        source, _limits(source, machine).setpoints.dialect
+    )
+
+
+def _table_findings(
+    source: Path, machine: Path | None, asked: tuple[str | None, str | None], *, talk: bool
+) -> Sequence[Finding]:
+    """Judge a table, with progress, and say on stderr what is not judged, or how.
+
+    ``asked``: the options --columns and --points.
+    """
     from profileplan import checks  # noqa: PLC0415
 
     limits = _limits(source, machine)
-    # Where the machine file says nothing of its own, the table says how it is written.
-    own = limits.setpoints.dialect
-    dialect = None if own == type(own)() else own
+    columns, points = asked
+    manner = checks.Manner(
+        columns=None if columns is None else _known_columns(columns),
+        points=None if points is None else points == "pvt",
+    )
     with frame.Progress("checking", wanted=talk) as progress:
-        judged = checks.judge_file(source, limits, dialect=dialect, progress=progress)
+        judged = checks.judge_file(source, limits, manner=manner, progress=progress)
     if judged.unjudged:
         click.echo(f"note: not judged: {', '.join(judged.unjudged)}", err=True)
+    for note in judged.notes:
+        click.echo(f"note: {note}", err=True)
     return judged.findings
 
 
-def sources_of(job: Job) -> list[Path | None]:
-    """Return the files that a job is read from."""
-    from profileplan.inputs import PathStep, Trace  # noqa: PLC0415
+def _known_columns(columns: str) -> tuple[str, ...]:
+    """Return the words of --columns.
 
-    files = [job.cycle.source, job.machine.source]
-    for step in job.cycle.steps:
-        if isinstance(step, PathStep):
-            files.append(step.file)
-        elif isinstance(step, Trace):
-            files.append(step.drawing)
-    return files
+    Raises
+    ------
+    InputError
+        One is not known.
+    """
+    from profileplan.inputs.dialect import KINDS  # noqa: PLC0415
+    from profileplan.inputs.rules import near, shown  # noqa: PLC0415
+
+    words = tuple(word.strip() for word in columns.split(",") if word.strip())
+    faults = [
+        Fault("--columns", f"{shown(word)}; allowed: {', '.join(KINDS)}{near(word, KINDS)}")
+        for word in words
+        if word not in KINDS
+    ]
+    if faults:
+        raise InputError(faults)
+    return words
 
 
 def tell_unplayed(planned: Plan, period: float | None) -> None:
@@ -201,6 +249,34 @@ def tell_unplayed(planned: Plan, period: float | None) -> None:
             "the next row: the table does not show it",
             err=True,
         )
+
+
+def _write(
+    planned: Plan, values: Mapping[str, object], folder: Path, *, dated: bool, talk: bool
+) -> str:
+    """Write what a plan is handed over as, and return the names of the files."""
+    from profileplan import setpoints, summary  # noqa: PLC0415
+    from profileplan.report import page  # noqa: PLC0415
+
+    table, record, report = (
+        folder / name for name in ("setpoints.csv", "summary.json", "report.html")
+    )
+    _make_folder(folder)
+    frame.keep(planned.job.files, table, record, report)
+    own = planned.job.machine.setpoints
+    content = setpoints.Content.of(planned.job.machine)
+    with frame.Progress("writing setpoints", wanted=talk) as progress:
+        setpoints.write_table(
+            planned, table, content=content, dialect=own.dialect, progress=progress
+        )
+    summary.write_json(values, record)
+    tell_unplayed(planned, None)
+    if absent := page.missing():
+        click.echo(f"note: no report.html: {absent}", err=True)
+        return f"{table.name} and {record.name}"
+    today = datetime.now().astimezone().date().isoformat()
+    page.write_page(planned, report, date=today if dated else None)
+    return f"{table.name}, {record.name} and {report.name}"
 
 
 def _make_folder(folder: Path) -> None:
@@ -221,7 +297,7 @@ def _show_plan(planned: Plan) -> None:
     click.echo(tables.requirements(planned.check()), color=frame.color())
     for finding in planned.check():
         if not finding.ok and finding.check != "cycle time":
-            click.echo(f"  {tables.where(finding)}", color=frame.color())
+            click.echo(f"  {wording.amiss(finding)}", color=frame.color())
     if planned.meets_target is False:
         click.echo(tables.levers(planned), color=frame.color())
     from profileplan.summary import CAUTION  # noqa: PLC0415

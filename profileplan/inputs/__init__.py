@@ -30,6 +30,7 @@ from profileplan.inputs.machine import (
     Tool,
 )
 from profileplan.inputs.machine_file import read_machine
+from profileplan.inputs.mechanics import Mechanics, Motor
 from profileplan.inputs.patterns import Expansion, Part, Pattern, expand
 from profileplan.inputs.periods import base_from_period, period_from_base
 from profileplan.inputs.rules import Outline, Positions
@@ -50,6 +51,8 @@ __all__ = [
     "LawName",
     "Line",
     "Machine",
+    "Mechanics",
+    "Motor",
     "Move",
     "Outline",
     "Part",

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import KW_ONLY, dataclass, field
+from dataclasses import KW_ONLY, dataclass, field, fields
 from types import MappingProxyType
 from typing import Literal, TypeAlias
 
@@ -22,12 +22,15 @@ TIME_HEADINGS: Mapping[str, str] = {"s": "t_s", "ms": "t_ms", "us": "t_us", "tic
 TIME_DIGITS: Mapping[str, int] = {"s": 9, "ms": 6, "us": 3}
 """Unit of time → decimals of a nanosecond in it."""
 
-KINDS = ("pos", "vel", "acc", "jerk")
+KINDS = ("pos", "vel", "acc", "jerk", "force", "torque")
 """Kinds of columns whose decimals can be chosen."""
 
 MOST_DECIMALS = 15
 MOST_DIGITS = 17
 """Significant digits that tell every double from its neighbours."""
+
+ADDED = ("decimals", "significant", "names")
+"""What is added to by a change, and not replaced."""
 
 LEAST_ROWS = 2
 MOST_ROWS_A_FILE = 1_000_000_000
@@ -46,7 +49,8 @@ class Dialect:
     line_end : {"crlf", "lf"}
         What ends a line.
     decimals : mapping
-        Kind of column (pos, vel, acc, jerk) → decimals, where others than usual are wanted.
+        Kind of column (pos, vel, acc, jerk, force, torque) → decimals, where others than usual are
+        wanted.
     significant : mapping
         Kind of column → significant digits in place of decimals; such numbers are written slowly,
         and with an exponent where they are very small or large.
@@ -88,7 +92,8 @@ class Dialect:
         judge.choice("delimiter", self.delimiter, DELIMITERS)
         judge.choice("decimal", self.decimal, DECIMAL_SIGNS)
         if self.decimal == self.delimiter:
-            judge.note("decimal", f"{shown(self.decimal)}, as the delimiter; they must differ")
+            message = f"decimal sign and delimiter are both {shown(self.decimal)}; they must differ"
+            judge.note("decimal", message)
         judge.choice("line_end", self.line_end, tuple(LINE_ENDS))
         judge.choice("time", self.time, tuple(TIME_HEADINGS))
         for place in ("header", "axis_files", "tell_joins"):
@@ -108,6 +113,39 @@ class Dialect:
             _judge_line(judge, f"comments[{index}]", line)
         _judge_line(judge, "comment_mark", self.comment_mark)
         judge.finish()
+
+    def changed(self, changes: Mapping[str, object]) -> Dialect:
+        """Return this dialect with other values of some of its fields.
+
+        Digits and names are added to those that it has; a kind of column that is given decimals
+        loses its significant digits, and the other way round.
+
+        Raises
+        ------
+        InputError
+            With the faults of the values, at the names of their fields.
+
+        Examples
+        --------
+        >>> dict(Dialect(decimals={"pos": 4}).changed({"decimals": {"vel": 2}}).decimals)
+        {'pos': 4, 'vel': 2}
+        """
+        values = {own.name: getattr(self, own.name) for own in fields(self)}
+        for name, value in changes.items():
+            if name in ADDED and isinstance(value, Mapping):
+                values[name] = {**values[name], **value}
+            else:
+                values[name] = value
+        for name, other in (("decimals", "significant"), ("significant", "decimals")):
+            given, kept = changes.get(name), changes.get(other)
+            if isinstance(given, Mapping) and isinstance(values[other], Mapping):
+                still = kept if isinstance(kept, Mapping) else {}
+                values[other] = {
+                    kind: count
+                    for kind, count in values[other].items()
+                    if kind not in given or kind in still
+                }
+        return Dialect(**values)
 
     @property
     def end(self) -> bytes:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 from typing import TYPE_CHECKING
 
 from profileplan.errors import Fault, InputError
@@ -35,6 +36,21 @@ def read_text(path: Path) -> str:
         byte = error.object[error.start]
         message = f"byte 0x{byte:02x} is not UTF-8; the file must be saved as UTF-8"
         raise InputError([Fault(f"line {line}", message, path)]) from None
+
+
+def fingerprint(path: Path) -> str | None:
+    """Return the SHA-256 of a file's bytes in hexadecimal (FIPS 180-4); None if it cannot be read.
+
+    Parameters
+    ----------
+    path : Path
+        The file.
+    """
+    try:
+        with path.open("rb") as stream:
+            return hashlib.file_digest(stream, "sha256").hexdigest()
+    except OSError:
+        return None
 
 
 def _why_unreadable(path: Path, error: OSError | ValueError) -> str:

@@ -68,6 +68,18 @@ class Job:
         if faults:
             raise InputError(tidy(faults))
 
+    @property
+    def files(self) -> tuple[Path, ...]:
+        """The files that it is read from, each once: cycle, machine, waypoints, drawings."""
+        named: list[Path | None] = [self.cycle.source, self.machine.source]
+        named += [keepout.dxf for keepout in self.machine.keepouts]
+        for step in self.cycle.steps:
+            if isinstance(step, PathStep):
+                named.append(step.file)
+            elif isinstance(step, Trace):
+                named.append(step.drawing)
+        return tuple(dict.fromkeys(file for file in named if file is not None))
+
     def positions(
         self, ends: Mapping[int, Positions] = MappingProxyType({})
     ) -> tuple[tuple[float, ...], ...]:

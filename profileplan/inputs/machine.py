@@ -7,12 +7,11 @@ when it is made and raises `InputError` with places relative to itself.
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
 from dataclasses import KW_ONLY, dataclass, field
-from types import MappingProxyType
 from typing import TYPE_CHECKING, Literal, NamedTuple, TypeAlias
 
 from profileplan.inputs.dialect import KINDS, Dialect
+from profileplan.inputs.mechanics import Mechanics, Motor
 from profileplan.inputs.rules import (
     EXTENT,
     LIMIT,
@@ -48,8 +47,14 @@ SETPOINT_UNITS = {
 }
 """What a setpoint table can hold of an axis → its unit in the heading, {} for the axis's own."""
 
+LOADS = ("force", "torque")
+"""What only axes with mechanics have."""
+
 DEFAULT_COLUMNS = ("pos", "vel", "acc")
 """What is written of each axis unless something else is asked for."""
+
+FULL_TURN = 360.0
+"""Travel of a rotary axis in a turn of its gear's output, unless something else is said [deg]."""
 
 MOST_AXES = 12
 WHOLE_NANOSECOND_TOLERANCE = 1e-6  # ns: a period of 1 s in double precision is rounded by 2e-7 ns
@@ -84,8 +89,10 @@ class Axis:
         Limit [mm/s³ or deg/s³]; None: not limited.
     resolution : float, optional
         What a drive increment stands for [mm or deg].
-    mechanics : mapping, optional
-        The table of that name as it was written.
+    mechanics : Mechanics, optional
+        What it moves, and through which transmission.
+    motor : Motor, optional
+        What its motor can do; needs mechanics with a lead.
     drive : Drive, optional
         What counts its position.
     """
@@ -99,7 +106,8 @@ class Axis:
     deceleration: float | None = None
     jerk: float | None = None
     resolution: float | None = None
-    mechanics: Mapping[str, object] | None = None
+    mechanics: Mechanics | None = None
+    motor: Motor | None = None
     drive: Drive | None = None
 
     def __post_init__(self) -> None:
@@ -113,8 +121,7 @@ class Axis:
         judge.optional("deceleration", self.deceleration, LIMIT, f"{unit}/s²")
         judge.optional("jerk", self.jerk, LIMIT, f"{unit}/s³")
         judge.optional("resolution", self.resolution, RESOLUTION, unit)
-        if isinstance(self.mechanics, Mapping):
-            object.__setattr__(self, "mechanics", MappingProxyType(dict(self.mechanics)))
+        self._judge_mechanics(judge)
         judge.finish()
 
     @property
@@ -133,6 +140,29 @@ class Axis:
         return f"{self.name}_{quantity}_{SETPOINT_UNITS[quantity].format(self.unit)}"
 
     @property
+    def motor_turn(self) -> float | None:
+        """Travel in a turn of the motor [mm or deg]; None where mechanics do not say it."""
+        if self.mechanics is None:
+            return None
+        drive = self.drive
+        lead, gear = self.mechanics.lead, self.mechanics.gear
+        if lead is None:
+            lead = FULL_TURN if self.kind == "rotary" else None
+            lead = lead if drive is None else drive.lead
+        if gear is None:
+            gear = (1, 1) if drive is None else drive.gear
+        return None if lead is None else lead * gear[1] / gear[0]
+
+    def has_loads(self, quantity: str) -> bool:
+        """Tell whether its mechanics say enough for its "force" or its "torque".
+
+        A rotary axis has a torque only.
+        """
+        if quantity == "torque":
+            return self.motor_turn is not None
+        return self.mechanics is not None and self.kind == "linear"
+
+    @property
     def limits(self) -> AxisLimits:
         """All limits, those left out filled in."""
         return AxisLimits(
@@ -141,6 +171,27 @@ class Axis:
             self.acceleration if self.deceleration is None else self.deceleration,
             math.inf if self.jerk is None else self.jerk,
         )
+
+    def _judge_mechanics(self, judge: Judge) -> None:
+        """Judge what only the kind of the axis tells of its mechanics."""
+        mechanics = self.mechanics
+        _judge_record(judge, "mechanics", mechanics, Mechanics)
+        _judge_record(judge, "motor", self.motor, Motor)
+        if isinstance(mechanics, Mechanics):
+            unfit: dict[str, float | None] = {"load_inertia": mechanics.load_inertia}
+            if self.kind == "rotary":
+                unfit = {
+                    "mass": mechanics.mass,
+                    "friction": mechanics.friction or None,
+                    "counterbalance": mechanics.counterbalance or None,
+                }
+            for key, value in unfit.items():
+                if value is not None:
+                    judge.note(f"mechanics.{key}", f"{shown(value)}; not on a {self.kind} axis")
+        if self.motor is not None and mechanics is None:
+            judge.note("motor", "its torque is not known without mechanics: give them")
+        if self.motor is not None and isinstance(mechanics, Mechanics) and not self.motor_turn:
+            judge.note("mechanics.lead", "missing; needed for the torque of the motor")
 
 
 @dataclass(frozen=True)
@@ -231,7 +282,7 @@ class SetpointSettings:
     period : float
         Time between rows [s]: a whole number of ns from 50 µs to 1 s.
     columns : tuple of str
-        What is written of each axis: pos, vel, acc, jerk.
+        What is written of each axis: pos, vel, acc, jerk, force, torque.
     units : {"axis", "increments"}
         Whether axes with a drive are written in its increments.
     dialect : Dialect
@@ -311,6 +362,7 @@ class Machine:
             "each keep-out has its own",
         )
         self._judge_height(judge)
+        self._judge_mechanics(judge)
         judge.finish()
 
     @property
@@ -353,6 +405,20 @@ class Machine:
                 return axis
         raise KeyError(name)
 
+    def lacks(self, column: str) -> str | None:
+        """Return what is missing where no axis has such a column, a key of ``SETPOINT_UNITS``."""
+        if column not in LOADS or any(axis.has_loads(column) for axis in self.axes):
+            return None
+        known = [axis.name for axis in self.axes if axis.mechanics is not None]
+        if known and column == "torque":
+            return f"the mechanics of {', '.join(known)} have no lead: give lead, and gear"
+        linear = [axis.name for axis in self.axes if axis.kind == "linear"]
+        if not linear and column == "force":
+            return "no axis is linear; a rotary one has a torque only"
+        names = linear if column == "force" else self.axis_names
+        more = " with its lead" if column == "torque" else ""
+        return f"no axis has mechanics: give [axes.{names[0]}.mechanics]{more}"
+
     def _judge_height(self, judge: Judge) -> None:
         linear = [axis.name for axis in self.axes if axis.kind == "linear"]
         allowed = tuple(f"{sign}{name}" for name in linear for sign in "+-")
@@ -367,6 +433,23 @@ class Machine:
                     f"keepouts[{index}].top",
                     f"{shown(keepout.top)} mm; only on a machine with an up axis: give `up`",
                 )
+
+    def _judge_mechanics(self, judge: Judge) -> None:
+        for index, column in enumerate(self.setpoints.columns, start=1):
+            lack = self.lacks(column)
+            if lack is not None:
+                judge.note(f"setpoints.columns[{index}]", f"{shown(column)}; {lack}")
+        for axis in self.axes:
+            if axis.mechanics is None:
+                continue
+            place = join(join("axes", axis.name), "mechanics")
+            friction, counterbalance = axis.mechanics.friction, axis.mechanics.counterbalance
+            if friction and axis.name == self.up_axis:
+                message = "the guides of the up axis bear no weight: give drag"
+                judge.note(f"{place}.friction", f"{shown(friction)}; {message}")
+            if counterbalance and axis.name != self.up_axis:
+                message = "only on the up axis, as `up` names it"
+                judge.note(f"{place}.counterbalance", f"{shown(counterbalance)} N; {message}")
 
 
 def judge_footprint(
@@ -389,6 +472,11 @@ def judge_footprint(
     if radius is not None and outline is not None:
         judge.note(place, "has radius and outline; at most one of them is allowed")
     return judge.outline(join(place, "outline"), outline)
+
+
+def _judge_record(judge: Judge, place: str, value: object, kind: type) -> None:
+    if value is not None and not isinstance(value, kind):
+        judge.note(place, f"{shown(value)}; needed: {kind.__name__}")
 
 
 def _judged_travel(judge: Judge, travel: tuple[float, float], unit: str) -> tuple[float, float]:

@@ -4,13 +4,13 @@ from __future__ import annotations
 
 from dataclasses import replace
 from pathlib import Path
-from typing import TYPE_CHECKING
 
 from profileplan.errors import InputError
 from profileplan.inputs.dialect import TIME_UNITS, Dialect
 from profileplan.inputs.drive import Drive, Twin
 from profileplan.inputs.machine import (
     AXIS_KINDS,
+    FULL_TURN,
     TABLE_UNITS,
     Axis,
     AxisKind,
@@ -20,13 +20,11 @@ from profileplan.inputs.machine import (
     SetpointSettings,
     Tool,
 )
+from profileplan.inputs.mechanics import Mechanics, Motor
 from profileplan.inputs.periods import period_from_base
 from profileplan.inputs.quantities import Quantity
 from profileplan.inputs.rules import tidy
 from profileplan.inputs.table import Table, open_table
-
-if TYPE_CHECKING:
-    from collections.abc import Mapping
 
 LINEAR = (Quantity.LENGTH, Quantity.VELOCITY, Quantity.ACCELERATION, Quantity.JERK)
 ROTARY = (
@@ -36,9 +34,6 @@ ROTARY = (
 
 TWIN_KEYS = {"name": "also", "direction": "also_direction", "offset": "also_offset"}
 """What a twin's values are called in its drive's table."""
-
-FULL_TURN = 360.0
-"""Travel of a rotary axis in a turn of its gear's output [deg]."""
 
 
 def read_machine(path: Path | str) -> Machine:
@@ -102,7 +97,8 @@ def _axis(table: Table, name: str, substitute: str) -> Axis:
             deceleration=table.optional_number("deceleration", acceleration),
             jerk=table.optional_number("jerk", jerk),
             resolution=table.optional_number("resolution", position),
-            mechanics=_mechanics(table),
+            mechanics=_mechanics(table.table("mechanics"), kind),
+            motor=_motor(table.table("motor")),
             drive=_drive(table.table("drive"), position),
         ),
         lambda: _harmless_axis(name, kind),
@@ -115,9 +111,45 @@ def _harmless_axis(name: str, kind: AxisKind) -> Axis:
     return Axis(name, travel=(0, 1), velocity=1, acceleration=1, kind=kind)
 
 
-def _mechanics(table: Table) -> Mapping[str, object] | None:
-    mechanics = table.table("mechanics")
-    return None if mechanics is None else mechanics.raw
+def _mechanics(table: Table | None, kind: AxisKind) -> Mechanics | None:
+    """Return what an axis of a kind moves."""
+    if table is None:
+        return None
+    rotary = kind == "rotary"
+    gear = table.wholes("gear")
+    drag, lead = Quantity.TORQUE if rotary else Quantity.FORCE, ROTARY if rotary else LINEAR
+    return table.build(
+        lambda: Mechanics(
+            mass=None if rotary else table.number("mass", Quantity.MASS),
+            load_inertia=table.number("load_inertia", Quantity.INERTIA) if rotary else None,
+            friction=Mechanics.friction if rotary else table.factor("friction", Mechanics.friction),
+            drag=table.number("drag", drag, default=Mechanics.drag),
+            damping=table.factor("damping", Mechanics.damping),
+            counterbalance=Mechanics.counterbalance
+            if rotary
+            else table.number("counterbalance", Quantity.FORCE, default=Mechanics.counterbalance),
+            carries_payload=table.boolean("carries_payload", default=Mechanics.carries_payload),
+            lead=table.optional_number("lead", lead[0]),
+            gear=None if gear is None else _two(table, gear),
+            inertia=table.number("inertia", Quantity.INERTIA, default=Mechanics.inertia),
+            efficiency=table.factor("efficiency", Mechanics.efficiency),
+            drag_torque=table.number("drag_torque", Quantity.TORQUE, default=Mechanics.drag_torque),
+        ),
+        # with a lead, so that a motor beside it is not reproached with its lack
+        lambda: Mechanics(load_inertia=1, lead=1) if rotary else Mechanics(mass=1, lead=1),
+    )
+
+
+def _motor(table: Table | None) -> Motor | None:
+    if table is None:
+        return None
+    return table.build(
+        lambda: Motor(
+            rated_torque=table.optional_number("rated_torque", Quantity.TORQUE),
+            peak_torque=table.optional_number("peak_torque", Quantity.TORQUE),
+            speed=table.optional_number("speed", Quantity.TURNING),
+        )
+    )
 
 
 def _tool(table: Table) -> Tool:

@@ -1,4 +1,4 @@
-"""How many mm, deg, s or kg a written quantity is.
+"""How many mm, deg, s, kg, N or N·m a written quantity is.
 
 A number is in axis units already; a text is a number with a unit, such as ``"1.5 m/s"``. A unit
 is a name, or a name over units of time: ``mm/min``, ``m/s^2``, ``m/s²``, ``m/s2``. Factors are
@@ -14,7 +14,7 @@ from typing import Literal, NamedTuple, TypeAlias
 
 from profileplan.inputs.rules import is_number, shown
 
-Base: TypeAlias = Literal["mm", "deg", "s", "kg"]
+Base: TypeAlias = Literal["mm", "deg", "s", "kg", "N", "N·m", "kg·m²", "1/min"]
 
 
 class Quantity(Enum):
@@ -30,6 +30,10 @@ class Quantity(Enum):
     ANGULAR_JERK = ("an angular jerk", "deg", 3, "deg/s³, rad/s³")
     TIME = ("a time", "s", 0, "s, ms, µs, min, h")
     MASS = ("a mass", "kg", 0, "kg, g, t, lb")
+    FORCE = ("a force", "N", 0, "N, kN")
+    TORQUE = ("a torque", "N·m", 0, "N·m, mN·m, kN·m, N·cm")
+    INERTIA = ("a moment of inertia", "kg·m²", 0, "kg·m², kg·cm², g·cm²")
+    TURNING = ("a speed of turning", "1/min", 0, "1/min, rpm, rev/s, rad/s, deg/s")
 
     def __init__(self, title: str, base: Base, rate: int, choices: str) -> None:
         self.title = title
@@ -61,12 +65,14 @@ UNITS: dict[str, tuple[Unit, ...]] = {
     "ft": (Unit("mm", 0, 3048, 10),),
     # standard gravity is 9.80665 m/s² exactly; the same letter is the gram
     "g": (Unit("mm", 2, 980665, 100), Unit("kg", 0, 1, 1000)),
-    "deg": (Unit("deg", 0, 1),),
+    # turns are counted a minute: what is turned in a second is turned sixty times in one
+    "deg": (Unit("deg", 0, 1), Unit("1/min", -1, 1, 6)),
     "°": (Unit("deg", 0, 1),),
-    "rad": (Unit("deg", 0, 180, math.pi),),
+    "rad": (Unit("deg", 0, 180, math.pi), Unit("1/min", -1, 30, math.pi)),
     "mrad": (Unit("deg", 0, 180, 1000 * math.pi),),
-    "rev": (Unit("deg", 0, 360),),
-    "rpm": (Unit("deg", 1, 6),),
+    "rev": (Unit("deg", 0, 360), Unit("1/min", -1, 60)),
+    "rpm": (Unit("deg", 1, 6), Unit("1/min", 0, 1)),
+    "1": (Unit("1/min", -1, 60),),
     "s": (Unit("s", 0, 1),),
     "ms": (Unit("s", 0, 1, 1000),),
     "µs": (Unit("s", 0, 1, 1_000_000),),
@@ -75,11 +81,41 @@ UNITS: dict[str, tuple[Unit, ...]] = {
     "kg": (Unit("kg", 0, 1),),
     "t": (Unit("kg", 0, 1000),),
     "lb": (Unit("kg", 0, 45359237, 100_000_000),),
+    "N": (Unit("N", 0, 1),),
+    "kN": (Unit("N", 0, 1000),),
+    "N·m": (Unit("N·m", 0, 1),),
+    "mN·m": (Unit("N·m", 0, 1, 1000),),
+    "kN·m": (Unit("N·m", 0, 1000),),
+    "N·cm": (Unit("N·m", 0, 1, 100),),
+    "kg·m²": (Unit("kg·m²", 0, 1),),
+    "kg·cm²": (Unit("kg·m²", 0, 1, 10_000),),
+    "g·cm²": (Unit("kg·m²", 0, 1, 10_000_000),),
 }
 
-# the micro sign and the Greek letter look alike, and "u" is what keyboards have
-MICRO = str.maketrans({"\N{GREEK SMALL LETTER MU}": "\N{MICRO SIGN}"})
-SPELLINGS = {"um": "µm", "us": "µs"}
+# the micro sign and the Greek letter look alike, as do two dots for "times"; "u" and "*" are what
+# keyboards have
+LOOKALIKES = str.maketrans(
+    {
+        "\N{GREEK SMALL LETTER MU}": "\N{MICRO SIGN}",
+        "\N{DOT OPERATOR}": "\N{MIDDLE DOT}",
+        "*": "\N{MIDDLE DOT}",
+    }
+)
+SPELLINGS = {
+    "um": "µm",
+    "us": "µs",
+    "Nm": "N·m",
+    "mNm": "mN·m",
+    "kNm": "kN·m",
+    "Ncm": "N·cm",
+    **{
+        spelling: unit
+        for unit in ("kg·m²", "kg·cm²", "g·cm²")
+        for square in ("²", "2", "^2")
+        for dot in ("·", "")
+        if (spelling := unit.replace("²", square).replace("·", dot)) != unit
+    },
+}
 
 NUMBER_WITH_UNIT = re.compile(r"([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)\s*(.*)", re.ASCII)
 TIME_POWER = re.compile(r"(\D*?)(?:\^?([123])|([²³]))?")
@@ -144,7 +180,7 @@ def _what_is_needed(value: object, quantity: Quantity) -> str:
 
 def _unit(text: str, quantity: Quantity) -> Unit | None:
     """Return what a unit is worth, or None where it is no unit of the quantity."""
-    head, *below = (part.strip() for part in text.translate(MICRO).split("/"))
+    head, *below = (part.strip() for part in text.translate(LOOKALIKES).split("/"))
     rate, factor, divisor = 0, 1.0, 1.0
     for part in below:
         match = TIME_POWER.fullmatch(part)

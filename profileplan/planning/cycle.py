@@ -297,8 +297,15 @@ def _notes(job: Job) -> tuple[str, ...]:
     """Return what this version leaves out of what the job's files say."""
     machine, steps = job.machine, job.cycle.steps
     notes = []
-    if any(axis.mechanics for axis in machine.axes):
-        notes.append("loads on motors and mechanics are not checked (axes with mechanics)")
-    if any(isinstance(step, Payload) for step in steps):
-        notes.append("payloads are recorded; their mass does not enter the plan")
+    known = [axis for axis in machine.axes if axis.mechanics is not None]
+    unjudged = [axis.name for axis in known if axis.motor is None]
+    if unjudged:
+        names = ", ".join(unjudged)
+        notes.append(f"loads of {names} are not judged: [axes.NAME.motor] says what a motor bears")
+    if any(isinstance(step, Payload) and step.mass for step in steps):
+        notes.append(
+            "the mass of payloads enters forces and torques, not the limits of the plan"
+            if known
+            else "the mass of payloads is not used: no axis has mechanics"
+        )
     return tuple(notes)

@@ -9,14 +9,15 @@ from profileplan.inputs import Dialect, Drive, Twin, base_from_period, period_fr
 
 if TYPE_CHECKING:
     from profileplan.setpoints.binary import write_npy, write_parquet
-    from profileplan.setpoints.content import Content
+    from profileplan.setpoints.content import Content, unused_names
+    from profileplan.setpoints.drives import doubtful_turns
     from profileplan.setpoints.files import replacing
+    from profileplan.setpoints.parts import Part
     from profileplan.setpoints.points import PvtTable, pvt
     from profileplan.setpoints.reading import is_table, read_csv
     from profileplan.setpoints.rounding import Noise, rounding_noise
     from profileplan.setpoints.sampling import COLUMNS, SetpointTable, sample, unplayed
     from profileplan.setpoints.writing import (
-        Part,
         write_csv,
         write_json_lines,
         write_pvt,
@@ -34,6 +35,7 @@ __all__ = [
     "SetpointTable",
     "Twin",
     "base_from_period",
+    "doubtful_turns",
     "is_table",
     "period_from_base",
     "pvt",
@@ -42,6 +44,7 @@ __all__ = [
     "rounding_noise",
     "sample",
     "unplayed",
+    "unused_names",
     "write_csv",
     "write_json_lines",
     "write_npy",
@@ -52,13 +55,15 @@ __all__ = [
 
 _HOMES = {
     "binary": ("write_npy", "write_parquet"),
-    "content": ("Content",),
+    "content": ("Content", "unused_names"),
+    "drives": ("doubtful_turns",),
     "files": ("replacing",),
+    "parts": ("Part",),
     "points": ("PvtTable", "pvt"),
     "reading": ("is_table", "read_csv"),
     "rounding": ("Noise", "rounding_noise"),
     "sampling": ("COLUMNS", "SetpointTable", "sample", "unplayed"),
-    "writing": ("Part", "write_csv", "write_json_lines", "write_pvt", "write_table"),
+    "writing": ("write_csv", "write_json_lines", "write_pvt", "write_table"),
 }
 
 

@@ -5,7 +5,7 @@ Values are not rounded there, but where a drive counts increments.
 
 from __future__ import annotations
 
-from contextlib import closing
+import io
 from importlib import import_module
 from typing import TYPE_CHECKING
 
@@ -13,21 +13,20 @@ import numpy as np
 
 from profileplan.errors import Fault, InputError
 from profileplan.inputs.dialect import Dialect
-from profileplan.setpoints.content import Content, Field, Source
-from profileplan.setpoints.files import not_written, replacing_all
-from profileplan.setpoints.pace import blocks, in_order
+from profileplan.setpoints.content import Content, Field
+from profileplan.setpoints.parts import Group, Part, Plain, write_rows
+from profileplan.setpoints.writing import Ticks
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
+    from collections.abc import Collection, Sequence
     from pathlib import Path
     from types import ModuleType
-    from typing import TypeAlias
 
-    import numpy.typing as npt
+    from typing_extensions import Buffer
 
     from profileplan.motion.schedule import Schedule
-
-    Progress: TypeAlias = Callable[[int, int], None]
+    from profileplan.setpoints.content import Numbers
+    from profileplan.setpoints.parts import Progress
 
 MAGIC = b"\x93NUMPY"
 ALIGNMENT = 64
@@ -40,20 +39,19 @@ def write_npy(
     *,
     content: Content | None = None,
     dialect: Dialect | None = None,
+    kept: Collection[Path] = (),
     progress: Progress | None = None,
-) -> int:
-    """Write a setpoint table as a structured array of NumPy, and return its number of rows.
+) -> tuple[Part, ...]:
+    """Write a setpoint table as a structured array of NumPy, and return its files.
 
     Parameters
     ----------
-    schedule : Schedule
+    schedule, content, kept, progress
+        As for ``write_table``.
     file : Path
         ``np.load(file)["x_pos_mm"]`` is a column of it.
-    content : Content, optional
     dialect : Dialect, optional
-        Of it count names and time.
-    progress : callable, optional
-        Called with the rows written so far and the rows in all.
+        Of it count names, time and how the table is split.
 
     Raises
     ------
@@ -62,20 +60,10 @@ def write_npy(
 
     Source: NumPy enhancement proposal 1 for the form of the file.
     """
-    source = Source(schedule, content or Content(), dialect or Dialect())
-    kind = np.dtype([(own.heading, _type(own)) for own in source.fields])
-    jobs = blocks(range(source.count))
-    with (
-        replacing_all() as files,
-        closing(in_order(lambda rows: _records(source, rows, kind).tobytes(), jobs)) as parts,
-    ):
-        stream = files.open(file)
-        files.write(stream, _npy_head(kind, source.count))
-        for rows in blocks(range(source.count)):
-            files.write(stream, next(parts))
-            if progress:
-                progress(rows.stop, source.count)
-    return source.count
+    dialect = dialect or Dialect()
+    rows = Ticks(schedule, content or Content(), dialect)
+    form = _Npy(rows.fields)
+    return write_rows(rows, file, form=form, dialect=dialect, kept=kept, progress=progress)
 
 
 def write_parquet(
@@ -84,46 +72,141 @@ def write_parquet(
     *,
     content: Content | None = None,
     dialect: Dialect | None = None,
+    kept: Collection[Path] = (),
     progress: Progress | None = None,
-) -> int:
-    """Write a setpoint table as Parquet, and return its number of rows.
+) -> tuple[Part, ...]:
+    """Write a setpoint table as Parquet, and return its files.
 
     Parameters
     ----------
-    schedule : Schedule
-    file : Path
-    content : Content, optional
+    schedule, file, content, kept, progress
+        As for ``write_table``.
     dialect : Dialect, optional
-        Of it count names and time.
-    progress : callable, optional
-        Called with the rows written so far and the rows in all.
+        Of it count names, time and how the table is split. How a part joins the one before stands
+        in its metadata, as "joins", where the dialect tells joins.
 
     Raises
     ------
     InputError
         As for ``write_table``, and if pyarrow is not installed.
     """
-    arrow, parquet = _arrow(file)
-    source = Source(schedule, content or Content(), dialect or Dialect())
-    kind = np.dtype([(own.heading, _type(own)) for own in source.fields])
-    schema = arrow.schema([(name, arrow.from_numpy_dtype(kind[name])) for name in kind.names or ()])
-    jobs = blocks(range(source.count))
-    with (
-        replacing_all() as files,
-        closing(in_order(lambda rows: _records(source, rows, kind), jobs)) as parts,
-    ):
-        stream = files.open(file)
-        try:
-            with parquet.ParquetWriter(stream, schema) as writer:
-                for rows in blocks(range(source.count)):
-                    records = next(parts)
-                    columns = [np.ascontiguousarray(records[name]) for name in kind.names or ()]
-                    writer.write_table(arrow.table(columns, schema=schema))
-                    if progress:
-                        progress(rows.stop, source.count)
-        except OSError as error:
-            raise not_written(file, error) from error
-    return source.count
+    libraries = _arrow(file)
+    dialect = dialect or Dialect()
+    rows = Ticks(schedule, content or Content(), dialect)
+    form = _Parquet(rows.fields, libraries, tell_joins=dialect.tell_joins)
+    return write_rows(rows, file, form=form, dialect=dialect, kept=kept, progress=progress)
+
+
+class _Records:
+    """Rows as records of numbers."""
+
+    def __init__(self, fields: Sequence[Field]) -> None:
+        self._fields = fields
+
+    def kind(self, group: Group) -> np.dtype[np.void]:
+        """Return the type of a group's records."""
+        own = [self._fields[column] for column in group.columns]
+        return np.dtype([(one.heading, _type(one)) for one in own])
+
+    def rows(self, numbers: Sequence[Numbers], group: Group) -> bytes:
+        """Return some rows of a group's columns."""
+        records = np.empty(numbers[0].size, dtype=self.kind(group))
+        for column, values in zip(group.columns, numbers, strict=True):
+            own = self._fields[column]
+            scaled = own.whole and own.decimals
+            records[own.heading] = values / 10.0**own.decimals if scaled else values
+        return records.tobytes()
+
+
+class _Npy(_Records):
+    """Records behind a line that says what they are."""
+
+    def encoder(self, part: Part, group: Group) -> Plain:
+        """Return what makes a part's file."""
+        return Plain(_npy_head(self.kind(group), part.rows))
+
+
+class _Parquet(_Records):
+    """Columns in the form of Parquet."""
+
+    def __init__(
+        self,
+        fields: Sequence[Field],
+        libraries: tuple[ModuleType, ModuleType],
+        *,
+        tell_joins: bool,
+    ) -> None:
+        super().__init__(fields)
+        self._libraries = libraries
+        self._tell_joins = tell_joins
+
+    def encoder(self, part: Part, group: Group) -> _ParquetFile:
+        """Return what makes a part's file."""
+        joins = part.joins if self._tell_joins else ""
+        return _ParquetFile(self._libraries, self.kind(group), joins)
+
+
+class _ParquetFile:
+    """What the library writes goes to memory first, and from there to the file."""
+
+    def __init__(
+        self, libraries: tuple[ModuleType, ModuleType], kind: np.dtype[np.void], joins: str
+    ) -> None:
+        self._arrow, parquet = libraries
+        self._kind = kind
+        arrow = self._arrow
+        names = kind.names or ()
+        self._schema = arrow.schema(
+            [(name, arrow.from_numpy_dtype(kind[name])) for name in names],
+            metadata={"joins": joins} if joins else None,
+        )
+        self._made = _Passage()
+        self._writer = parquet.ParquetWriter(self._made, self._schema)
+
+    def head(self) -> bytes:
+        """Return what stands before the rows."""
+        return self._made.taken()
+
+    def body(self, rows: bytes) -> bytes:
+        """Return what some rows add to the file."""
+        records = np.frombuffer(rows, dtype=self._kind)
+        columns = [np.ascontiguousarray(records[name]) for name in self._kind.names or ()]
+        self._writer.write_table(self._arrow.table(columns, schema=self._schema))
+        return self._made.taken()
+
+    def tail(self) -> bytes:
+        """Return what stands behind the rows."""
+        self._writer.close()
+        return self._made.taken()
+
+
+class _Passage(io.RawIOBase):
+    """A stream that keeps what is written until it is taken."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self._parts: list[bytes] = []
+        self._size = 0
+
+    def writable(self) -> bool:
+        """Tell that it takes bytes."""
+        return True
+
+    def write(self, content: Buffer, /) -> int:
+        """Keep some bytes."""
+        self._parts.append(bytes(content))
+        self._size += len(self._parts[-1])
+        return len(self._parts[-1])
+
+    def tell(self) -> int:
+        """Return how many bytes were written."""
+        return self._size
+
+    def taken(self) -> bytes:
+        """Return what was written since the last time."""
+        content = b"".join(self._parts)
+        self._parts.clear()
+        return content
 
 
 def _type(own: Field) -> str:
@@ -131,17 +214,6 @@ def _type(own: Field) -> str:
     if own.kind == "signal":
         return "|u1"
     return "<i8" if own.whole and not own.decimals and own.kind != "time" else "<f8"
-
-
-def _records(source: Source, rows: range, kind: np.dtype[np.void]) -> npt.NDArray[np.void]:
-    """Return some rows as records."""
-    records = np.empty(len(rows), dtype=kind)
-    for own, values in zip(source.fields, source.numbers(rows), strict=True):
-        if not np.isfinite(values).all():
-            raise InputError([Fault(own.heading, "is not finite; the motion cannot be written")])
-        exact = values / 10.0**own.decimals if own.whole and own.decimals else values
-        records[own.heading] = exact
-    return records
 
 
 def _npy_head(kind: np.dtype[np.void], count: int) -> bytes:

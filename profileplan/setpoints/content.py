@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import KW_ONLY, dataclass, field
+from dataclasses import KW_ONLY, dataclass, field, replace
 from types import MappingProxyType
 from typing import TYPE_CHECKING, NamedTuple, TypeAlias
 
@@ -12,7 +12,7 @@ from profileplan.errors import Fault, InputError
 from profileplan.inputs.dialect import TIME_DIGITS, TIME_HEADINGS, Dialect
 from profileplan.inputs.machine import DEFAULT_COLUMNS
 from profileplan.setpoints.drives import Counter, counters, judge_drives
-from profileplan.setpoints.sampling import COLUMNS, Sampler
+from profileplan.setpoints.sampling import COLUMNS, LOAD_DECIMALS, Sampler, judge_loads, period_of
 
 if TYPE_CHECKING:
     from collections.abc import Iterator, Mapping, Sequence
@@ -34,6 +34,9 @@ INCREMENT_UNITS = {"pos": "inc", "vel": "inc_s", "acc": "inc_s2", "jerk": "inc_s
 INCREMENT_DECIMALS = 3
 """Decimals of velocities, accelerations and jerks in increments."""
 
+WRITTEN = (*COLUMNS, *LOAD_DECIMALS)
+"""What a table can hold of an axis."""
+
 
 @dataclass(frozen=True)
 class Content:
@@ -42,7 +45,9 @@ class Content:
     Parameters
     ----------
     columns : sequence of str
-        Keys of ``COLUMNS``, in the order wanted.
+        Of pos, vel, acc, jerk, force and torque, in the order wanted. Forces [N] and torques [N·m]
+        are there once for each axis whose mechanics tell them, in the axis's own direction,
+        whatever its drives count.
     period : float, optional [s]
         Default: that of the machine file.
     drives : mapping
@@ -58,11 +63,11 @@ class Content:
         columns = tuple(self.columns)
         object.__setattr__(self, "columns", columns)
         object.__setattr__(self, "drives", MappingProxyType(dict(self.drives)))
-        known = ", ".join(COLUMNS)
+        known = ", ".join(WRITTEN)
         faults = [
             Fault("columns", f'"{column}" is not written; {known} are')
             for column in columns
-            if column not in COLUMNS
+            if column not in WRITTEN
         ]
         repeated = sorted({column for column in columns if columns.count(column) > 1})
         faults += [Fault("columns", f'"{column}" is named twice') for column in repeated]
@@ -85,7 +90,8 @@ class Content:
         Raises
         ------
         InputError
-            Increments are asked for, and no axis has a drive.
+            Increments are asked for, and no axis has a drive; forces or torques, and no axis has
+            mechanics that tell them.
         """
         settings = machine.setpoints
         units = units or settings.units
@@ -93,8 +99,10 @@ class Content:
         if units == "increments" and not drives:
             message = "increments; no axis has a drive: give [axes.NAME.drive]"
             raise InputError([Fault("setpoints.units", message, machine.source)])
+        columns = settings.columns if columns is None else columns
+        judge_loads(machine, columns)
         return cls(
-            settings.columns if columns is None else columns,
+            columns,
             period=settings.period if period is None else period,
             drives=drives if units == "increments" else {},
         )
@@ -103,7 +111,7 @@ class Content:
 class Field(NamedTuple):
     """A column of a table.
 
-    heading as it is written; kind "time", a key of ``COLUMNS``, or "signal"; name of the axis or
+    heading as it is written; kind "time", one of ``WRITTEN``, or "signal"; name of the axis or
     the signal; ``whole`` where its numbers are whole ones of 10 to the power of -``decimals``.
     """
 
@@ -122,7 +130,7 @@ class Source:
     ------
     InputError
         A period out of range, a table too long, drives that cannot play it, headings that are
-        used twice.
+        used twice, forces or torques of which nothing is known.
     """
 
     def __init__(self, schedule: Schedule, content: Content, dialect: Dialect) -> None:
@@ -153,6 +161,8 @@ class Source:
             return ticks * self._per_time
         if column.kind == "signal":
             return table.signals[column.name].astype(np.int64)
+        if column.kind in LOAD_DECIMALS:
+            return (table.force if column.kind == "force" else table.torque)[column.name]
         values = {
             "pos": table.position,
             "vel": table.velocity,
@@ -177,7 +187,7 @@ def table_fields(
     for axis in schedule.job.machine.axes:
         fields += _axis_fields(axis, content, dialect)
     fields += [Field(name, "signal", name, 0, whole=True) for name in schedule.signals]
-    return _renamed(fields, dialect)
+    return _renamed(fields, dialect, schedule.job.machine)
 
 
 def _time_scale(nanoseconds: int, dialect: Dialect) -> tuple[int, int]:
@@ -194,26 +204,73 @@ def _time_scale(nanoseconds: int, dialect: Dialect) -> tuple[int, int]:
 def _axis_fields(axis: Axis, content: Content, dialect: Dialect) -> Iterator[Field]:
     """Yield the columns of an axis."""
     drive = content.drives.get(axis.name)
-    if drive is None:
+    own = None if drive is None else counters(axis, drive)
+    for place, counter in enumerate(own or (None,)):
         for kind in content.columns:
-            decimals = dialect.decimals.get(kind, COLUMNS[kind].decimals)
-            yield Field(axis.column(kind), kind, axis.name, decimals, whole=False)
-        return
-    for counter in counters(axis, drive):
-        for kind in content.columns:
-            heading = f"{counter.name}_{kind}_{INCREMENT_UNITS[kind]}"
-            whole = kind == "pos"
-            decimals = 0 if whole else dialect.decimals.get(kind, INCREMENT_DECIMALS)
-            yield Field(heading, kind, axis.name, decimals, whole, counter)
+            if kind in LOAD_DECIMALS:
+                # Two drives share one slide, and so one force.
+                if place == 0 and axis.has_loads(kind):
+                    decimals = dialect.decimals.get(kind, LOAD_DECIMALS[kind])
+                    yield Field(axis.column(kind), kind, axis.name, decimals, whole=False)
+            elif counter is None:
+                decimals = dialect.decimals.get(kind, COLUMNS[kind].decimals)
+                yield Field(axis.column(kind), kind, axis.name, decimals, whole=False)
+            else:
+                heading = f"{counter.name}_{kind}_{INCREMENT_UNITS[kind]}"
+                whole = kind == "pos"
+                decimals = 0 if whole else dialect.decimals.get(kind, INCREMENT_DECIMALS)
+                yield Field(heading, kind, axis.name, decimals, whole, counter)
 
 
-def _renamed(fields: Sequence[Field], dialect: Dialect) -> tuple[Field, ...]:
-    """Return columns under the names that the dialect gives them."""
+class Unused(NamedTuple):
+    """New names that a dialect has for columns that a table does not have.
+
+    headings of the table; ``absent``, usual headings that it does not have; ``unknown``, those of
+    them that no table of the machine has, signals left out.
+    """
+
+    headings: tuple[str, ...]
+    absent: tuple[str, ...]
+    unknown: tuple[str, ...]
+
+
+def unused_names(schedule: Schedule, content: Content, dialect: Dialect) -> Unused:
+    """Return what a dialect gives other names, and a table does not have."""
+    nanoseconds = round(period_of(schedule, content.period) * 1e9)
+    fields = table_fields(schedule, content, replace(dialect, names={}), nanoseconds)
+    headings = tuple(column.heading for column in fields)
+    absent = tuple(heading for heading in dialect.names if heading not in headings)
+    usual = _usual_headings(schedule.job.machine) if absent else set()
+    return Unused(headings, absent, tuple(heading for heading in absent if heading not in usual))
+
+
+def _usual_headings(machine: Machine) -> set[str]:
+    """Return the headings of all columns that tables of a machine can have, signals left out."""
+    drives = {axis.name: axis.drive for axis in machine.axes if axis.drive is not None}
+    contents = (Content(WRITTEN), Content(WRITTEN, drives=drives))
+    return {
+        *TIME_HEADINGS.values(),
+        *(
+            column.heading
+            for content in contents
+            for axis in machine.axes
+            for column in _axis_fields(axis, content, Dialect())
+        ),
+    }
+
+
+def _renamed(fields: Sequence[Field], dialect: Dialect, machine: Machine) -> tuple[Field, ...]:
+    """Return columns under the names that the dialect gives them.
+
+    A dialect may name columns of the machine's other tables, and signals of other cycles.
+    """
     headings = [column.heading for column in fields]
+    known = _usual_headings(machine) if dialect.names else set()
+    starts = ("t_", *(f"{name}_" for name in machine.axis_names))
     faults = [
         Fault(f"names.{heading}", f"no such column; there are {', '.join(headings)}")
         for heading in dialect.names
-        if heading not in headings
+        if heading not in headings and heading not in known and heading.startswith(starts)
     ]
     new = [dialect.names.get(heading, heading) for heading in headings]
     faults += [

@@ -34,10 +34,15 @@ class Counter(NamedTuple):
 
         So no error accumulates: every one is half an increment off at most.
         """
-        exact = self.direction * (position + self.offset) * float(self.drive.ratio)
-        whole = np.rint(exact).astype(np.int64)
+        whole = self.counted(position)
         turn = self.drive.wrap_increments
         return whole if turn is None else np.mod(whole, turn)
+
+    def counted(self, position: Array) -> Whole:
+        """Return the increments nearest to positions, counted on over all turns: (n,)."""
+        exact = self.direction * (position + self.offset) * float(self.drive.ratio)
+        whole: Whole = np.rint(exact).astype(np.int64)
+        return whole
 
     def rate(self, values: Array) -> Array:
         """Return velocities, accelerations or jerks in increments per s, s² or s³: (n,)."""
@@ -88,6 +93,35 @@ def judge_drives(schedule: Schedule, drives: Mapping[str, Drive]) -> None:
         faults += _overflows(axis, drive, ends)
     if faults:
         raise InputError(faults)
+
+
+class Turn(NamedTuple):
+    """How far a wrapped axis may turn between two rows.
+
+    name of its drive; angle and wrap [deg]; the longest period [s] in which it turns by less than
+    half of the wrap, so that no one can take it for the other way round.
+    """
+
+    name: str
+    angle: float
+    wrap: float
+    longest: float
+
+
+def doubtful_turns(
+    schedule: Schedule, drives: Mapping[str, Drive], period: float
+) -> tuple[Turn, ...]:
+    """Return the wrapped axes that may turn by half of their wrap in a period [s], or more."""
+    low, high = schedule.trajectory.extremes(1)
+    machine = schedule.job.machine
+    turns = []
+    for axis, drive in _driven(machine, drives):
+        column = machine.axis_names.index(axis.name)
+        fastest = max(-float(low.value[column]), float(high.value[column]))
+        if drive.wrap is not None and fastest * period >= drive.wrap / 2:
+            longest = drive.wrap / 2 / fastest
+            turns.append(Turn(axis.name, fastest * period, drive.wrap, longest))
+    return tuple(turns)
 
 
 def _driven(machine: Machine, drives: Mapping[str, Drive]) -> Iterator[tuple[Axis, Drive]]:

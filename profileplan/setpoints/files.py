@@ -8,16 +8,20 @@ from __future__ import annotations
 
 import io
 import os
-import tempfile
+import secrets
 from contextlib import contextmanager, suppress
-from pathlib import Path
 from typing import TYPE_CHECKING, BinaryIO
 
 from profileplan.errors import Fault, InputError
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
+    from pathlib import Path
     from typing import TextIO
+
+
+NEW = os.O_WRONLY | os.O_CREAT | os.O_EXCL | getattr(os, "O_BINARY", 0)
+"""A file that is not there yet, bytes as they are."""
 
 
 class Replacements:
@@ -46,7 +50,8 @@ class Replacements:
         InputError
             The file cannot be opened.
         """
-        file = file.resolve()
+        # Unlike pathlib's, it takes links in a circle as they are.
+        file = type(file)(os.path.realpath(file))
         mode = 0o666 & ~_umask()
         try:
             if file.exists():
@@ -54,13 +59,18 @@ class Replacements:
                 if not file.is_file():
                     # A device or a pipe holds nothing that could be half-written.
                     return self._known(file.open("wb"), file)
-            handle, name = tempfile.mkstemp(
-                dir=file.parent, prefix=f".{file.name}.", suffix=".part"
-            )
         except OSError as error:
             raise not_written(file, error) from error
-        self._waiting.append((Path(name), file, mode))
-        return self._known(os.fdopen(handle, "wb"), file)
+        temporary = file.with_name(f".{file.name}.{secrets.token_hex(6)}.part")
+        # It is known before it is there: an interrupt right behind its making removes it too.
+        self._waiting.append((temporary, file, mode))
+        try:
+            # Until it takes its place it is nobody else's, whatever the old file allowed.
+            stream = os.fdopen(os.open(temporary, NEW, mode=0o600), "wb")
+        except OSError as error:
+            self._waiting.pop()
+            raise not_written(file, error) from error
+        return self._known(stream, file)
 
     def close(self, stream: BinaryIO) -> None:
         """Bring a file to the disk; it is not in its place yet.

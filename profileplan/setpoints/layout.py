@@ -1,7 +1,8 @@
 """What stands where in a table of setpoints: which column holds what, between which signs?
 
-The header is the first line with a column for the time; what stands above it is comment. Columns
-of axes are found by their names, in any of several units; others are signals if they hold 0 and 1.
+The header is the first line with a column for the time; what stands above it is comment. A table
+without a header has the columns that the machine file, or someone, says it has, and after them
+signals.
 """
 
 from __future__ import annotations
@@ -9,27 +10,33 @@ from __future__ import annotations
 import csv
 import math
 import re
-from collections import Counter
 from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, NamedTuple
 
 from profileplan.errors import Fault, InputError
-from profileplan.inputs.dialect import DELIMITERS, TIME_HEADINGS
-from profileplan.inputs.rules import POSITION, near, shown
+from profileplan.inputs.dialect import DECIMAL_SIGNS, DELIMITERS, TIME_HEADINGS, Dialect
+from profileplan.setpoints.columns import (
+    Column,
+    Sheet,
+    found_columns,
+    signal_columns,
+    usual_headings,
+    usual_names,
+)
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Mapping, Sequence
+    from collections.abc import Iterator, Sequence
     from pathlib import Path
     from typing import BinaryIO
 
-    from profileplan.inputs import Axis, Dialect, Machine
+    from profileplan.inputs import Machine
 
 COMMENT = "#"
 """Lines below the header that begin with it are no rows."""
 
 MARKS = (b"#", b"%", b"//")
-"""Lines before a table without a header that begin with one of them are comment."""
+"""Lines before a table that begin with one of them are comment."""
 
 HEAD = 1 << 18
 """Bytes from which the layout is told: a header and some rows."""
@@ -37,17 +44,11 @@ HEAD = 1 << 18
 MOST_COMMENTS = 200
 """Lines above the header that are looked at."""
 
-MOST_COLUMNS = 1000
-"""Columns of a table: twelve axes and their signals are far fewer."""
-
 MOST_LINE = 1 << 16
 """Bytes of a line."""
 
 ROWS_TRIED = 200
 """Rows by which a column is taken for a signal."""
-
-FEW = 50
-"""Of so many of the first rows one may hold something else in the column of a signal."""
 
 MOST_DECIMALS = 12
 """Decimals that are told apart: more are below the rounding of numbers."""
@@ -55,98 +56,38 @@ MOST_DECIMALS = 12
 STATES = ("0", "1", "0.0", "1.0")
 """How a table may write the states of a signal."""
 
+NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?", re.ASCII)
+
 MARK = b"\xef\xbb\xbf"
 """What some programs put before a text to say that it is UTF-8."""
 
 WIDE_MARKS = (b"\xff\xfe", b"\xfe\xff")
 """What stands before a text of two bytes a sign."""
 
-TIMES: Mapping[str, float] = {"s": 1.0, "ms": 1e-3, "us": 1e-6}
-"""Units of the time → s. A tick is the machine's period."""
-
-UNITS: Mapping[str, Mapping[str, float]] = {
-    "mm": {"mm": 1.0, "m": 1e3, "um": 1e-3},
-    "deg": {"deg": 1.0, "rad": math.degrees(1.0), "mrad": math.degrees(1e-3)},
-}
-"""Unit of an axis → units in which a table may hold its positions, in the axis's own."""
-
-RATES: Mapping[str, str] = {"pos": "", "vel": "_s", "acc": "_s2", "jerk": "_s3"}
-"""Quantities that are judged, and how their units end."""
-
-FORCES = ("force", "torque")
-"""Quantities that are known and not judged."""
-
-HIGHEST = 1e15
-"""Greatest magnitude of a rate or a time: none that a machine has."""
-
-
-class Column(NamedTuple):
-    """A column that is read: where it is, its name, what it holds, of which axis (-1: of none).
-
-    Its numbers are multiplied with ``unit`` and ``shift`` is added; beyond ``high`` in size, before
-    the shift, none is one of a motion.
-    """
-
-    cell: int
-    name: str
-    quantity: str
-    axis: int = -1
-    unit: float = 1.0
-    shift: float = 0.0
-    high: float = HIGHEST
-
 
 @dataclass(frozen=True)
-class Layout:
-    """What stands where.
+class Layout(Sheet):
+    """What stands where in a text.
 
     Parameters
     ----------
-    file : Path
     delimiter, decimal : str
     returns : bool
         Whether a line ends by CR alone.
     header : int
-        The header's line, counted from 1.
+        The line before the first row, counted from 1: the header's, where there is one.
     body : int
         Where the rows begin [bytes].
-    names : tuple of str
-        All headings.
-    columns : tuple of Column
-        Those read: time first, then those of axes, then signals.
-    decimals : tuple of int
-        How many decimals the first rows have in the columns read.
     lenient : bool
         Whether a signal's cell may hold anything: it is NaN then.
     """
 
-    file: Path
     delimiter: str
     decimal: str
     returns: bool
     header: int
     body: int
-    names: tuple[str, ...]
-    columns: tuple[Column, ...]
-    decimals: tuple[int, ...]
     lenient: bool = True
-
-    @property
-    def unread(self) -> tuple[str, ...]:
-        """Names of the columns that are not read."""
-        read = {column.cell for column in self.columns}
-        return tuple(name for index, name in enumerate(self.names) if index not in read)
-
-    def find(self, quantity: str, axis: int) -> int | None:
-        """Return which of the columns read holds a quantity of an axis."""
-        for place, column in enumerate(self.columns):
-            if column.quantity == quantity and column.axis == axis:
-                return place
-        return None
-
-    def signals(self) -> dict[str, int]:
-        """Return which of the columns read are signals, by name."""
-        return {c.name: place for place, c in enumerate(self.columns) if c.quantity == "signal"}
 
     def with_signals(self) -> Layout:
         """Return the layout that reads all other columns of numbers as signals."""
@@ -168,6 +109,7 @@ def layout_of(
     *,
     dialect: Dialect | None = None,
     headings: Sequence[str] | None = None,
+    columns: Sequence[str] | None = None,
 ) -> Layout:
     """Tell what stands where in a table.
 
@@ -178,60 +120,65 @@ def layout_of(
     dialect : Dialect, optional
         How it is written; default: as it looks, with headings renamed as in the machine file.
     headings : sequence of str, optional
-        The headings of a table that has none.
+        The headings of a table that has none, perhaps without those of signals at its end.
+    columns : sequence of str, optional
+        What a table without headings holds of each axis, in place of what the machine file says.
 
     Raises
     ------
     InputError
         The file cannot be read, or is no table for this machine: with all columns missed.
     """
-    if dialect is not None and not dialect.header and headings is None:
-        raise InputError([Fault("", "has no header; its headings are needed", file)])
+    own = dialect or machine.setpoints.dialect
     head = _head(file)
-    lines = head.lines
-    usual = _usual(dialect or machine.setpoints.dialect)
-    delimiters = DELIMITERS if dialect is None else (dialect.delimiter,)
-    found = _header(lines, delimiters, usual) if headings is None else None
-    number, delimiter = found or _first_row(lines, delimiters)
-    line = lines[number] if headings is None else b""
-    if headings is None:
-        text = _decoded(line, number + 1, file)
-        cells = _cells(text, delimiter, number + 1, file)
-        names = [usual.get(cell, cell) for cell in cells]
+    found = None
+    if headings is None and (dialect is None or dialect.header):
+        delimiters = _delimiters(own) if dialect is None else (dialect.delimiter,)
+        found = _header(head.lines, delimiters, own)
+    if found is None and (headings is not None or columns is not None or not own.header):
+        usual = headings or usual_headings(machine, columns=columns, file=file)
+        number, delimiter, names = _bare(head.lines, usual, own, dialect, file)
+        place, header = "headings", number
     else:
-        # What would be the header's line comes before the first row.
-        number, names = number - 1, list(headings)
-    faults = _long_faults(line, names) or _name_faults(names, machine)
-    if faults:
-        place = "headings" if headings is not None else f"line {number + 1}"
-        raise InputError(Fault(place, fault, file) for fault in faults)
-    rows = [row.decode("latin-1") for row in lines[number + 1 : number + 1 + ROWS_TRIED]]
+        number, delimiter = found or _first_row(head.lines, DELIMITERS)
+        if columns is not None:
+            message = "is a header: what a table holds is said for one without"
+            raise InputError([Fault(f"line {number + 1}", message, file)])
+        names = _names(head.lines[number], number + 1, delimiter, own, file)
+        place, header = f"line {number + 1}", number + 1
     layout = Layout(
         file=file,
-        delimiter=delimiter,
-        decimal=_decimal(rows, delimiter) if dialect is None else dialect.decimal,
-        returns=head.returns,
-        header=number + 1,
-        body=head.start(number + 1),
         names=tuple(names),
-        columns=tuple(_columns(names, machine)),
-        decimals=(),
+        columns=found_columns(names, machine, file=file, place=place),
+        delimiter=delimiter,
+        decimal=own.decimal,
+        returns=head.returns,
+        header=header,
+        body=head.start(header),
     )
-    table = list(_tried(rows, layout))
-    columns = (*layout.columns, *_signals(layout, table, machine))
-    decimals = tuple(
-        max((_written(row[column.cell], layout.decimal) for row in table), default=0)
-        for column in columns
-    )
-    return replace(layout, columns=columns, decimals=decimals)
+    rows = [row.decode("latin-1") for row in head.lines[header : header + ROWS_TRIED]]
+    if dialect is None:
+        layout = replace(layout, decimal=_decimal(rows, delimiter))
+    return _tried_layout(layout, rows, machine)
 
 
 def has_time(file: Path, dialect: Dialect | None = None) -> bool:
     """Tell whether a file has a header with a column of time, as it is or as a dialect has it."""
     try:
-        return _header(_head(file).lines, DELIMITERS, _usual(dialect)) is not None
+        return _header(_head(file).lines, DELIMITERS, dialect or Dialect()) is not None
     except InputError:
         return False
+
+
+def has_numbers_only(file: Path) -> bool:
+    """Tell whether the first line of a file that is no comment holds several numbers, only."""
+    try:
+        lines = _head(file).lines
+    except InputError:
+        return False
+    number, _ = _first_row(lines, DELIMITERS)
+    text = lines[number].decode("utf-8", errors="replace")
+    return any(len(_numbers(text, sign)) > 1 for sign in DELIMITERS)
 
 
 def split(text: str, delimiter: str) -> list[str]:
@@ -296,17 +243,22 @@ def _head(file: Path) -> _Head:
     return _Head(lines, returns, mark)
 
 
-def _usual(dialect: Dialect | None) -> dict[str, str]:
-    """Return the usual headings by those that a dialect has for them."""
-    return {} if dialect is None else {new: usual for usual, new in dialect.names.items()}
+def _delimiters(own: Dialect) -> tuple[str, ...]:
+    """Return what may part cells, what the machine file says first."""
+    return (own.delimiter, *(sign for sign in DELIMITERS if sign != own.delimiter))
 
 
 def _header(
-    lines: Sequence[bytes], delimiters: Sequence[str], usual: Mapping[str, str]
+    lines: Sequence[bytes], delimiters: Sequence[str], own: Dialect
 ) -> tuple[int, str] | None:
-    """Return the line of the header, from 0, and its delimiter: where the time has a column."""
-    times = set(TIME_HEADINGS.values())
-    for number, line in enumerate(lines[:MOST_COMMENTS]):
+    """Return the line of the header, from 0, and its delimiter: where the time has a column.
+
+    A comment may look like one, and a heading like a comment: so comments are looked at last.
+    """
+    usual, times = usual_names(own), set(TIME_HEADINGS.values())
+    marks = (*MARKS, own.comment_mark.encode()) if own.comment_mark else MARKS
+    numbered = list(enumerate(lines[:MOST_COMMENTS]))
+    for number, line in sorted(numbered, key=lambda pair: pair[1].startswith(marks)):
         if len(line) > MOST_LINE:
             continue
         text = line.decode("utf-8", errors="replace")
@@ -320,13 +272,98 @@ def _header(
     return None
 
 
-def _first_row(lines: Sequence[bytes], delimiters: Sequence[str]) -> tuple[int, str]:
+def _first_row(
+    lines: Sequence[bytes], delimiters: Sequence[str], marks: tuple[bytes, ...] = MARKS
+) -> tuple[int, str]:
     """Return the first line that is no comment, from 0, and what most likely parts its cells."""
     number = next(
-        (n for n, line in enumerate(lines) if line.strip() and not line.startswith(MARKS)), 0
+        (n for n, line in enumerate(lines) if line.strip() and not line.startswith(marks)), 0
     )
     text = lines[number].decode("utf-8", errors="replace")
     return number, max(delimiters, key=text.count)
+
+
+def _bare(
+    lines: Sequence[bytes],
+    headings: Sequence[str],
+    own: Dialect,
+    dialect: Dialect | None,
+    file: Path,
+) -> tuple[int, str, list[str]]:
+    """Return the first row of a table without a header, from 0, its delimiter and its headings.
+
+    Raises
+    ------
+    InputError
+        It has fewer columns, or more that do not hold 0 and 1 only.
+    """
+    marks = (*MARKS, own.comment_mark.encode()) if own.comment_mark else MARKS
+    delimiters = _delimiters(own) if dialect is None else (dialect.delimiter,)
+    number, delimiter = _first_row(lines, delimiters, marks)
+    text = lines[number][:MOST_LINE].decode("utf-8", errors="replace")
+    known = dict.fromkeys(headings)
+    delimiter = next(
+        (sign for sign in delimiters if len(_numbers(text, sign)) >= len(headings)), delimiter
+    )
+    place = f"line {number + 1}"
+    _judge_length(lines[number], place, file)
+    cells = _cells(text, delimiter, number + 1, file)
+    more = len(cells) - len(headings)
+    if cells and more >= 0:
+        signals = [name for name in (f"signal {n + 1}" for n in range(more)) if name not in known]
+        others = _others(lines[number : number + ROWS_TRIED], delimiter, len(cells))
+        if len(signals) == more and not any(others[len(headings) :]):
+            return number, delimiter, [*headings, *signals]
+    if not cells:
+        message = "is empty; rows of numbers are needed"
+    else:
+        message = f"{len(cells)} columns and no header; expected {len(headings)}: "
+        message += f"{', '.join(headings)}, and then only signals of 0 and 1"
+    raise InputError([Fault(place, message, file)])
+
+
+def _others(lines: Sequence[bytes], delimiter: str, count: int) -> list[int]:
+    """Return in how many of some lines with so many cells each cell is neither 0 nor 1."""
+    found = [0] * count
+    for line in lines:
+        try:
+            cells = split(line.decode("latin-1"), delimiter)
+        except csv.Error:
+            continue
+        if len(cells) == count:
+            found = [n + (c.strip() not in STATES) for n, c in zip(found, cells, strict=True)]
+    return found
+
+
+def _numbers(text: str, delimiter: str) -> list[str]:
+    """Return the cells of a line if all of them are numbers, with either decimal sign."""
+    try:
+        cells = [cell.strip() for cell in split(text, delimiter)]
+    except csv.Error:
+        return []
+    for sign in DECIMAL_SIGNS:
+        if all(NUMBER.fullmatch(cell.replace(sign, ".")) for cell in cells):
+            return cells
+    return []
+
+
+def _names(line: bytes, number: int, delimiter: str, own: Dialect, file: Path) -> list[str]:
+    """Return the headings in a line by their usual names."""
+    _judge_length(line, f"line {number}", file)
+    text = _decoded(line, number, file)
+    cells = _cells(text, delimiter, number, file)
+    if _numbers(text, delimiter):
+        message = "holds numbers and no headings; a table without a header is read by what "
+        message += "[setpoints] says, with header = false, or by --columns"
+        raise InputError([Fault(f"line {number}", message, file)])
+    usual = usual_names(own)
+    return [usual.get(cell, cell) for cell in cells]
+
+
+def _judge_length(line: bytes, place: str, file: Path) -> None:
+    if len(line) > MOST_LINE:
+        message = f"is longer than {MOST_LINE:,} bytes; no line of a table is"
+        raise InputError([Fault(place, message, file)])
 
 
 def _decoded(line: bytes, number: int, file: Path) -> str:
@@ -345,67 +382,25 @@ def _cells(text: str, delimiter: str, number: int, file: Path) -> list[str]:
         raise InputError([Fault(f"line {number}", f"is no valid CSV: {error}", file)]) from error
 
 
-def _long_faults(line: bytes, names: Sequence[str]) -> list[str]:
-    if len(line) > MOST_LINE:
-        return [f"is longer than {MOST_LINE:,} bytes; no line of a table is"]
-    if len(names) > MOST_COLUMNS:
-        return [f"has {len(names):,} columns; at most {MOST_COLUMNS:,} are read"]
-    return []
-
-
-def _name_faults(names: Sequence[str], machine: Machine) -> list[str]:
-    """Return what is wrong with a table's header."""
-    if not names:
-        return ["is empty; a header of column names is needed"]
-    counts = Counter(names)
-    faults = [f"column {shown(name)} stands twice" for name in names if counts[name] > 1]
-    times = [name for name in names if name in TIME_HEADINGS.values()]
-    if not times:
-        faults.append(f'column "t_s" is missing{_hint("t_s", names)}')
-    elif len(times) > 1 and times[0] != times[1]:
-        faults.append(f"columns {shown(times[0])} and {shown(times[1])} both hold the time")
-    for axis in machine.axes:
-        for quantity in RATES:
-            held = [name for name in _spellings(axis, quantity) if name in counts]
-            if len(held) > 1:
-                faults.append(f"columns {shown(held[0])} and {shown(held[1])} hold the same")
-            elif not held and quantity == "pos":
-                name = axis.column("pos")
-                faults.append(f"column {shown(name)} is missing{_hint(name, names)}")
-    return list(dict.fromkeys(faults))
-
-
-def _hint(name: str, names: Sequence[str]) -> str:
-    return near(name, [other for other in names[:100] if len(other) < 50])
-
-
-def _spellings(axis: Axis, quantity: str) -> dict[str, tuple[float, float]]:
-    """Return the names under which a table may hold a quantity of an axis.
-
-    With each: what a number is multiplied with, and what is added to that.
-    """
-    start, end = f"{axis.name}_{quantity}_", RATES[quantity]
-    found = {f"{start}{unit}{end}": (size, 0.0) for unit, size in UNITS[axis.unit].items()}
-    drive = axis.drive
-    # A counter that wraps does not tell where its axis is.
-    if drive is not None and drive.wrap is None:
-        shift = -drive.offset if quantity == "pos" else 0.0
-        found[f"{start}inc{end}"] = (drive.direction / float(drive.ratio), shift)
-    return found
-
-
-def _columns(names: Sequence[str], machine: Machine) -> Iterator[Column]:
-    """Yield the columns of time and of axes."""
-    period = machine.setpoints.period
-    times = {heading: TIMES.get(unit, period) for unit, heading in TIME_HEADINGS.items()}
-    name = next(name for name in names if name in times)
-    yield Column(names.index(name), name, "time", unit=times[name])
-    for number, axis in enumerate(machine.axes):
-        for quantity in RATES:
-            high = POSITION.high if quantity == "pos" else HIGHEST
-            for name, (unit, shift) in _spellings(axis, quantity).items():
-                if name in names:
-                    yield Column(names.index(name), name, quantity, number, unit, shift, high)
+def _tried_layout(layout: Layout, rows: Sequence[str], machine: Machine) -> Layout:
+    """Return a layout with what the first rows tell: signals, decimals, the first time."""
+    table = list(_tried(rows, layout))
+    others = {
+        index: sum(cells[index] not in STATES for cells in table)
+        for index in range(len(layout.names))
+    }
+    columns = (*layout.columns, *signal_columns(layout, others, len(table), machine))
+    decimals = tuple(
+        max((_written(row[column.cell], layout.decimal) for row in table), default=0)
+        for column in columns
+    )
+    begins = table[0][columns[0].cell].replace(layout.decimal, ".") if table else ""
+    return replace(
+        layout,
+        columns=columns,
+        decimals=decimals,
+        begins=float(begins) if NUMBER.fullmatch(begins) else math.nan,
+    )
 
 
 def _decimal(rows: Sequence[str], delimiter: str) -> str:
@@ -442,15 +437,3 @@ def _written(cell: str, decimal: str) -> int:
         return 0
     decimals = len(match[1] or "") - int(match[2] or 0)
     return min(max(decimals, 0), MOST_DECIMALS)
-
-
-def _signals(layout: Layout, table: list[list[str]], machine: Machine) -> Iterator[Column]:
-    """Yield the other columns that hold 0 and 1 only in the first rows, or nearly so."""
-    known = {f"{axis.name}_{quantity}_" for axis in machine.axes for quantity in (*RATES, *FORCES)}
-    read = {column.cell for column in layout.columns}
-    for index, name in enumerate(layout.names):
-        if index in read or not table or any(name.startswith(start) for start in known):
-            continue
-        others = sum(cells[index] not in STATES for cells in table)
-        if others <= len(table) // FEW:
-            yield Column(index, name, "signal")

@@ -21,12 +21,14 @@ from profileplan.setpoints.layout import (
     COMMENT,
     MOST_DECIMALS,
     MOST_LINE,
+    NUMBER,
     has_time,
     layout_of,
     opened,
     split,
 )
 from profileplan.setpoints.sampling import COLUMNS, SetpointTable
+from profileplan.setpoints.turns import Turns, likely_turns
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator
@@ -35,15 +37,14 @@ if TYPE_CHECKING:
 
     from profileplan.inputs import Dialect, Machine
     from profileplan.motion.polynomials import Array, Indices
-    from profileplan.setpoints.layout import Column, Layout
+    from profileplan.setpoints.columns import Column, Sheet
+    from profileplan.setpoints.layout import Layout
 
 BLOCK = 1 << 20
 """Bytes that are read together: more cost memory, fewer cost time."""
 
 MOST_FAULTY = 1000
 """Faulty rows after which reading stops."""
-
-NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?", re.ASCII)
 
 NOT_FINITE = re.compile(r"[+-]?(nan|inf|infinity)", re.ASCII | re.IGNORECASE)
 
@@ -119,7 +120,10 @@ def read_rows(
     with opened(layout.file) as stream:
         total = stream.seek(0, io.SEEK_END)
         stream.seek(layout.body)
-        for text in _whole_lines(stream, layout, block):
+        lines = whole_lines(
+            stream, layout.file, block=block, line=layout.header + 1, returns=layout.returns
+        )
+        for text in lines:
             found = _fast(text, layout, line)
             if found is None:
                 found, more = _slow(text, layout, line)
@@ -143,10 +147,51 @@ def read_rows(
         raise InputError([Fault(place, "has no rows below its header", layout.file)])
 
 
-def converted(numbers: Array, layout: Layout) -> Array:
+def whole_lines(
+    stream: BinaryIO, file: Path, *, block: int = BLOCK, line: int = 1, returns: bool = False
+) -> Iterator[bytes]:
+    """Yield bytes that end with a line, some lines at a time.
+
+    Parameters
+    ----------
+    stream : file
+    file : Path
+        What it is called.
+    block : int
+        About how much is read together [bytes].
+    line : int
+        The number of its next line.
+    returns : bool
+        Whether lines end by CR alone.
+
+    Raises
+    ------
+    InputError
+        A line is so long that this is no table.
+    """
+    rest = b""
+    while data := stream.read(block):
+        if returns:
+            data = data.replace(b"\r", b"\n")
+        end = data.rfind(b"\n") + 1
+        if end:
+            whole = rest + data[:end]
+            yield whole
+            line += whole.count(b"\n")
+            rest = data[end:]
+        else:
+            rest += data
+        if len(rest) > MOST_LINE:
+            message = f"is longer than {MOST_LINE:,} bytes; no line of a table is"
+            raise InputError([Fault(f"line {line}", message, file)])
+    if rest:
+        yield rest + b"\n"
+
+
+def converted(numbers: Array, sheet: Sheet) -> Array:
     """Return numbers, (n, k), in s and the units of the axes."""
-    units = [column.unit for column in layout.columns]
-    found: Array = numbers * units + [column.shift for column in layout.columns]
+    units = [column.unit for column in sheet.columns]
+    found: Array = numbers * units + [column.shift for column in sheet.columns]
     return found
 
 
@@ -159,41 +204,16 @@ def last_decimals(numbers: Array, least: Indices) -> Indices:
     least : (k,) array of int
     """
     found = least.copy()
-    for column in range(numbers.shape[1]):
-        values = numbers[:, column]
-        while found[column] < MOST_DECIMALS:
-            scaled = values * 10.0 ** found[column]
-            if np.all(np.abs(scaled - np.rint(scaled)) <= 2 * np.spacing(np.abs(scaled))):
-                break
-            found[column] += 1
+    # What is no signal may hold any number.
+    with np.errstate(over="ignore", invalid="ignore"):
+        for column in range(numbers.shape[1]):
+            values = numbers[:, column]
+            while found[column] < MOST_DECIMALS:
+                scaled = values * 10.0 ** found[column]
+                if np.all(np.abs(scaled - np.rint(scaled)) <= 2 * np.spacing(np.abs(scaled))):
+                    break
+                found[column] += 1
     return found
-
-
-def _whole_lines(stream: BinaryIO, layout: Layout, block: int) -> Iterator[bytes]:
-    """Yield bytes that end with a line.
-
-    Raises
-    ------
-    InputError
-        A line is so long that this is no table.
-    """
-    rest, line = b"", layout.header + 1
-    while data := stream.read(block):
-        if layout.returns:
-            data = data.replace(b"\r", b"\n")
-        end = data.rfind(b"\n") + 1
-        if end:
-            whole = rest + data[:end]
-            yield whole
-            line += whole.count(b"\n")
-            rest = data[end:]
-        else:
-            rest += data
-        if len(rest) > MOST_LINE:
-            message = f"is longer than {MOST_LINE:,} bytes; no line of a table is"
-            raise InputError([Fault(f"line {line}", message, layout.file)])
-    if rest:
-        yield rest + b"\n"
 
 
 def _fast(text: bytes, layout: Layout, line: int) -> Rows | None:
@@ -302,8 +322,26 @@ def _time_fault(rows: Rows, layout: Layout) -> Fault | None:
 
 
 def _table(rows: Rows, layout: Layout, machine: Machine) -> SetpointTable:
-    """Return the table that rows make. Rates count where every axis has them."""
-    numbers = converted(rows.numbers, layout)
+    """Return the table that rows make. Rates count where every axis has them.
+
+    Raises
+    ------
+    InputError
+        Axes are missing: they are in other files.
+    """
+    missed = [axis.name for n, axis in enumerate(machine.axes) if n not in layout.axes]
+    if missed:
+        message = f"has no positions of {', '.join(missed)}; those of all axes are needed"
+        raise InputError([Fault("", message, layout.file)])
+    turns = Turns(layout, machine)
+    numbers = converted(turns.counted_on(rows.numbers), layout)
+    for place, column in enumerate(layout.columns):
+        if (turning := turns.of(place)) is not None and turning.turned:
+            position, travel = numbers[:, place], machine.axes[column.axis].travel
+            likely = np.array(likely_turns(float(position[0]), turning)) * turning.wrap
+            kept = (position.min() + likely >= travel[0]) & (position.max() + likely <= travel[1])
+            # Of several turns that keep the travel the likeliest; of none the same.
+            numbers[:, place] = position + likely[int(kept.argmax())]
     found: dict[str, Array] = {}
     own: list[int] = []
     for quantity in COLUMNS:

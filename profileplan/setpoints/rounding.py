@@ -7,16 +7,16 @@ of the motion with noise: every position is off by half of its last digit at mos
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 
 from profileplan.inputs.dialect import Dialect
 from profileplan.setpoints.content import Content
-from profileplan.setpoints.digits import rounded
 from profileplan.setpoints.drives import judge_drives
-from profileplan.setpoints.sampling import COLUMNS, Sampler
+from profileplan.setpoints.grids import position_step, position_steps, written_fields
+from profileplan.setpoints.sampling import Sampler
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping
@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from profileplan.inputs import Axis
     from profileplan.motion.polynomials import Array
     from profileplan.motion.schedule import Schedule
+    from profileplan.setpoints.content import Field
 
 QUANTITIES = {"velocity": 1, "acceleration": 2, "deceleration": 2, "jerk": 3}
 """Quantities that a drive derives → how many differences that takes."""
@@ -33,6 +34,9 @@ NOISY = 0.1
 
 LIMIT_TOLERANCE = 1e-9
 """Share of a limit by which rounding of doubles may pass it."""
+
+LEAST_STEP = 1e-15
+"""Step of positions that are all 0, written in significant digits [mm or deg]."""
 
 ROWS_AT_A_TIME = 16384
 
@@ -44,6 +48,7 @@ class Noise:
     Parameters
     ----------
     axis : str
+        Its name, or that of its second drive.
     quantity : str
         A key of ``QUANTITIES``.
     limit : float [mm/s, mm/s² or mm/s³; a rotary axis: deg for mm]
@@ -79,13 +84,14 @@ class Noise:
         return self.derived <= self.limit * (1 + LIMIT_TOLERANCE) + self.rounding
 
 
-class _Grid(NamedTuple):
-    """What the positions of an axis are rounded to: steps of ``step`` [mm or deg]."""
+class _Channel(NamedTuple):
+    """A column of positions, of an axis or of its second drive."""
 
+    name: str
+    axis: Axis
+    column: int
+    field: Field
     step: float
-    per_unit: float
-    offset: float
-    decimals: int
 
 
 def rounding_noise(
@@ -95,7 +101,7 @@ def rounding_noise(
     dialect: Dialect | None = None,
     progress: Callable[[int, int], None] | None = None,
 ) -> tuple[Noise, ...]:
-    """Return what rounding does to every limited quantity of every axis.
+    """Return what rounding does to every limited quantity of every axis and second drive.
 
     Parameters
     ----------
@@ -103,7 +109,8 @@ def rounding_noise(
     content : Content, optional
         Its period and drives: where an axis has one, its increments are the steps.
     dialect : Dialect, optional
-        Its decimals of positions are the steps of the other axes.
+        Its decimals of positions are the steps of the other axes; of significant digits the
+        coarsest step counts.
     progress : callable, optional
         Called with the rows looked at so far and the rows in all.
 
@@ -120,8 +127,7 @@ def rounding_noise(
     content, dialect = content or Content(), dialect or Dialect()
     judge_drives(schedule, content.drives)
     sampler = Sampler(schedule, period=content.period, columns=("pos",))
-    axes = schedule.job.machine.axes
-    grids = [_grid(axis, content, dialect) for axis in axes]
+    channels = _channels(schedule, replace(content, columns=("pos",)), dialect, sampler)
     exact: dict[tuple[str, str], tuple[float, float]] = {}
     derived: dict[tuple[str, str], tuple[float, float]] = {}
     for start in range(0, sampler.count, ROWS_AT_A_TIME):
@@ -130,43 +136,60 @@ def rounding_noise(
         # The machine stands before the first row and behind the last one.
         ends = (3 if start == 0 else 0, 3 if rows.stop == sampler.count else 0)
         first = rows.start - ends[0]
-        for column, (axis, grid) in enumerate(zip(axes, grids, strict=True)):
-            own = np.pad(position[:, column], ends, mode="edge")
-            for store, steps in ((exact, own / grid.step), (derived, _steps(own, grid))):
-                for quantity, sizes in _rates(steps, grid.step, sampler.period, axis):
+        for one in channels:
+            own = np.pad(position[:, one.column], ends, mode="edge")
+            steps = position_steps(one.field, own, one.step, dialect)
+            for store, counted in ((exact, own / one.step), (derived, steps)):
+                for quantity, sizes in _rates(counted, one.step, sampler.period, one.axis):
                     at = int(sizes.argmax())
                     row = min(max(first + at + QUANTITIES[quantity], 0), sampler.count - 1)
                     found = (float(sizes[at]), row * sampler.period)
-                    key = (axis.name, quantity)
+                    key = (one.name, quantity)
                     store[key] = max(store.get(key, (-1.0, 0.0)), found, key=lambda one: one[0])
         if progress:
             progress(rows.stop, sampler.count)
-    return tuple(_findings(axes, grids, exact, derived, sampler.period))
+    return tuple(_findings(channels, exact, derived, sampler.period))
+
+
+def _channels(
+    schedule: Schedule, content: Content, dialect: Dialect, sampler: Sampler
+) -> list[_Channel]:
+    """Return the columns of positions that drives derive rates from."""
+    machine = schedule.job.machine
+    low, high = schedule.trajectory.extremes()
+    channels = []
+    for own in written_fields(schedule, content, dialect, sampler.nanoseconds)["pos"]:
+        column = machine.axis_names.index(own.name)
+        greatest = max(abs(float(low.value[column])), abs(float(high.value[column])))
+        step = position_step(own, greatest, dialect)
+        name = own.name if own.counter is None else own.counter.name
+        # An axis that stays at 0 has no digits to lose.
+        channels.append(_Channel(name, machine.axes[column], column, own, step or LEAST_STEP))
+    return channels
 
 
 def _findings(
-    axes: tuple[Axis, ...],
-    grids: list[_Grid],
+    channels: list[_Channel],
     exact: Mapping[tuple[str, str], tuple[float, float]],
     derived: Mapping[tuple[str, str], tuple[float, float]],
     period: float,
 ) -> Iterator[Noise]:
-    for axis, grid in zip(axes, grids, strict=True):
+    for one in channels:
         for row, (quantity, order) in enumerate(QUANTITIES.items()):
-            limit = axis.limits[row]
+            limit = one.axis.limits[row]
             if math.isinf(limit):
                 continue
-            value, time = derived[axis.name, quantity]
-            rounding = 2 ** (order - 1) * grid.step / period**order
+            value, time = derived[one.name, quantity]
+            rounding = 2 ** (order - 1) * one.step / period**order
             yield Noise(
-                axis=axis.name,
+                axis=one.name,
                 quantity=quantity,
                 limit=limit,
-                exact=exact[axis.name, quantity][0],
+                exact=exact[one.name, quantity][0],
                 derived=value,
                 rounding=rounding,
                 time=time,
-                advice=_advice(axis, order, rounding / limit, grid.step, period),
+                advice=_advice(one.axis, order, rounding / limit, one.step, period),
             )
 
 
@@ -181,22 +204,6 @@ def _advice(axis: Axis, order: int, share: float, step: float, period: float) ->
         f"finer (now {step:.2g}), or a period of {longer:.2g} s or longer (now {period:.2g}), keep "
         f"it below {NOISY:.0%}; else filter what the drive derives, or give it the velocity too"
     )
-
-
-def _grid(axis: Axis, content: Content, dialect: Dialect) -> _Grid:
-    drive = content.drives.get(axis.name)
-    if drive is None:
-        decimals = dialect.decimals.get("pos", COLUMNS["pos"].decimals)
-        return _Grid(10.0**-decimals, 10.0**decimals, 0.0, decimals)
-    return _Grid(drive.resolution, float(drive.ratio), drive.offset, -1)
-
-
-def _steps(position: Array, grid: _Grid) -> Array:
-    """Return positions rounded, in whole steps."""
-    if grid.decimals >= 0:
-        return rounded(position, grid.decimals)[0]
-    steps: Array = np.rint((position + grid.offset) * grid.per_unit)
-    return steps
 
 
 def _rates(steps: Array, step: float, period: float, axis: Axis) -> Iterator[tuple[str, Array]]:

@@ -6,19 +6,22 @@ end of the motion, at rest and on target. Units are those of the axes: mm or deg
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from itertools import pairwise
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 import numpy.typing as npt
 
+from profileplan.errors import Fault, InputError
 from profileplan.inputs import SetpointSettings
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
 
-    from profileplan.motion.polynomials import Array
+    from profileplan.dynamics import Loads, LoadSampler
+    from profileplan.inputs import Machine
+    from profileplan.motion.polynomials import Array, Flags, Indices
     from profileplan.motion.schedule import Schedule, SignalEvent
 
 TICK_TOLERANCE = 1e-6
@@ -42,6 +45,9 @@ COLUMNS: Mapping[str, Column] = {
 """Quantities by the names that select them. Positions have nine decimals, for a drive takes their
 third difference: at a period of 1 ms rounding is then at most 4 mm/s³ of jerk."""
 
+LOAD_DECIMALS: Mapping[str, int] = {"force": 2, "torque": 4}
+"""What moving takes, of axes whose mechanics say enough: quantity → decimals [N, N·m]."""
+
 
 @dataclass(frozen=True, eq=False)
 class SetpointTable:
@@ -58,6 +64,9 @@ class SetpointTable:
         Name of a digital output → (n,) array of 0 and 1.
     position_step : float [mm]
         What the last decimal of the positions stands for; 0 where they are not rounded.
+    force, torque : mapping
+        Name of an axis with mechanics → (n,) array [N, N·m], where they were asked for: the force
+        at the slide, the torque at the motor's shaft, both in the axis's own direction.
     """
 
     axes: tuple[str, ...]
@@ -68,6 +77,8 @@ class SetpointTable:
     jerk: Array | None
     signals: Mapping[str, Array]
     position_step: float = 0.0
+    force: Loads = field(default_factory=dict, kw_only=True)
+    torque: Loads = field(default_factory=dict, kw_only=True)
 
 
 def row_count(schedule: Schedule, period: float) -> int:
@@ -90,7 +101,7 @@ def sample(
     period : float, optional [s]
         Default: that of the machine file.
     columns : sequence of str
-        Keys of ``COLUMNS``; positions are always there.
+        Keys of ``COLUMNS`` and of ``LOAD_DECIMALS``; positions are always there.
     rows : range, optional
         The rows wanted, counted from 0; default: all.
     """
@@ -107,7 +118,7 @@ class Sampler:
     period : float, optional [s]
         Default: that of the machine file.
     columns : sequence of str
-        Keys of ``COLUMNS``; positions are always there.
+        Keys of ``COLUMNS`` and of ``LOAD_DECIMALS``; positions are always there.
     """
 
     def __init__(
@@ -121,10 +132,12 @@ class Sampler:
         self.nanoseconds = round(self.period * 1e9)
         self.count = row_count(schedule, self.period)
         self._trajectory = schedule.trajectory
+        self._columns = tuple(columns)
+        self._loads = _load_sampler(schedule, columns)
+        # Forces follow from velocity and acceleration.
+        needed = {"pos", *columns, *(("vel", "acc") if self._loads else ())}
         self._orders = {
-            name: column.derivative
-            for name, column in COLUMNS.items()
-            if name in columns or name == "pos"
+            name: column.derivative for name, column in COLUMNS.items() if name in needed
         }
         self._events = _events(schedule)
 
@@ -138,32 +151,46 @@ class Sampler:
         time = ticks * self.nanoseconds / 1e9
         # The last row stands at the end or after it: at rest, on target.
         at = np.where(ticks == self.count - 1, np.inf, time)
-        values = dict(zip(self._orders, self._values(at), strict=True))
+        pieces, ended = self._pieces(at)
+        values = dict(zip(self._orders, self._values(at, pieces, ended), strict=True))
+        asked = {name: values[name] for name in values if name in self._columns}
+        loads: dict[str, Loads] = {}
+        if self._loads:
+            over = np.where(ended, self._trajectory.durations.size, pieces)
+            loads = self._loads.at(over, velocity=values["vel"], acceleration=values["acc"])
         shown = time + TICK_TOLERANCE * self.period
         return SetpointTable(
             axes=self._trajectory.axes,
             time=time,
             position=values["pos"],
-            velocity=values.get("vel"),
-            acceleration=values.get("acc"),
-            jerk=values.get("jerk"),
+            velocity=asked.get("vel"),
+            acceleration=asked.get("acc"),
+            jerk=asked.get("jerk"),
             signals={
                 name: states[np.searchsorted(times, shown, side="right")]
                 for name, (times, states) in self._events.items()
             },
+            force=loads.get("force", {}),
+            torque=loads.get("torque", {}),
         )
 
-    def _values(self, at: Array) -> list[Array]:
+    def _pieces(self, at: Array) -> tuple[Indices, Flags]:
+        """Return the piece that each time [s] is in, and whether the motion is over."""
+        trajectory = self._trajectory
+        pieces = np.searchsorted(trajectory.breaks, at, side="right") - 1
+        return (
+            np.clip(pieces, 0, trajectory.durations.size - 1),
+            at >= trajectory.duration,
+        )
+
+    def _values(self, at: Array, pieces: Indices, ended: Flags) -> list[Array]:
         """Return positions and their derivatives at rising times [s], each (n, d).
 
         The same operations as in ``Trajectory.at``, on the pieces that these times meet.
         """
         trajectory = self._trajectory
-        breaks = trajectory.breaks
-        pieces = np.searchsorted(breaks, at, side="right") - 1
-        pieces = np.clip(pieces, 0, trajectory.durations.size - 1)
-        local = np.clip(at - breaks[pieces], 0.0, trajectory.durations[pieces])[:, np.newaxis]
-        ended = at >= trajectory.duration
+        local = at - trajectory.breaks[pieces]
+        local = np.clip(local, 0.0, trajectory.durations[pieces])[:, np.newaxis]
         first, last = (int(pieces[0]), int(pieces[-1])) if pieces.size else (0, 0)
         pieces = pieces - first
         coefficients = trajectory.coefficients[first : last + 1]
@@ -180,6 +207,35 @@ class Sampler:
                     value[ended] = 0.0
                 found.append(value)
         return found
+
+
+def _load_sampler(schedule: Schedule, columns: Sequence[str]) -> LoadSampler | None:
+    """Return what works out the forces and torques asked for, if any are."""
+    asked = [name for name in LOAD_DECIMALS if name in columns]
+    if not asked:
+        return None
+    judge_loads(schedule.job.machine, asked)
+    # Most tables have neither.
+    from profileplan.dynamics import LoadSampler  # noqa: PLC0415
+
+    return LoadSampler(schedule, asked)
+
+
+def judge_loads(machine: Machine, columns: Sequence[str]) -> None:
+    """Refuse forces and torques that no axis has.
+
+    Raises
+    ------
+    InputError
+        Says which axis lacks what.
+    """
+    faults = [
+        Fault("columns", f'"{column}"; {lack}', machine.source)
+        for column in columns
+        if (lack := machine.lacks(column)) is not None
+    ]
+    if faults:
+        raise InputError(faults)
 
 
 def unplayed(schedule: Schedule, period: float | None = None) -> tuple[SignalEvent, ...]:

@@ -1,0 +1,346 @@
+"""What is to be seen of a plan in space: from above, and from the side?
+
+Positions are those of the axes: across is the first horizontal axis, along the second, height the
+up axis, each as the machine counts it [mm].
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING, NamedTuple
+
+import numpy as np
+
+from profileplan.inputs import PathStep, Payload, Trace
+from profileplan.report.curves import sampled_times
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from profileplan.inputs import Machine, Tool
+    from profileplan.motion.polynomials import Array
+    from profileplan.results import PlannedCycle
+
+CORNERS = 48
+"""Corners of what is drawn for a circle."""
+
+FLATTENED = 0.1
+"""Share of a tolerance by which what is drawn may differ from a curve."""
+
+COARSE = 2e-4
+"""The same as a share of what is in view, where the tolerance is finer than can be seen."""
+
+SEEN = 0.02
+"""Share of what is in view that the tolerance is magnified to."""
+
+MOST_SAMPLES = 6_000
+"""About as many instants of the motion are drawn in space."""
+
+
+class Side(NamedTuple):
+    """A view: "plan" or "side", and the axes to the right and upward; None: the axis is not there.
+
+    ``falls`` where the second axis counts downward.
+    """
+
+    name: str
+    right: str
+    up: str | None
+    falls: bool = False
+
+
+class Standing(NamedTuple):
+    """A keep-out: its name, its outlines in plan, (n, 2) each, up to where it blocks [mm]."""
+
+    name: str
+    outlines: tuple[Array, ...]
+    top: float | None
+
+
+class Hanging(NamedTuple):
+    """What hangs at the tool from one time to another [s].
+
+    outline : (n, 2) array round the tool point, or None; below [mm]; mass [kg].
+    """
+
+    start: float
+    end: float
+    outline: Array | None
+    below: float
+    mass: float
+
+
+class Drawn(NamedTuple):
+    """A line to follow: in which step, (n, 3) across, along and height, how near [mm], when [s]."""
+
+    step: int
+    line: Array
+    tolerance: float
+    start: float
+    end: float
+
+
+class Meeting(NamedTuple):
+    """The smallest clearance: how much, how much is kept, between what, when, and where.
+
+    gap : (2, 2) array, the shortest line in plan; heights : of what is over the keep-out and of the
+    keep-out, None where it is not over it.
+    """
+
+    value: float
+    margin: float
+    what: str
+    time: float
+    gap: Array
+    heights: tuple[float, float] | None
+
+
+@dataclass(frozen=True, eq=False)
+class Scene:
+    """A plan as seen in space.
+
+    Parameters
+    ----------
+    planned : PlannedCycle
+    """
+
+    planned: PlannedCycle
+
+    @property
+    def machine(self) -> Machine:
+        """The machine."""
+        return self.planned.job.machine
+
+    @cached_property
+    def sides(self) -> tuple[Side, ...]:
+        """The views that the axes of the machine allow."""
+        across, up = self.machine.horizontal_axes[:2], self.machine.up_axis
+        found = []
+        if len(across) == 2 or (across and up is None):
+            found.append(Side("plan", across[0], across[1] if len(across) == 2 else None))
+        if up is not None:
+            falls = self.machine.up_sign < 0
+            found += [Side("side", name, up, falls) for name in across[:1]]
+        return tuple(found)
+
+    @cached_property
+    def columns(self) -> tuple[int | None, int | None, int | None]:
+        """Which axes are across, along and height, counted from 0."""
+        names = list(self.machine.axis_names)
+        across = [names.index(name) for name in self.machine.horizontal_axes[:2]]
+        up = None if self.machine.up_axis is None else names.index(self.machine.up_axis)
+        first, second = [*across, None, None][:2]
+        return first, second, up
+
+    def seen(self, positions: Array) -> Array:
+        """Return positions of all axes, (m, d), as across, along and height, (m, 3); 0 for none."""
+        found = np.zeros((len(positions), 3))
+        for column, axis in enumerate(self.columns):
+            if axis is not None:
+                found[:, column] = positions[:, axis]
+        return found
+
+    @cached_property
+    def keepouts(self) -> tuple[Standing, ...]:
+        """The keep-outs, in file order."""
+        if not self.machine.keepouts:
+            return ()
+        # shapely costs more start-up than all else: only a cell pays for it.
+        import shapely  # noqa: PLC0415
+
+        from profileplan.geometry.cell import blocks  # noqa: PLC0415
+
+        rings: dict[str, list[Array]] = {}
+        for block in blocks(self.machine):
+            rings.setdefault(block.name, []).append(
+                np.asarray(shapely.get_coordinates(shapely.get_exterior_ring(block.outline)))
+            )
+        tops = {keepout.name: keepout.top for keepout in self.machine.keepouts}
+        return tuple(Standing(name, tuple(own), tops[name]) for name, own in rings.items())
+
+    @cached_property
+    def tool(self) -> Array | None:
+        """The tool's footprint round the tool point, (n, 2); None for a point."""
+        return self._footprint(self.machine.tool)
+
+    @cached_property
+    def hanging(self) -> tuple[Hanging, ...]:
+        """What hangs at the tool, one after the other; nothing where nothing does."""
+        found: list[Hanging] = []
+        for asked, step in zip(self.planned.job.cycle.steps, self.planned.steps, strict=True):
+            if not isinstance(asked, Payload):
+                continue
+            if found and math.isinf(found[-1].end):
+                found[-1] = found[-1]._replace(end=step.start)
+            outline = self._footprint(asked)
+            below, mass = asked.below or 0.0, asked.mass or 0.0
+            if outline is not None or below or mass:
+                found.append(Hanging(step.start, math.inf, outline, below, mass))
+        last = self.planned.duration
+        return tuple(own._replace(end=min(own.end, last)) for own in found)
+
+    @cached_property
+    def drawn(self) -> tuple[Drawn, ...]:
+        """The lines that paths and drawings ask for, in order."""
+        return tuple(self._drawn())
+
+    @cached_property
+    def extent(self) -> Array:
+        """The least and the greatest position, (2, 3) [mm]: of the motion and of what stands."""
+        low, high = self.planned.trajectory.extremes()
+        ends = [self.seen(np.stack([low.value, high.value]))]
+        for standing in self.keepouts:
+            for outline in standing.outlines:
+                corners = np.full((len(outline), 3), np.nan)
+                corners[:, :2] = outline
+                ends.append(corners)
+        points = np.concatenate(ends)
+        return np.stack([np.nanmin(points, axis=0), np.nanmax(points, axis=0)])
+
+    @property
+    def size(self) -> float:
+        """The greater extent in plan, or in height if that is all [mm]."""
+        spans = np.diff(self.extent, axis=0)[0]
+        return float(spans[:2].max() or spans.max() or 1.0)
+
+    @cached_property
+    def magnifications(self) -> tuple[int, ...]:
+        """By how much deviations are shown larger: 1, and where tolerances are small, more."""
+        allowed = max((own.tolerance for own in self.drawn), default=0.0)
+        if not allowed:
+            return (1,)
+        most = SEEN * self.size / allowed
+        round_ones = [factor * 10**decade for decade in range(7) for factor in (1, 2, 5)]
+        larger = [factor for factor in round_ones if 1 < factor <= most]
+        return (1, *larger[-3::2])
+
+    def bands(self, factor: float) -> tuple[tuple[Array, ...], ...]:
+        """Return what is within the tolerance, magnified, in plan: polygons.
+
+        Each is its outer ring, (n, 2), and those of its holes.
+        """
+        if not any(own.tolerance for own in self.drawn):
+            return ()
+        import shapely  # noqa: PLC0415
+
+        allowed: dict[tuple[int, float], list[Array]] = {}
+        for own in self.drawn:
+            if own.tolerance and len(np.unique(own.line[:, :2], axis=0)) > 1:
+                allowed.setdefault((own.step, own.tolerance), []).append(own.line[:, :2])
+        found = []
+        for (_, tolerance), lines in allowed.items():
+            radius = tolerance * factor
+            whole = shapely.MultiLineString([shapely.LineString(line) for line in lines])
+            band = shapely.simplify(shapely.buffer(whole, radius, quad_segs=6), 0.02 * radius)
+            for part in getattr(band, "geoms", [band]):
+                rings = [part.exterior, *part.interiors]
+                found.append(tuple(np.asarray(shapely.get_coordinates(ring)) for ring in rings))
+        return tuple(found)
+
+    @cached_property
+    def times(self) -> Array:
+        """Instants at which the motion is drawn, (m,) [s], among them every break if few enough."""
+        followed = [time for own in self.drawn for time in (own.start, own.end)]
+        even = sampled_times(self.planned.trajectory, MOST_SAMPLES)
+        return np.unique(np.concatenate([even, followed]))
+
+    @cached_property
+    def feet(self) -> Array:
+        """The point of what is drawn that is nearest in plan, at each of the times: (m, 2) [mm].
+
+        Not a number where the motion follows no line within a tolerance.
+        """
+        feet = np.full((self.times.size, 2), np.nan)
+        followed = [own for own in self.drawn if own.tolerance and len(own.line) > 1]
+        if not followed:
+            return feet
+        import shapely  # noqa: PLC0415
+
+        there = self.seen(self.planned.trajectory.at(self.times))[:, :2]
+        for own in followed:
+            inside = slice(*np.searchsorted(self.times, [own.start, own.end], side="left"))
+            line = shapely.linestrings(own.line[:, :2])
+            way = shapely.line_locate_point(line, shapely.points(there[inside]))
+            nearest = shapely.line_interpolate_point(line, way)
+            feet[inside] = shapely.get_coordinates(nearest)
+        return feet
+
+    @cached_property
+    def meeting(self) -> Meeting | None:
+        """Where the clearance is smallest; None where there is nothing to keep clear of."""
+        finding = next((own for own in self.planned.check() if own.check == "clearance"), None)
+        if finding is None or finding.time is None:
+            return None
+        import shapely  # noqa: PLC0415
+
+        from profileplan.geometry.cell import blocks, bodies  # noqa: PLC0415
+
+        payload = self._payload(finding.step)
+        own, _, other = finding.what.partition(" to ")
+        body = next(body for body in bodies(self.machine, payload) if body.name == own)
+        at = self.seen(self.planned.trajectory.at([finding.time]))[0]
+        moved = shapely.transform(body.footprint, lambda corners: corners + at[:2])
+        lines = [
+            shapely.shortest_line(moved, block.outline)
+            for block in blocks(self.machine)
+            if block.name == other
+        ]
+        nearest = min(lines, key=shapely.length)
+        heights = None
+        top = next(keepout.top for keepout in self.machine.keepouts if keepout.name == other)
+        if top is not None:
+            bottom = float(at[2] - self.machine.up_sign * body.below)
+            over = self.machine.up_sign * (bottom - top) > 0
+            heights = (bottom, top) if over else None
+        gap = np.asarray(shapely.get_coordinates(nearest))
+        return Meeting(finding.value, finding.limit, finding.what, finding.time, gap, heights)
+
+    def _payload(self, step: str | None) -> Payload | None:
+        """Return what hangs at the tool in a step."""
+        payload = None
+        for asked, own in zip(self.planned.job.cycle.steps, self.planned.steps, strict=True):
+            payload = asked if isinstance(asked, Payload) else payload
+            if own.name == step:
+                break
+        return payload
+
+    def _footprint(self, of: Tool | Payload) -> Array | None:
+        """Return a footprint, (n, 2); what a rotary axis turns counts as the circle it sweeps."""
+        radius = of.radius
+        if of.outline is not None:
+            corners = np.array(of.outline, dtype=np.float64)
+            if all(self.machine.linear):
+                return corners
+            radius = float(np.hypot(*corners.T).max())
+        if not radius:
+            return None
+        angle = np.linspace(0, 2 * np.pi, CORNERS, endpoint=False)
+        return radius * np.stack([np.cos(angle), np.sin(angle)], axis=1)
+
+    def _drawn(self) -> Iterator[Drawn]:
+        job = self.planned.job
+        for index, (asked, step) in enumerate(
+            zip(job.cycle.steps, self.planned.steps, strict=True)
+        ):
+            if isinstance(asked, PathStep):
+                start = self.planned.positions[index]
+                points = np.array([start, *job.points(index, start)])
+                yield Drawn(index, self.seen(points), asked.tolerance, step.start, step.end)
+            elif isinstance(asked, Trace):
+                yield from self._traced(index, asked)
+
+    def _traced(self, index: int, asked: Trace) -> Iterator[Drawn]:
+        """Yield the outlines of a drawing, as they are placed."""
+        step = self.planned.steps[index]
+        base = self.seen(np.array([self.planned.positions[index]]))[0]
+        if self.machine.up_axis is not None:
+            base[2] = asked.at.get(self.machine.up_axis, base[2])
+        outlines = self.planned.drawn[index].outlines
+        for outline, times in zip(outlines, step.tracing, strict=True):
+            error = FLATTENED * asked.tolerance or COARSE * max(outline.length, 1.0)
+            points = outline.pieces.flattened(error)[0].copy()
+            points[:, 2] = base[2] + self.machine.up_sign * points[:, 2]
+            start, end = step.start + times.enters, step.start + times.leaves
+            yield Drawn(index, points, asked.tolerance, start, end)
