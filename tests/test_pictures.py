@@ -299,7 +299,7 @@ def test_slowing_down_has_its_own_limit() -> None:
     """The belt is spared when it stops: the limit that is drawn must be that of the moment."""
     planned = sample("kiln-loader/cycle.toml")
     x = planned.job.machine.axes[0]
-    acceleration = curves_of(planned.trajectory, planned.job.machine.axes)[0][2]
+    acceleration = curves_of(planned)[0][2]
     times, values = acceleration.times, acceleration.values
     velocity = planned.trajectory.at(times, 1)[:, 0]
     slack = 1e-6 * x.limits.acceleration

@@ -5,6 +5,7 @@
 const plan = JSON.parse(document.getElementById("plan-data").textContent);
 const QUANTITIES = ["position", "velocity", "acceleration", "jerk"];
 const AT_LIMIT = 0.999;
+const STANDING = 1e-6;
 /* What moves with the time is drawn on a layer of its own: the rest need not be drawn again. */
 const OVER = { level: "overlay" };
 const LEAST = Math.min(1e-4, plan.duration || 1);
@@ -150,6 +151,7 @@ function rows(axis) {
     at: (when) => motion.at(axis, order, when),
     curve: (from, to, columns) => motion.curve(axis, order, from, to, columns),
     reached: (value, when) => order > 0 && reached(limits, order, value, motion.at(axis, 1, when)),
+    bounds: order !== 2 || limits.acceleration === limits.deceleration ? null : (when) => bounds(limits, motion.at(axis, 1, when)),
   }));
   for (const load of loads.filter((entry) => entry.axis === axis)) {
     found.push({
@@ -163,6 +165,13 @@ function rows(axis) {
 }
 
 function negative(limit) { return limit === null ? null : -limit; }
+
+/* What bounds an acceleration at a velocity: another limit where the axis slows down. */
+function bounds(limits, velocity) {
+  const up = velocity < -STANDING ? limits.deceleration : velocity > STANDING ? limits.acceleration : Math.max(limits.acceleration, limits.deceleration);
+  const down = velocity > STANDING ? limits.deceleration : velocity < -STANDING ? limits.acceleration : Math.max(limits.acceleration, limits.deceleration);
+  return [-down, up];
+}
 
 function reached(limits, order, value, velocity) {
   const name = order === 2 && value * velocity < 0 ? "deceleration" : QUANTITIES[order];
@@ -206,8 +215,15 @@ function curveFigure(axis, row, width, last) {
   figure.yaxis.formatter = new Bokeh.BasicTickFormatter({ power_limit_high: 7 });
   const forbidden = { fill_color: css("--beyond"), fill_alpha: 0.10, hatch_pattern: "/", hatch_color: css("--beyond"), hatch_alpha: 0.35, hatch_weight: 0.6, hatch_scale: 8, level: "underlay" };
   const line = { line_color: css("--beyond"), line_width: 1, line_dash: [5, 3] };
+  const moving = new Bokeh.ColumnDataSource({ data: { t: [], low: [], high: [], floor: [], sky: [] } });
+  if (row.bounds) {
+    for (const [limit, beyond] of [["low", "floor"], ["high", "sky"]]) {
+      figure.varea({ field: "t" }, { field: limit }, { field: beyond }, { source: moving, ...forbidden });
+      figure.line({ field: "t" }, { field: limit }, { source: moving, ...line, line_dash: "dashed" });
+    }
+  }
   for (const [side, limit] of [["bottom", row.high], ["top", row.low]]) {
-    if (limit === null) continue;
+    if (limit === null || row.bounds) continue;
     figure.add_layout(new Bokeh.BoxAnnotation({ [side]: limit, ...forbidden }));
     figure.add_layout(new Bokeh.Span({ location: limit, dimension: "width", ...line }));
   }
@@ -231,7 +247,7 @@ function curveFigure(axis, row, width, last) {
   figure.x_range.properties.end.change.connect(moved);
   figure.on_event("mousemove", (event) => { if (!state.playing) setNow(event.x); });
   figure.on_event("tap", (event) => setNow(event.x));
-  return { figure, row, axis, source, limit, mark, now, columns: Math.max(width - 80, 100) };
+  return { figure, row, axis, source, limit, moving, mark, now, columns: Math.max(width - 80, 100) };
 }
 
 function refresh(own) {
@@ -244,6 +260,10 @@ function refresh(own) {
     yMarked.push(y[i], y[i], NaN);
   }
   own.limit.data = { t: tMarked, y: yMarked };
+  if (own.row.bounds) {
+    const edges = t.map(own.row.bounds), far = 4 * own.row.high;
+    own.moving.data = { t, low: edges.map((edge) => edge[0]), high: edges.map((edge) => edge[1]), floor: t.map(() => -far), sky: t.map(() => far) };
+  }
   let low = Infinity, high = -Infinity;
   for (const value of y) { low = Math.min(low, value); high = Math.max(high, value); }
   if (state.toLimits && own.row.low !== null) { low = Math.min(low, own.row.low); high = Math.max(high, own.row.high); }

@@ -13,11 +13,14 @@ import numpy as np
 
 from profileplan.motion import polynomials
 from profileplan.report.curves import QUANTITIES, envelope
+from profileplan.report.loads import load_curves
 
 if TYPE_CHECKING:
     from profileplan.inputs import Axis
     from profileplan.motion.polynomials import Array, Flags, Indices
     from profileplan.motion.trajectory import Trajectory
+    from profileplan.report.loads import LoadCurve
+    from profileplan.results import PlannedCycle
 
 SAMPLES = 900
 """About as many values of a curve: more than paper shows. More pieces are a long motion."""
@@ -47,19 +50,21 @@ class Curve(NamedTuple):
     held: Flags
 
 
-def curves_of(trajectory: Trajectory, axes: tuple[Axis, ...]) -> tuple[tuple[Curve, ...], ...]:
-    """Return the curves of every axis: position, velocity, acceleration, jerk.
+def curves_of(planned: PlannedCycle) -> tuple[tuple[Curve, ...], ...]:
+    """Return the curves of every axis: position to jerk, and its loads where they are known.
 
     Parameters
     ----------
-    trajectory : Trajectory
-        Of those axes, in their order.
-    axes : tuple of Axis
+    planned : PlannedCycle
     """
+    trajectory, loads = planned.trajectory, load_curves(planned)
     samples = _long(trajectory) if trajectory.durations.size > SAMPLES else _short(trajectory)
     return tuple(
-        tuple(_curve(axis, title, samples[index][order]) for order, title in enumerate(QUANTITIES))
-        for index, axis in enumerate(axes)
+        (
+            *(_curve(axis, title, samples[index][k]) for k, title in enumerate(QUANTITIES)),
+            *(_load(own) for own in loads if own.axis == index),
+        )
+        for index, axis in enumerate(planned.job.machine.axes)
     )
 
 
@@ -151,6 +156,14 @@ def _curve(axis: Axis, title: str, samples: _Samples) -> Curve:
         limit = axis.limits.velocity if title == "velocity" else axis.limits.jerk
         low, high = np.full_like(values, -limit), np.full_like(values, limit)
     return Curve(title, unit, samples.times, values, low, high, reached(values, low, high))
+
+
+def _load(own: LoadCurve) -> Curve:
+    """Return a load with what limits it."""
+    limit = np.inf if own.limit is None else own.limit
+    low, high = np.full_like(own.values, -limit), np.full_like(own.values, limit)
+    held = reached(own.values, low, high)
+    return Curve(own.name, own.unit, own.times, own.values, low, high, held)
 
 
 def _bounds(axis: Axis, samples: _Samples) -> tuple[Array, Array]:

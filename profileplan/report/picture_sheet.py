@@ -134,7 +134,7 @@ def laid_out(planned: PlannedCycle) -> Sheet:
         top = _views(sheet, looks, top, VIEWS[blocks])
     top = _steps(sheet, planned, top)
     abreast = math.ceil(len(axes) / blocks)
-    curves = curves_of(planned.trajectory, axes)
+    curves = curves_of(planned)
     panels = _panels(curves)
     each = (size[1] - FOOT - top) / blocks
     for block in range(blocks):
@@ -340,7 +340,10 @@ def _draw_panel(axes: Axes, name: str, panel: _Panel, place: Place) -> None:
     """Draw a curve with its limits."""
     curve, unit = panel.curve, panel.curve.unit
     if panel.scale > 1:
-        unit = unit.removeprefix("m") if unit.startswith("mm") else f"1000 {unit}"
+        if unit.startswith("mm"):
+            unit = unit.removeprefix("m")
+        else:
+            unit = "kW" if unit == "W" else f"1000 {unit}"
     axes.set_ylim(panel.low, panel.high)
     ticked(axes.yaxis, panel.low, panel.high, place.high, panel.scale)
     if panel.aside and not np.any(curve.values):

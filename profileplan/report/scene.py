@@ -260,7 +260,8 @@ class Scene:
 
         there = self.seen(self.planned.trajectory.at(self.times))[:, :2]
         for own in followed:
-            inside = slice(*np.searchsorted(self.times, [own.start, own.end], side="left"))
+            first = np.searchsorted(self.times, own.start)
+            inside = slice(int(first), int(np.searchsorted(self.times, own.end, side="right")))
             line = shapely.linestrings(own.line[:, :2])
             way = shapely.line_locate_point(line, shapely.points(there[inside]))
             nearest = shapely.line_interpolate_point(line, way)
