@@ -8,6 +8,7 @@ const AT_LIMIT = 0.999;
 const STANDING = 1e-6;
 /* What moves with the time is drawn on a layer of its own: the rest need not be drawn again. */
 const OVER = { level: "overlay" };
+const AT_ONCE = 3;
 const LEAST = Math.min(1e-4, plan.duration || 1);
 const calm = matchMedia("(prefers-reduced-motion: reduce)");
 const coarse = matchMedia("(pointer: coarse)").matches;
@@ -458,13 +459,6 @@ function placeTool(own) {
 
 /* ---- one time for everything ---- */
 
-let asked = false;
-function later(work) {
-  if (asked) return;
-  asked = true;
-  requestAnimationFrame(() => { asked = false; work(); });
-}
-
 function setNow(when) {
   state.now = clamp(Number.isFinite(when) ? when : 0, 0, plan.duration);
   for (const own of figures) own.now.location = state.now;
@@ -509,9 +503,18 @@ function setRange(from, to) {
   state.to = start + span;
   for (const own of figures) own.stale = true;
   showWindow();
-  later(() => figures.filter((own) => own.visible).forEach(shift));
-  clearTimeout(setRange.waiting);
-  setRange.waiting = setTimeout(() => figures.forEach(shift), 300);
+  catchUp();
+}
+
+/* Draws stale figures a few a frame, those that are seen first, so that a drag stays smooth. */
+function catchUp() {
+  if (catchUp.due) return;
+  catchUp.due = requestAnimationFrame(() => {
+    catchUp.due = 0;
+    const stale = figures.filter((own) => own.stale).sort((one, other) => Number(other.visible) - Number(one.visible));
+    stale.slice(0, AT_ONCE).forEach(shift);
+    if (stale.length > AT_ONCE) catchUp();
+  });
 }
 
 /* Brings a figure to the stretch of time that is shown: at once where it is seen, else soon. */
