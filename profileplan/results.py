@@ -136,7 +136,8 @@ class PlannedCycle(Schedule):
         return self._findings
 
     def setpoints(
-        self, period: float | None = None, columns: Sequence[str] = tuple(setpoints.COLUMNS)
+        self, period: float | None = None, columns: Sequence[str] | None = None
     ) -> setpoints.SetpointTable:
-        """Return the setpoints at a period [s], as ``setpoints.sample`` does."""
-        return setpoints.sample(self, period=period, columns=columns)
+        """Return the setpoints at a period [s], as ``setpoints.sample`` does; default: all rates."""
+        wanted = tuple(setpoints.COLUMNS) if columns is None else columns
+        return setpoints.sample(self, period=period, columns=wanted)

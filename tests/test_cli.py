@@ -327,3 +327,11 @@ def test_output_that_is_lost_is_no_missed_requirement(target: str) -> None:
     )
     assert result.returncode in {0, 141} if target == "closed" else result.returncode == 141
     assert "Traceback" not in result.stderr
+
+
+def test_check_tells_notes_in_json_too() -> None:
+    """A script that reads JSON must see what was not judged, or how."""
+    result = run("check", LOADER, "--json")
+    notes = json.loads(result.stdout)["notes"]
+    assert notes
+    assert [f"note: {note}" for note in notes] == result.stderr.splitlines()

@@ -11,6 +11,7 @@ import os
 import signal
 import sys
 import time
+from importlib import import_module
 from pathlib import Path
 from typing import TYPE_CHECKING, NoReturn
 
@@ -32,8 +33,28 @@ PROGRESS_AFTER = 1.0
 """Time [s] before progress is shown."""
 
 
+HOMES = {
+    "plan": "jobs",
+    "check": "jobs",
+    "export": "exports",
+    "outline": "drawings",
+    "plot": "pictures",
+}
+"""Commands, as help lists them → the modules that add them to the group."""
+
+
 class Commands(click.Group):
-    """Turns this project's errors into a message and an exit status."""
+    """Loads a command when it is called, and turns this project's errors into a message."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:  # noqa: ARG002 - click's interface
+        """Return the names of all commands."""
+        return list(HOMES)
+
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
+        """Return a command; its module adds it."""
+        if cmd_name in HOMES:
+            import_module(f"profileplan.cli.{HOMES[cmd_name]}")
+        return super().get_command(ctx, cmd_name)
 
     def invoke(self, ctx: click.Context) -> object:
         """Run a command."""

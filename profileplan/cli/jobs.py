@@ -129,19 +129,21 @@ def check(  # noqa: PLR0913 - one parameter an option
             message = "--speed and --tolerance are for waypoints; this is a setpoint table"
             raise InputError([Fault("", message, source)])
         asked = (columns, points)
-        findings = _table_findings(source, machine, asked, talk=not (as_json or quiet))
+        findings, notes = _table_findings(source, machine, asked, talk=not (as_json or quiet))
     elif columns is not None or points is not None:
         message = "--columns and --points are for setpoint tables; this is none"
         raise InputError([Fault("", message, source)])
     else:
         job = job_of(source, machine, speed, tolerance)
-        findings = planned_of(job, talk=not (as_json or quiet)).check()
+        planned = planned_of(job, talk=not (as_json or quiet))
+        findings, notes = planned.check(), planned.notes
     met = all(finding.ok for finding in findings)
     if as_json:
         from profileplan import summary  # noqa: PLC0415
 
         checks = [summary.finding_values(finding) for finding in findings]
-        click.echo(summary.text({"requirements_met": met, "checks": checks}), nl=False)
+        values = {"requirements_met": met, "checks": checks, "notes": list(notes)}
+        click.echo(summary.text(values), nl=False)
     else:
         if not quiet:
             click.echo(tables.findings_table(findings), color=frame.color())
@@ -194,7 +196,7 @@ def _is_table(source: Path, machine: Path | None, columns: str | None) -> bool:
 
 def _table_findings(
     source: Path, machine: Path | None, asked: tuple[str | None, str | None], *, talk: bool
-) -> Sequence[Finding]:
+) -> tuple[Sequence[Finding], Sequence[str]]:
     """Judge a table, with progress, and say on stderr what is not judged, or how.
 
     ``asked``: the options --columns and --points.
@@ -209,11 +211,11 @@ def _table_findings(
     )
     with frame.Progress("checking", wanted=talk) as progress:
         judged = checks.judge_file(source, limits, manner=manner, progress=progress)
-    if judged.unjudged:
-        click.echo(f"note: not judged: {', '.join(judged.unjudged)}", err=True)
-    for note in judged.notes:
+    unjudged = [f"not judged: {', '.join(judged.unjudged)}"] if judged.unjudged else []
+    notes = [*unjudged, *judged.notes]
+    for note in notes:
         click.echo(f"note: {note}", err=True)
-    return judged.findings
+    return judged.findings, notes
 
 
 def _known_columns(columns: str) -> tuple[str, ...]:

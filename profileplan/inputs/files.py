@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 from typing import TYPE_CHECKING
 
 from profileplan.errors import Fault, InputError
@@ -46,6 +45,8 @@ def fingerprint(path: Path) -> str | None:
     path : Path
         The file.
     """
+    import hashlib  # noqa: PLC0415 - few jobs need it, and it is slow to load
+
     try:
         with path.open("rb") as stream:
             return hashlib.file_digest(stream, "sha256").hexdigest()

@@ -686,10 +686,12 @@ function act() {
   });
   let wide = innerWidth;
   window.addEventListener("resize", () => {
-    if (Math.abs(innerWidth - wide) < 24) return;
-    wide = innerWidth;
     clearTimeout(act.waiting);
-    act.waiting = setTimeout(rebuild, 250);
+    act.waiting = setTimeout(() => {
+      if (Math.abs(innerWidth - wide) < 24) return;
+      wide = innerWidth;
+      rebuild();
+    }, 250);
   });
 }
 

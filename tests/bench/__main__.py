@@ -83,8 +83,9 @@ def main() -> None:
         start_up = ratio(command("-m", "profileplan", "--help"), command(str(bare), "--help"))
         print(f"start-up over a bare click program         {start_up}  aim 1.5")
         job = str(ROOT / "samples/kiln-loader/cycle.toml")
+        table = str(Path(folder) / "setpoints.csv")
         sample = ratio(
-            command("-m", "profileplan", "plan", job, "-o", folder), command("-c", "import numpy")
+            command("-m", "profileplan", "export", job, "-o", table), command("-c", "import numpy")
         )
         print(f"plan and export of a sample / import numpy {sample}  aim 3")
     print(f"a million moves over sqrt and cbrt         {ratio(*batch(), runs=7)}  aim 60")
