@@ -138,6 +138,6 @@ class PlannedCycle(Schedule):
     def setpoints(
         self, period: float | None = None, columns: Sequence[str] | None = None
     ) -> setpoints.SetpointTable:
-        """Return the setpoints at a period [s], as ``setpoints.sample`` does; default: all rates."""
+        """Return the setpoints at a period [s], as ``setpoints.sample``; default: all rates."""
         wanted = tuple(setpoints.COLUMNS) if columns is None else columns
         return setpoints.sample(self, period=period, columns=wanted)

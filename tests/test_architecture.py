@@ -90,12 +90,12 @@ WITHIN = {
     "report": (
         "curves",
         "scene",
+        "loads",
         "picture_rows",
         "picture_style",
         "picture_views",
         "picture_sheet",
         "pictures",
-        "loads",
         "rows",
         "notebook",
         "page",

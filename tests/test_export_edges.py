@@ -66,16 +66,18 @@ jerk = 60000
 
 
 def test_cubics_over_a_limit_are_told(tmp_path: Path) -> None:
-    """The plan keeps its limits; what a drive makes of few points of it may not."""
+    """The plan keeps them; where points are held to ticks, cubics cannot, and the status is 1."""
     (tmp_path / "machine.toml").write_text(MACHINE)
     (tmp_path / "cycle.toml").write_text(JOB)
     words = ["export", str(tmp_path / "cycle.toml"), "-o", str(tmp_path / "t.csv")]
-    result = CliRunner().invoke(cli, [*words, "--points", "pvt", "--error", "0.5", "--json"])
-    assert result.exit_code == 0
+    result = CliRunner().invoke(
+        cli, [*words, "--points", "pvt", "--period", "0.004", "--error", "0.01", "--json"]
+    )
+    assert result.exit_code == 1
     reached = json.loads(result.stdout)["cubics"]["x"]["acceleration"]
     assert reached > 3000
     assert f"the drive's cubics reach {reached:.6g}, " in result.stderr
-    assert "over the limit of 3000: a smaller --error" in result.stderr
+    assert "over 3000; the limit is not kept" in result.stderr
 
 
 def test_a_link_in_a_circle_gives_way_to_the_table(tmp_path: Path) -> None:

@@ -443,12 +443,17 @@ def test_an_error_below_half_an_increment_is_refused_with_its_share(job: Path) -
 
 
 def test_points_are_kept_to_their_error_with_few_decimals(job: Path) -> None:
-    """What the dialect rounds counts too, and the share is told."""
+    """What the dialect rounds counts too, and the share is told.
+
+    These digits are too coarse for the accelerations of c, which the status and a note say.
+    """
     words = ["--points", "pvt", "--error", "0.02", "--decimals", "pos=2,vel=1"]
     words += ["--time", "ms", "--name", "x_pos_mm=X", "--comment", "points"]
     file = job.parent / "points.csv"
     result = run(job, file, *words)
-    assert result.exit_code == 0
+    assert result.exit_code == 1
+    assert "note: c acceleration: between points the drive's cubics reach" in result.stderr
+    assert "the limit is not kept; rounding, of positions to steps of 0.01 deg" in result.stderr
     assert "of which rounding up to 0.005;" in result.stdout
     comment, *lines = file.read_text().splitlines()
     assert comment == "# points"
@@ -540,7 +545,9 @@ def test_a_signal_while_writing_leaves_the_old_files(job: Path, name: str, sent:
             time.sleep(0.001)
         process.send_signal(sent)
         output, talk = process.communicate()
-    assert process.returncode == 130
+    # An interrupt in code that is made from text, as dataclasses are, has Python end itself by
+    # SIGINT after all is tidied up: a shell calls that 130 as well.
+    assert process.returncode in {130, -signal.SIGINT}
     assert output == ""
     assert talk.endswith("interrupted; no file is half-written\n")
     assert set(job.parent.iterdir()) == before

@@ -225,7 +225,7 @@ class AxisJudge:
         slow = SLOW * self._axis.limits.velocity + velocity + 3 * position / spans
         points = Points(rows[:, 0], rows[:, 1], spans, slow)
         found = cubics(points)
-        allowed = doubts(points, window.places.time[start:], columns)
+        allowed = doubts(points, window.places.time[start:], columns, most=self._most)
         if self._axis.jerk is not None:
             self._see_leaps(found, window.upto(len(rows)))
         follow = np.flatnonzero(spans < LONG)

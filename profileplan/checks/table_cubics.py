@@ -3,6 +3,14 @@
 It follows the cubic that has both at either end. Its acceleration is linear in time, so that all
 extremes are at roots of polynomials of degree two at most, and nothing between points is missed.
 
+Limits are judged as they stand: nothing is allowed but what rounding of positions and velocities
+explains. No more is unavoidable. A cubic from break to break of a plan of limited jerk is the plan
+itself; and one that has a peak of a smoother acceleration in its middle stays below it, for over a
+span h its acceleration is low by a twenty-fourth of h² times the fourth derivative there, and high
+by a twelfth only at its ends. Rounding of times is not allowed for, but for a nanosecond, the
+finest that times are written to: a point is where the table says at the time that the table says,
+whatever motion it was taken from.
+
 Source: de Boor: A Practical Guide to Splines (2001), chapter IV, for the cubics (from memory).
 """
 
@@ -22,6 +30,9 @@ if TYPE_CHECKING:
 
 LONG = 1e6
 """Time [s] that is taken for a step backward in time, so that nothing is told of it."""
+
+NANOSECOND = 1e-9
+"""The finest that times are written to [s]: by half of it a change of acceleration is missed."""
 
 PIECES = 16
 """Straight lines in place of a cubic, where the clearance is judged."""
@@ -97,12 +108,16 @@ def cubics(points: Points) -> Cubics:
     )
 
 
-def doubts(points: Points, times: Array, columns: tuple[int, int]) -> tuple[Doubt, ...]:
+def doubts(
+    points: Points, times: Array, columns: tuple[int, int], *, most: float
+) -> tuple[Doubt, ...]:
     """Return what rounding makes of the positions of cubics and their first three derivatives.
 
     Let both positions be off by p and both velocities by v, over a time h. Then the cubic is off by
     p + v h / 4 at most, since the weights of the velocities are u (1 - u)² and u² (1 - u); its
-    derivatives by 3 p / h + v, 12 p / h² + 6 v / h and 24 p / h³ + 12 v / h².
+    derivatives by 3 p / h + v, 12 p / h² + 6 v / h and 24 p / h³ + 12 v / h². A change from an
+    acceleration a to its opposite that is missed by half a nanosecond adds a times a nanosecond to
+    the velocity.
 
     Parameters
     ----------
@@ -110,13 +125,15 @@ def doubts(points: Points, times: Array, columns: tuple[int, int]) -> tuple[Doub
     times : (n,) array [s]
     columns : (int, int)
         Those of position and velocity.
+    most : float
+        The greatest acceleration of the axis.
     """
     span = points.spans
     far = np.maximum(np.abs(points.position[:-1]), np.abs(points.position[1:]))
     fast = np.maximum(np.abs(points.velocity[:-1]), np.abs(points.velocity[1:]))
     late = np.spacing(np.abs(times[1:]))
     place = FLOAT_ROUNDING * (np.spacing(far) + late * fast)
-    speed = FLOAT_ROUNDING * np.spacing(fast)
+    speed = FLOAT_ROUNDING * np.spacing(fast) + NANOSECOND * most
     weights = [
         (np.ones(span.size), span / 4),
         (3 / span, np.ones(span.size)),

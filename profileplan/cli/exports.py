@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import re
 from contextlib import contextmanager
+from dataclasses import replace
+from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING, NamedTuple
 
@@ -25,12 +27,16 @@ from profileplan.errors import Fault, InputError
 if TYPE_CHECKING:
     from collections.abc import Collection, Iterator, Mapping, Sequence
 
-    from profileplan.inputs import Drive, Job, Machine
+    from profileplan.inputs import Axis, Drive, Job, Machine
     from profileplan.planning import Plan
     from profileplan.setpoints import Content, Dialect, Noise, Part, PvtTable
 
-PEAK_TOLERANCE = 1e-6
-"""Share of a limit that cubics may pass it by unsaid: what usual decimals of velocities round."""
+PEAK_TOLERANCE = 1e-5
+"""Share of a limit that cubics may pass it by unsaid, if rounding explains it: where points can be
+found that need no more than that, they are taken."""
+
+NANOSECOND = 1e-9
+"""Between such times points stand, if not on ticks [s]."""
 
 PARTS_TOLD = 3
 """Parts that begin in motion that are named; of more the number is told."""
@@ -69,7 +75,10 @@ PARTS_TOLD = 3
     type=click.Choice(["ticks", "pvt"]),
     default="ticks",
     show_default=True,
-    help="A row a tick; or few uneven points with position and velocity, cubics between them.",
+    help="A row a tick; or few uneven points with position and velocity, and cubics between them "
+    "that keep the limits but for what rounding explains, 1 % at most. These stand at whole "
+    "nanoseconds; or on ticks, if --period is given or times are ticks, where a limit may be "
+    "passed. If one is, the status is 1.",
 )
 @click.option(
     "--error",
@@ -136,13 +145,15 @@ def export(  # noqa: PLR0913 - one parameter an option
         _judge_names(planned, content, dialect, given.get("names"))
         order = _Order(planned, output, content, dialect, talk)
         if points == "pvt":
+            # What the machine file says is the period of ticks; points need none.
+            order = order._replace(content=replace(content, period=period))
             told = _write_points(order, 0.001 if error is None else error, longest)
         else:
             told = _write_ticks(order, form)
-    tell_unplayed(planned, content.period)
+            tell_unplayed(planned, content.period)
     _tell_joins(told.parts)
     _tell(told, planned, as_json=as_json, quiet=quiet)
-    frame.finish(met=all(finding.ok for finding in planned.check()))
+    frame.finish(met=told.kept and all(finding.ok for finding in planned.check()))
 
 
 class _Order(NamedTuple):
@@ -161,11 +172,12 @@ class _Order(NamedTuple):
 
 
 class _Told(NamedTuple):
-    """What was written, and what is said of it."""
+    """What was written, what is said of it, and whether it keeps the limits."""
 
     parts: tuple[Part, ...]
     more: str
     values: dict[str, object]
+    kept: bool = True
 
 
 def _form(output: Path, points: str) -> str:
@@ -341,16 +353,26 @@ def _write_points(order: _Order, error: float, longest: float | None) -> _Told:
         )
     with frame.Progress("writing setpoints", wanted=talk) as progress:
         parts = setpoints.write_pvt(planned, found, output, kept=order.kept, progress=progress)
-    _tell_peaks(found, planned.job)
-    return _Told(parts, f"{_distance(found, planned.job)}; ", _distances(found))
+    for place, axis in enumerate(planned.job.machine.axes):
+        _tell_peaks(found, place, axis)
+        _tell_leaps(found, place, axis, planned.job.machine.setpoints.period)
+    _tell_lost(planned, found)
+    return _Told(parts, f"{_distance(found, planned.job)}; ", _distances(found), found.kept)
 
 
 def _distances(found: PvtTable) -> dict[str, object]:
     return {
         "error": dict(zip(found.axes, found.error.tolist(), strict=True)),
         "rounding_share": dict(zip(found.axes, found.rounding.tolist(), strict=True)),
+        "limits_kept": found.kept,
         "cubics": {
             axis: {quantity: float(values[place]) for quantity, values in found.peaks.items()}
+            | {
+                "leap": float(found.leaps[place]),
+                "over_limit": {name: float(own[place]) for name, own in found.excess.items()},
+                "explained": {name: float(own[place]) for name, own in found.explained.items()},
+                "kept": not any(own[place] for own in found.broken.values()),
+            }
             for place, axis in enumerate(found.axes)
         },
     }
@@ -366,21 +388,62 @@ def _distance(found: PvtTable, job: Job) -> str:
     )
 
 
-def _tell_peaks(found: PvtTable, job: Job) -> None:
-    """Say on stderr where the cubics between points pass a limit."""
-    for place, axis in enumerate(job.machine.axes):
-        limits = axis.limits._asdict()
-        excess = {
-            quantity: float(values[place]) / limits[quantity] - 1
-            for quantity, values in found.peaks.items()
-        }
-        worst = max(excess, key=lambda quantity: excess[quantity])
-        if excess[worst] > PEAK_TOLERANCE:
+def _tell_peaks(found: PvtTable, place: int, axis: Axis) -> None:
+    """Say on stderr which limit of an axis the cubics between points pass by most, if any."""
+    broken = [name for name, axes in found.broken.items() if axes[place]]
+    worst = max(broken or found.excess, key=lambda name: float(found.excess[name][place]))
+    share, explained = found.excess[worst][place], found.explained[worst][place]
+    if not broken and share <= PEAK_TOLERANCE:
+        return
+    reached = f"leave it by {100 * share:.2g} % of its length"
+    if worst in found.peaks:
+        limit = axis.limits._asdict()[worst]
+        reached = f"reach {found.peaks[worst][place]:.6g}, {100 * share:.2g} % over {limit:g}"
+    steps = "increments" if axis.name in found.content.drives else "steps"
+    steps = f"rounding, of positions to {steps} of {2 * found.rounding[place]:.3g} {axis.unit},"
+    if not broken:
+        verdict = f"{steps} explains it: finer steps make it less"
+    elif found.tick == NANOSECOND:
+        verdict = (
+            f"the limit is not kept; {steps} explains up to {100 * explained:.2g} %: take finer "
+            "ones, or a greater --error, so that points are farther apart"
+        )
+    else:
+        verdict = (
+            f"the limit is not kept; {steps} explains {100 * explained:.2g} %. Points off ticks "
+            "keep it: leave out --period and --interpolation, and tell the time in s, ms or us"
+        )
+    click.echo(
+        f"note: {axis.name} {worst}: between points the drive's cubics {reached}; {verdict}",
+        err=True,
+    )
+
+
+def _tell_leaps(found: PvtTable, place: int, axis: Axis, period: float) -> None:
+    """Say on stderr where an acceleration leaps by more than the jerk limit allows in a tick."""
+    leap = float(found.leaps[place])
+    if axis.jerk is not None and leap > axis.jerk * period:
+        click.echo(
+            f"note: {axis.name} jerk: where cubics meet the acceleration leaps by up to "
+            f"{leap:.4g} {axis.unit}/s²; played in a tick of {period:g} s that is "
+            f"{leap / period / axis.jerk:.2g} times the jerk limit: a smaller --error makes it "
+            "less",
+            err=True,
+        )
+
+
+def _tell_lost(planned: Plan, found: PvtTable) -> None:
+    """Say on stderr which signals change back before a point shows them."""
+    if found.tick != NANOSECOND:
+        tell_unplayed(planned, found.tick)
+        return
+    for name in planned.signals:
+        times = [event.time for event in planned.events if event.signal == name]
+        lost = sum(after - before < NANOSECOND for before, after in pairwise(times))
+        if lost:
             click.echo(
-                f"note: {axis.name} {worst}: between points the drive's cubics reach "
-                f"{found.peaks[worst][place]:.6g}, {100 * excess[worst]:.2g} % over the limit of "
-                f"{limits[worst]:g}: a smaller --error brings them nearer to the plan; else leave "
-                "that reserve in the limits",
+                f"note: {name} changes and changes back at once, {lost} times: the table does "
+                "not show it",
                 err=True,
             )
 

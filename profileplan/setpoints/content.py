@@ -131,9 +131,24 @@ class Source:
     InputError
         A period out of range, a table too long, drives that cannot play it, headings that are
         used twice, forces or torques of which nothing is known.
+
+    Parameters
+    ----------
+    schedule : Schedule
+    content : Content
+    dialect : Dialect
+    nanoseconds : int, optional
+        What times count, where it is not the period.
     """
 
-    def __init__(self, schedule: Schedule, content: Content, dialect: Dialect) -> None:
+    def __init__(
+        self,
+        schedule: Schedule,
+        content: Content,
+        dialect: Dialect,
+        *,
+        nanoseconds: int | None = None,
+    ) -> None:
         self.sampler = Sampler(schedule, period=content.period, columns=content.columns)
         self.count = self.sampler.count
         if self.count > MOST_ROWS:
@@ -145,8 +160,9 @@ class Source:
         if content.drives:
             judge_drives(schedule, content.drives)
         self._axes = schedule.job.machine.axis_names
-        self.fields = table_fields(schedule, content, dialect, self.sampler.nanoseconds)
-        self._per_time, _ = _time_scale(self.sampler.nanoseconds, dialect)
+        nanoseconds = nanoseconds or self.sampler.nanoseconds
+        self.fields = table_fields(schedule, content, dialect, nanoseconds)
+        self._per_time, _ = _time_scale(nanoseconds, dialect)
 
     def numbers(self, rows: range) -> list[Numbers]:
         """Return the numbers of each column in some rows, counted from 0."""

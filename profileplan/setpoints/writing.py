@@ -42,7 +42,9 @@ class _Points:
 
     def __init__(self, schedule: Schedule, points: PvtTable) -> None:
         self._points = points
-        self._source = Source(schedule, points.content, points.dialect)
+        self._source = Source(
+            schedule, points.content, points.dialect, nanoseconds=round(points.tick * 1e9)
+        )
         self.fields = self._source.fields
         self.count = points.ticks.size
 
