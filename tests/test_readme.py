@@ -83,7 +83,7 @@ def test_the_two_commands_do_all_set_up() -> None:
     commands = re.findall(r"^python3 -m venv .*$", README.read_text(encoding="utf-8"), re.MULTILINE)
     assert len(commands) == 2
     assert "profileplan plan" in commands[0]
-    assert commands[1].endswith("-m pytest")
+    assert commands[1].endswith("-m pytest -n auto --dist loadfile")
 
 
 if __name__ == "__main__":
