@@ -8,14 +8,16 @@ the longest of HOURS (default 0.25) of three axes at 4 kHz.
 
 from __future__ import annotations
 
+import statistics
 import subprocess
 import sys
 import tempfile
 import time
+from functools import partial
 from importlib import import_module
 from importlib.util import find_spec
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TypeAlias
 
 import numpy as np
 
@@ -30,7 +32,7 @@ if TYPE_CHECKING:
 
 PERIOD = 0.00025
 DECIMALS = 6
-RUNS = 3
+RUNS = 9
 SECONDS = 125
 CONTENT = setpoints.Content(tuple(setpoints.COLUMNS), period=PERIOD)
 
@@ -58,7 +60,10 @@ def table_of(plan: pp.Plan) -> Array:
     return np.concatenate(parts, axis=1)
 
 
-def own(numbers: Array, file: Path) -> None:
+Writer: TypeAlias = "Callable[[Path], object]"
+
+
+def own(numbers: Array) -> Writer:
     """Write by lookup of digits, on as many threads as the tables."""
     cells = [digits.Cell(b"," if column else b"", DECIMALS) for column in range(numbers.shape[1])]
     columns = [np.ascontiguousarray(column) for column in numbers.T]
@@ -66,43 +71,51 @@ def own(numbers: Array, file: Path) -> None:
     def text(rows: range) -> bytes:
         return digits.text([column[rows.start : rows.stop] for column in columns], cells, b"\n")
 
-    with file.open("wb") as stream:
-        for part in pace.in_order(text, pace.blocks(range(len(numbers)))):
-            stream.write(part)
+    def write(file: Path) -> None:
+        with file.open("wb") as stream:
+            for part in pace.in_order(text, pace.blocks(range(len(numbers)))):
+                stream.write(part)
+
+    return write
 
 
-def by_polars(numbers: Array, file: Path) -> None:
+def by_polars(numbers: Array) -> Writer:
     """Write with polars."""
     frame = import_module("polars").DataFrame(numbers)
-    frame.write_csv(file, include_header=False, float_precision=DECIMALS)
+    return partial(frame.write_csv, include_header=False, float_precision=DECIMALS)
 
 
-def by_pyarrow(numbers: Array, file: Path) -> None:
+def by_pyarrow(numbers: Array) -> Writer:
     """Write with pyarrow, which knows no number of decimals: all digits of each number."""
     arrow, writer = import_module("pyarrow"), import_module("pyarrow.csv")
     names = [str(column) for column in range(numbers.shape[1])]
     table = arrow.table([np.ascontiguousarray(column) for column in numbers.T], names=names)
-    writer.write_csv(table, file, writer.WriteOptions(include_header=False))
+    options = writer.WriteOptions(include_header=False)
+    return lambda file: writer.write_csv(table, file, options)
 
 
-def by_pandas(numbers: Array, file: Path) -> None:
+def by_pandas(numbers: Array) -> Writer:
     """Write with pandas."""
     frame = import_module("pandas").DataFrame(numbers)
-    frame.to_csv(file, header=False, index=False, float_format=f"%.{DECIMALS}f")
+    return partial(frame.to_csv, header=False, index=False, float_format=f"%.{DECIMALS}f")
 
 
-def by_numpy(numbers: Array, file: Path) -> None:
+def by_numpy(numbers: Array) -> Writer:
     """Write with numpy."""
-    np.savetxt(file, numbers, fmt=f"%.{DECIMALS}f", delimiter=",")
+    return lambda file: np.savetxt(file, numbers, fmt=f"%.{DECIMALS}f", delimiter=",")
 
 
-WRITERS: dict[str, tuple[Callable[[Array, Path], None], str | None]] = {
+WRITERS: dict[str, tuple[Callable[[Array], Writer], str | None]] = {
     "own": (own, None),
     "polars": (by_polars, "polars"),
     "pyarrow": (by_pyarrow, "pyarrow"),
     "pandas": (by_pandas, "pandas"),
     "numpy.savetxt": (by_numpy, None),
 }
+"""Writer → what makes it of a table, each in the form that it likes best, and its library."""
+
+QUICK = ("own", "polars", "pyarrow")
+"""Writers that get the whole table; the others get a part of it."""
 
 
 def rates(plan: pp.Plan, folder: Path) -> None:
@@ -110,20 +123,27 @@ def rates(plan: pp.Plan, folder: Path) -> None:
     numbers = table_of(plan)
     # Others write what rounds to zero from below with a sign.
     numbers[np.abs(numbers) <= 0.5 * 10.0**-DECIMALS] = 0.0
-    print(f"{len(numbers)} rows of {numbers.shape[1]} columns, rows/s, best of {RUNS}")
-    best = dict.fromkeys(WRITERS, np.inf)
+    print(f"{len(numbers)} rows of {numbers.shape[1]} columns, rows/s, median of {RUNS} in turn")
+    parts = {name: numbers if name in QUICK else numbers[:50_000] for name in WRITERS}
+    ready = {
+        name: make(parts[name])
+        for name, (make, library) in WRITERS.items()
+        if library is None or find_spec(library)
+    }
+    taken: dict[str, list[float]] = {name: [] for name in ready}
     for _ in range(RUNS):
-        for name, (writer, library) in WRITERS.items():
-            if library is None or find_spec(library):
-                part = numbers if name in ("own", "polars", "pyarrow") else numbers[:50_000]
-                start = time.perf_counter()
-                writer(part, folder / name)
-                best[name] = min(best[name], (time.perf_counter() - start) / len(part))
-    for name, duration in best.items():
-        print(f"  {name:30} {1 / duration:12,.0f}")
-    if find_spec("polars"):
+        for name, write in ready.items():
+            start = time.perf_counter()
+            write(folder / name)
+            taken[name].append(time.perf_counter() - start)
+    for name, durations in taken.items():
+        print(f"  {name:30} {len(parts[name]) / statistics.median(durations):12,.0f}")
+    if "polars" in taken:
+        ratio = statistics.median(
+            other / one for one, other in zip(taken["own"], taken["polars"], strict=True)
+        )
         same = (folder / "own").read_bytes() == (folder / "polars").read_bytes()
-        print(f"  own and polars: {'the same bytes' if same else 'bytes differ'}")
+        print(f"  own over polars {ratio:.2f}; {'the same bytes' if same else 'bytes differ'}")
     sampler = setpoints.sampling.Sampler(plan, period=PERIOD)
     start = time.perf_counter()
     for rows in pace.blocks(range(sampler.count)):
