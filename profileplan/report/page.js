@@ -527,8 +527,8 @@ function shift(own) {
 
 const watcher = new IntersectionObserver((entries) => {
   for (const entry of entries) {
-    entry.target.own.visible = entry.isIntersecting;
-    if (entry.isIntersecting) shift(entry.target.own);
+    for (const own of entry.target.added) own.visible = entry.isIntersecting;
+    if (entry.isIntersecting) catchUp();
   }
 });
 
@@ -596,21 +596,25 @@ async function build() {
     const place = $(`curves-${axis}`);
     place.replaceChildren();
     const added = axisRows[axis].map((row, k) => curveFigure(axis, row, place.clientWidth, k === axisRows[axis].length - 1));
-    for (const own of added) {
-      refresh(own);
-      figures.push(own);
-      const holder = Object.assign(document.createElement("div"), { own });
-      watcher.observe(holder);
-      place.append(holder);
-      await Bokeh.Plotting.show(own.figure, holder);
-    }
-    if (axis === 0) document.documentElement.dataset.ready = "first";
+    added.forEach(refresh);
+    figures.push(...added);
+    watcher.observe(Object.assign(place, { added }));
+    await Bokeh.Plotting.show(added.map((own) => own.figure), place);
+    if (axis === 0) ready("first");
+    // What is ready is painted before more is made.
+    await new Promise((done) => requestAnimationFrame(() => setTimeout(done)));
   }
   setNow(state.now);
   const marked = state.mark;
   state.mark = null;
   if (marked) mark(marked);
-  document.documentElement.dataset.ready = "all";
+  ready("all");
+}
+
+/* Tells whoever looks how far the page is, and when it got there. */
+function ready(state) {
+  document.documentElement.dataset.ready = state;
+  performance.mark(`ready ${state}`);
 }
 
 let building = Promise.resolve();
