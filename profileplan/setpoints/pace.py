@@ -14,7 +14,7 @@ Job = TypeVar("Job")
 Result = TypeVar("Result")
 
 ROWS_AT_A_TIME = 24_576
-"""Rows that are sampled and written together: more do not stay in the cache; with fewer, threads wait
+"""Rows that are sampled and written together: more do not stay in the cache; with fewer threads wait
 for each other between calls."""
 
 MOST_WORKERS = 2
