@@ -14,8 +14,8 @@ Job = TypeVar("Job")
 Result = TypeVar("Result")
 
 ROWS_AT_A_TIME = 24_576
-"""Rows that are sampled and written together: more do not stay in the cache; with fewer threads wait
-for each other between calls."""
+"""Rows that are sampled and written together. More do not stay in the cache; with fewer, threads
+wait for each other between calls."""
 
 MOST_WORKERS = 2
 """Threads that make rows: part of the work is not done in parallel, so more gain little."""
