@@ -116,8 +116,8 @@ def loads(schedule: Schedule) -> tuple[AxisLoad, ...]:
     Returns
     -------
     tuple of AxisLoad
-        In file order. Extremes at a jump are those of either side; before and after each step the
-        axes stand, and bear their weight.
+        In file order. Extremes at a jump are those of either side; before and after each step, and
+        when the cycle is over, the axes stand and bear their weight.
     """
     machine = schedule.job.machine
     motion = _Motion(schedule)
@@ -377,9 +377,10 @@ class _Motion:
         self.coefficients = trajectory.coefficients
         self.borne = _borne(schedule)
         lasting = [step for step in schedule.steps if step.duration > 0] or schedule.steps[:1]
-        self.names = [step.name for step in lasting]
+        # Behind the last piece the axes stand in the last step, with what hangs at the tool then.
+        self.names = [*(step.name for step in lasting), schedule.steps[-1].name]
         self.owners = np.repeat(
-            np.arange(len(lasting)), [step.trajectory.durations.size for step in lasting]
+            np.arange(len(self.names)), [*(step.trajectory.durations.size for step in lasting), 1]
         )
 
     def instant(self, value: float, at: float, piece: int) -> Instant:
@@ -488,9 +489,9 @@ def _parts_of_one_direction(motion: _Motion, model: _Model) -> _Parts:
 
 
 def _standstills(motion: _Motion) -> _Parts:
-    """Return the instants before and after each step, at which all axes stand."""
+    """Return the instants before and after each step and after the cycle, when all axes stand."""
     firsts = np.flatnonzero(np.diff(motion.owners, prepend=-1))
-    lasts = np.append(firsts[1:], motion.owners.size) - 1
+    lasts = firsts[1:] - 1
     pieces = np.concatenate([firsts, lasts])
     at = np.concatenate([np.zeros(firsts.size), motion.lengths[lasts]])
     still = np.zeros((pieces.size, ORDER - 1))

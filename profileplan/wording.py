@@ -92,9 +92,10 @@ def required(finding: Finding) -> str:
 def amiss(finding: Finding) -> str:
     """Return in a line how a requirement is not met, and where."""
     allowed = "at least" if finding.value < finding.limit else "allowed"
+    where = at(finding)
     return (
         f"{required(finding)}: {finding.value:.6g} {finding.unit}, "
-        f"{allowed} {finding.limit:.6g} {finding.unit}, {at(finding)}"
+        f"{allowed} {finding.limit:.6g} {finding.unit}{where and f', {where}'}"
     )
 
 

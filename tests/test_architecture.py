@@ -54,6 +54,7 @@ WITHIN = {
         "motors",
         "schedules",
         "table_extremes",
+        "table_digits",
         "table_cubics",
         "table_turns",
         "table_twins",
@@ -86,7 +87,7 @@ WITHIN = {
         "deviation",
         "trace",
     ),
-    "cli": ("frame", "tables", "jobs", "settings", "exports", "drawings", "pictures"),
+    "cli": ("frame", "tables", "settings", "jobs", "exports", "drawings", "pictures"),
     "report": (
         "curves",
         "scene",

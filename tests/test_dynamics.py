@@ -369,15 +369,16 @@ def test_extremes_and_means_of_any_polynomials_are_those_of_samples(
 
 
 def test_a_schedule_that_takes_no_time_has_the_load_of_standstill() -> None:
-    """Nothing is divided by its duration."""
+    """Nothing is divided by its duration; both ends of the rest and what hangs then count alike."""
     own = machine(pp.Mechanics(mass=10.0, lead=20.0), up="+x")
     planned = plan(own, pp.Wait(1.0), pp.Payload(2.0))
     rest = pp.Trajectory.rest(("x",), np.zeros(1))
     held = replace(planned, steps=tuple(replace(one, trajectory=rest) for one in planned.steps))
     found = load(held)
     assert found.force is not None
-    assert_allclose([one.value for one in found.force], 10.0 * G, rtol=EXACT)
-    assert_allclose(found.rms_force or 0.0, 10.0 * G, rtol=EXACT)
+    assert_allclose([one.value for one in found.force], [10.0 * G, 12.0 * G], rtol=EXACT)
+    mean = math.sqrt((10.0**2 + 10.0**2 + 12.0**2) / 3) * G
+    assert_allclose(found.rms_force or 0.0, mean, rtol=EXACT)
     assert_allclose(pp.forces(held, [0.0, 1.0])["x"], 12.0 * G, rtol=EXACT)
 
 
@@ -467,6 +468,17 @@ def test_a_payload_weighs_on_the_up_axis_and_only_while_it_hangs() -> None:
     # What is put down when all is over is gone in the last row, which stands at the end.
     table = pp.sample(plan(own, *steps[:4]), period=0.5, columns=("force",))
     assert_allclose(table.force["x"], expected[[0, 0, 1, 2, 3]], rtol=EXACT)
+
+
+def test_a_payload_that_hangs_when_all_is_over_is_borne() -> None:
+    """A table's last row has it, so it is judged too; but it takes no time of the cycle."""
+    own = machine(pp.Mechanics(mass=10.0), up="+x")
+    held = load(plan(own, pp.Wait(1.0), pp.Payload(3.0)))
+    assert held.peak_force is not None
+    assert held.rms_force is not None
+    assert_allclose(held.peak_force.value, 13.0 * G, rtol=EXACT)
+    assert (held.peak_force.time, held.peak_force.step) == (1.0, "payload 2")
+    assert_allclose(held.rms_force, 10.0 * G, rtol=EXACT)
 
 
 def test_a_payload_presses_on_the_guides() -> None:

@@ -16,6 +16,7 @@ from profileplan import setpoints
 from profileplan.cli import cli
 from profileplan.inputs import Drive
 from profileplan.setpoints import Content
+from profileplan.setpoints.pace import NUMBERS_AT_A_TIME, blocks
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -90,3 +91,47 @@ def test_a_link_in_a_circle_gives_way_to_the_table(tmp_path: Path) -> None:
     assert result.exit_code == 0, result.output
     assert link.is_file()
     assert not link.is_symlink()
+
+
+MOTOR = """
+[axes.x.mechanics]
+mass = 100
+lead = 20
+[axes.x.motor]
+peak_torque = 0.1
+"""
+
+
+@pytest.mark.parametrize("words", [["export", "-o", "t.csv"], ["plan"]])
+def test_what_is_not_met_is_told_beside_the_verdict(tmp_path: Path, words: list[str]) -> None:
+    """A status of 1 without a word leaves one guessing; the cycle time alone says nothing of it."""
+    (tmp_path / "machine.toml").write_text(MACHINE + MOTOR)
+    (tmp_path / "cycle.toml").write_text(JOB)
+    words = [str(tmp_path / word) if word == "t.csv" else word for word in words]
+    result = CliRunner().invoke(cli, [*words, str(tmp_path / "cycle.toml"), "--quiet"])
+    assert result.exit_code == 1
+    assert "NOT MET: x peak torque: " in result.stderr
+    assert "allowed 0.1 N·m, move 1 at " in result.stderr
+
+
+def test_drives_that_cannot_play_a_cycle_are_told_with_their_file(tmp_path: Path) -> None:
+    """Each counter by its name."""
+    drive = '[axes.x.drive]\nincrements = 2_000_000_000\nlead = 20\nalso = "x2"\n'
+    (tmp_path / "machine.toml").write_text(MACHINE + drive)
+    (tmp_path / "cycle.toml").write_text(JOB)
+    words = ["export", str(tmp_path / "cycle.toml"), "-o", str(tmp_path / "t.csv")]
+    result = CliRunner().invoke(cli, [*words, "--units", "increments"])
+    assert result.exit_code == 2
+    place = f"error: {tmp_path / 'machine.toml'}: axes.x.drive: "
+    assert result.stderr.count(place) == 2
+    assert f"{place}x2 counts up to 30000000000 increments" in result.stderr
+    assert not (tmp_path / "t.csv").exists()
+
+
+def test_tables_with_many_columns_are_made_in_lower_blocks() -> None:
+    """So that memory is bounded by numbers and not by rows."""
+    rows = range(7, 100_000)
+    for columns in (1, 13, 121, 10**7):
+        made = list(blocks(rows, columns))
+        assert [row for some in made for row in some] == list(rows)
+        assert max(len(some) * columns for some in made) <= max(NUMBERS_AT_A_TIME, columns)

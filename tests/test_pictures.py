@@ -361,7 +361,7 @@ def test_speed_is_told_by_width_as_well_as_by_colour() -> None:
     assert looks.levels.max() == LEVELS - 1
     times = np.linspace(0.0, planned.duration, 100_001)
     fastest = np.linalg.norm(planned.trajectory.at(times, 1), axis=1).max()
-    assert_allclose(looks.top_speed, fastest, 1e-4)
+    assert_allclose(looks.scene.top_speed, fastest, 1e-4)
     shares = COLOURS[:, :3]
     light = np.where(shares <= 0.03928, shares / 12.92, ((shares + 0.055) / 1.055) ** 2.4)
     luminance = light @ [0.2126, 0.7152, 0.0722]

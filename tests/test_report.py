@@ -17,6 +17,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from click.testing import CliRunner
+from ezdxf.filemanagement import new
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
@@ -24,6 +25,7 @@ from numpy.testing import assert_allclose
 import profileplan as pp
 from profileplan.cli import cli
 from profileplan.report import brief, curves
+from profileplan.report import page as page_module
 from profileplan.report.page import page
 from profileplan.report.scene import Scene
 
@@ -306,3 +308,61 @@ def test_heights_are_seen_as_the_machine_counts_them() -> None:
     scene = Scene(pp.plan(machine, cycle))
     assert [(side.name, side.falls) for side in scene.sides] == [("plan", False), ("side", True)]
     assert_allclose(scene.extent[:, 2], [0, 100], atol=1e-9)
+
+
+def test_many_short_steps_are_in_the_timeline_together() -> None:
+    """Of thousands of steps each is too narrow to be seen; none may be missing from the row."""
+    plan = shuttle(1200)
+    (lane,) = page_module.lanes(plan, Scene(plan))
+    assert len(lane.blocks) <= page_module.MOST_BLOCKS
+    covered = sum(block.end - block.start for block in lane.blocks)
+    assert covered == pytest.approx(plan.duration)
+    assert "move 1 … " in lane.blocks[0].text
+
+
+def test_a_long_way_is_drawn_where_the_motion_is() -> None:
+    """Few instants must not cut corners: between two of them the way is straight, by numpy."""
+    axes = tuple(
+        pp.Axis(name, travel=(0, 500), velocity=900, acceleration=9000, jerk=300_000)
+        for name in "xy"
+    )
+    steps = tuple(
+        pp.Move({"x": 400.0 * (k % 2), "y": 10.0 + 7 * (k % 50)}, name=f"go {k}")
+        for k in range(1, 701)
+    )
+    plan = pp.plan(pp.Machine("wide", axes), pp.Cycle(steps=steps, start={"x": 0.0, "y": 0.0}))
+    scene = Scene(plan)
+    assert 2 * len(steps) < scene.times.size < 40 * len(steps)
+    corners = scene.seen(plan.trajectory.at(scene.times))[:, :2]
+    times = np.linspace(0, plan.duration, 20_001)
+    first = np.clip(np.searchsorted(scene.times, times, side="right") - 1, 0, corners.shape[0] - 2)
+    way = corners[first + 1] - corners[first]
+    off = scene.seen(plan.trajectory.at(times))[:, :2] - corners[first]
+    length = np.maximum(np.linalg.norm(way, axis=1), 1e-12)
+    apart = np.abs(way[:, 0] * off[:, 1] - way[:, 1] * off[:, 0]) / length
+    assert apart.max() < 1e-3 * scene.size
+    assert "A long cycle" not in read(page(plan)).text, "the polynomials are all there"
+
+
+def test_a_very_short_cycle_is_told_in_digits() -> None:
+    """Half a millisecond is not 0.000 s, and the slider has steps within it."""
+    axis = pp.Axis("x", travel=(0, 500), velocity=500, acceleration=4000)
+    cycle = pp.Cycle(steps=(pp.Move({"x": 0.0002}),), start={"x": 0.0})
+    plan = pp.plan(pp.Machine("nudge", (axis,)), cycle)
+    text = page(plan)
+    assert f"{plan.duration:.4g} s" in read(text).text
+    step = re.search(r'id="scrub"[^>]* step="([^"]+)"', text)
+    assert step is not None
+    assert float(step[1]) <= plan.duration / 90
+
+
+def test_small_outlines_are_magnified_less(tmp_path: Path) -> None:
+    """Magnified bands of small outlines would cover each other, and the motion with them."""
+    drawing = new(units=4)
+    for k in range(4):
+        drawing.modelspace().add_circle((20 + 100 * k, 20), 6)
+    drawing.saveas(tmp_path / "dots.dxf")
+    axes = tuple(pp.Axis(n, travel=(0, 500), velocity=500, acceleration=4000) for n in "xy")
+    trace = pp.Trace(tmp_path / "dots.dxf", tolerance=0.05, speed=100)
+    scene = Scene(pp.plan(pp.Machine("dots", axes), pp.Cycle((trace,), {"x": 0.0, "y": 0.0})))
+    assert scene.magnifications[-1] * 0.05 < 6

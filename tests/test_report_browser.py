@@ -223,6 +223,101 @@ def test_the_page_tells_the_planned_position_at_any_time(
             assert_allclose([x, y], expected, atol=1e-9, err_msg=f"marker at {time} s")
 
 
+def uneven(folder: Path) -> Case:
+    """Return a move of an axis that slows down harder than it speeds up, without a jerk limit."""
+    axis = pp.Axis("x", travel=(0, 900), velocity=500, acceleration=1000, deceleration=2000)
+    cycle = pp.Cycle(steps=(pp.Move({"x": 600.0}), pp.Move({"x": 0.0})), start={"x": 0.0})
+    plan = pp.plan(pp.Machine("uneven", (axis,)), cycle)
+    plan.report(folder / "uneven.html")
+    return Case(plan, folder / "uneven.html")
+
+
+def test_what_lasts_at_a_limit_is_marked_as_long(opened: Opened, tmp_path: Path) -> None:
+    """A straight piece has points at its ends alone; all of it is at the limit."""
+    case = uneven(tmp_path)
+    ready(opened.page, case)
+    for name, order, limits in (("velocity", 1, (500, 500)), ("acceleration", 2, (1000, 2000))):
+        t = opened.page.evaluate(
+            "(name) => [...planPage.figures().find((own) => own.row.name === name).limit.data.t]",
+            name,
+        )
+        ends = np.split(np.array(t, dtype=float), np.flatnonzero(np.isnan(np.array(t, float))))
+        lasting = sum(np.ptp(part[~np.isnan(part)]) for part in ends if np.any(~np.isnan(part)))
+        times = np.linspace(0, case.plan.duration, 10_001)
+        values = np.abs(case.plan.trajectory.at(times, order)[:, 0])
+        held = np.isclose(values, limits[0]) | np.isclose(values, limits[1])
+        assert lasting == pytest.approx(held.mean() * case.plan.duration, rel=0.03), name
+
+
+def test_marks_do_not_join_one_limit_to_the_other(cases: dict[str, Case], opened: Opened) -> None:
+    """Where a curve is crowded, lines across it would hide the whole of it."""
+    ready(opened.page, cases["gasket"])
+    marks = opened.page.evaluate("planPage.figures().map((own) => [...own.limit.data.y])")
+    assert any(marks)
+    for values in (np.array(own, dtype=float) for own in marks):
+        assert not np.any(values[1:] * values[:-1] < 0)
+
+
+def test_bounds_of_an_acceleration_change_where_the_motion_turns(
+    opened: Opened, tmp_path: Path
+) -> None:
+    """Slowing down has another limit than speeding up; there is nothing between the two."""
+    case = uneven(tmp_path)
+    ready(opened.page, case)
+    data = opened.page.evaluate(
+        "((data) => ({t: [...data.t], low: [...data.low], high: [...data.high]}))"
+        "(planPage.figures().find((own) => own.row.name === 'acceleration').moving.data)"
+    )
+    velocity = case.plan.trajectory.at(0.5 * (np.array(data["t"])[::2] + data["t"][1::2]), 1)[:, 0]
+    onward, back = velocity > 1e-3, velocity < -1e-3
+    assert onward.any()
+    assert back.any()
+    low, high = np.array(data["low"])[::2], np.array(data["high"])[::2]
+    assert_allclose(low[onward], -2000)
+    assert_allclose(high[onward], 1000)
+    assert_allclose(low[back], -1000)
+    assert_allclose(high[back], 2000)
+
+
+def test_a_row_of_the_timeline_is_one_stop_of_the_tab_key(
+    cases: dict[str, Case], opened: Opened
+) -> None:
+    """With hundreds of blocks nobody could go on by keyboard; arrows go from block to block."""
+    page = opened.page
+    ready(page, cases["kiln-loader"])
+    stops = page.evaluate(
+        "[...document.querySelectorAll('.lane:has(button)')].map((lane) =>"
+        " [...lane.children].filter((own) => own.tabIndex === 0).length)"
+    )
+    assert set(stops) == {1}
+    page.locator(".lane button").first.focus()
+    page.keyboard.press("ArrowRight")
+    second = page.locator(".lane button").nth(1).get_attribute("data-mark")
+    assert page.evaluate("document.activeElement.dataset.mark") == second
+    assert page.evaluate("planPage.state.mark.name") == second
+    page.keyboard.press("End")
+    last = page.locator(".lane").first.locator("button").last.get_attribute("data-mark")
+    assert page.evaluate("document.activeElement.dataset.mark") == last
+
+
+def test_the_tool_stays_within_the_frame(cases: dict[str, Case], opened: Opened) -> None:
+    """What moves is on a layer of its own; above the frame of the view nothing of it is painted."""
+    page = opened.page
+    ready(page, cases["kerb"])
+    page.evaluate("planPage.setNow(1)")
+    page.wait_for_timeout(200)
+    painted = page.evaluate(
+        "(() => { const walk = (view) => view.model === planPage.spaces()[1].figure ? view"
+        " : [...(view.children?.() ?? [])].map(walk).find(Boolean);"
+        " const view = [...Bokeh.index].map(walk).find(Boolean), layer = view.canvas_view.overlays;"
+        " const above = layer.canvas.getContext('2d').getImageData(0, 0, layer.canvas.width,"
+        " Math.floor((view.frame.bbox.top - 1) * devicePixelRatio)).data;"
+        " return [view.frame.bbox.top, above.filter((value) => value > 0).length]; })()"
+    )
+    assert painted[0] > 1
+    assert painted[1] == 0
+
+
 def test_zoom_is_linked_and_shows_more(cases: dict[str, Case], opened: Opened) -> None:
     """Whoever looks closer at one curve wants to see the others at the same time."""
     case = cases["gasket"]

@@ -296,6 +296,36 @@ def test_a_column_that_is_no_signal_is_told_and_not_judged(tmp_path: Path) -> No
     assert all(f.ok for f in judged.findings)
 
 
+def test_delimiters_behind_the_last_cell_are_columns_without_a_name(tmp_path: Path) -> None:
+    """Spreadsheets write them; where they stand is told, and two of them are no fault."""
+    cells = copied()
+    count = len(cells[0])
+    for number, row in enumerate(cells):
+        row.extend(["", ""] if number % 2 else ["", "0"])
+    cells[0][count:] = ["", ""]
+    judged = judge_file(written(tmp_path, cells), MACHINE)
+    assert judged.unjudged == tuple(f"column {count + n} without a name" for n in (1, 2))
+    assert all(f.ok for f in judged.findings)
+
+
+def test_significant_digits_of_the_machine_file_are_no_offence(tmp_path: Path) -> None:
+    """Large numbers have fewer decimals than small ones: the coarsest step counts for all."""
+    dialect = Dialect(significant=dict.fromkeys(RATES, 5))
+    machine = replace(MACHINE, setpoints=pp.SetpointSettings(dialect=dialect))
+    file = tmp_path / "table.csv"
+    write_table(planned(), file, content=Content(RATES), dialect=dialect)
+    assert broken(file, machine) == {}
+    assert "c acceleration" in broken(file)
+    lines = file.read_text("utf-8").splitlines()
+    row = lines[100].split(",")
+    row[1] = f"{float(row[1]) + 0.1:.5g}"
+    lines[100] = ",".join(row)
+    file.write_text("\n".join(lines) + "\n", "utf-8")
+    first = broken(file, machine)["x acceleration"].first
+    assert first is not None
+    assert first.line == 101
+
+
 def test_stamps_that_are_rounded_are_no_uneven_period(tmp_path: Path) -> None:
     """A third of a millisecond in microseconds is 333, 333, 334."""
     machine = replace(MACHINE, setpoints=pp.SetpointSettings(0.000333))

@@ -32,6 +32,7 @@ from profileplan.inputs import Dialect, Mechanics
 from profileplan.setpoints import Content, read_csv, write_json_lines, write_npy, write_table
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
     from pathlib import Path
 
     from profileplan.inputs.dialect import TimeUnit
@@ -118,6 +119,18 @@ def test_degrees_that_start_again_are_counted(tmp_path: Path) -> None:
     assert any("c_pos_deg starts again after 360 deg" in note for note in judged.notes)
     assert_allclose(read_csv(file, MACHINE).position, PLAN.setpoints().position, atol=1e-6)
     assert "c velocity" in broken(file, with_axis(1, drive=None))
+
+
+@pytest.mark.parametrize("columns", [("pos",), ("pos", "vel")])
+def test_degrees_that_the_axis_can_turn_between_rows_do_not_start_again(
+    tmp_path: Path, columns: tuple[str, ...]
+) -> None:
+    """From 168 to 357 degrees in a second it turned by 189, not by -171."""
+    file = tmp_path / "table.csv"
+    write_table(planned((10.0, 360.0)), file, content=Content(columns, period=1.0))
+    judged = judge_file(file, MACHINE)
+    assert not any("starts again" in note for note in judged.notes)
+    assert found(judged, "travel, high end", "c").value == 360.0
 
 
 def test_degrees_beyond_a_turn_do_not_start_again(tmp_path: Path) -> None:
@@ -473,3 +486,29 @@ def test_the_command_judges_every_kind_of_table(tmp_path: Path) -> None:
     assert (status, "are judged as one table" in told) == (0, True)
     status, told = run(tmp_path / "nothing.toml", "--columns", "pos")
     assert (status, "are for setpoint tables" in told) == (2, True)
+
+
+@pytest.mark.parametrize("change", [str.upper, lambda text: text.replace("t_s,", "time,", 1)])
+def test_a_table_without_its_time_is_told_to_be_one(
+    tmp_path: Path, change: Callable[[str], str]
+) -> None:
+    """It is no list of waypoints, whose axes would be unknown."""
+    (tmp_path / "machine.toml").write_text(FILE, "utf-8")
+    file = written(tmp_path / "table.csv", cells())
+    file.write_text(change(file.read_text("utf-8")), "utf-8")
+    status, told = run(file, "-m", tmp_path / "machine.toml")
+    assert status == 2
+    assert 'line 1: column "t_s" is missing, or t_ms, t_us, tick' in told
+    assert "unknown axis" not in told
+
+
+def test_significant_digits_can_be_told(tmp_path: Path) -> None:
+    """Of a table that was not written as the machine file says."""
+    (tmp_path / "machine.toml").write_text(FILE, "utf-8")
+    file = tmp_path / "table.csv"
+    write_table(PLAN, file, dialect=Dialect(significant=dict.fromkeys(("pos", "vel", "acc"), 8)))
+    words = (file, "-m", tmp_path / "machine.toml", "--quiet")
+    assert run(*words)[0] == 1
+    assert run(*words, "--significant", "8")[0] == 0
+    status, told = run(*words, "--significant", "pos=99")
+    assert (status, "--significant pos: 99; allowed: 1 to 17" in told) == (2, True)

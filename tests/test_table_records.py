@@ -107,6 +107,26 @@ def test_rows_of_an_array_without_names_are_a_table_without_a_header(tmp_path: P
     assert broken(tmp_path / "table.npy", MACHINE, manner) == {}
 
 
+@pytest.mark.parametrize("form", [".npy", ".parquet"])
+def test_numbers_of_single_precision_are_told(tmp_path: Path, form: str) -> None:
+    """Seven digits make noise that a drive would derive as well: whoever reads must know why."""
+    file = recorded(tmp_path / f"table{form}", Content(("pos",)))
+    assert not any("precision" in note for note in judge_file(file, MACHINE).notes)
+    if form == ".npy":
+        records = np.load(file)
+        kinds = [(name, "<f4") for name in records.dtype.names or ()]
+        np.save(file, records.astype(kinds))
+    else:
+        parquet = pytest.importorskip("pyarrow.parquet")
+        arrow = pytest.importorskip("pyarrow")
+        table = parquet.read_table(file)
+        single = arrow.schema([(name, arrow.float32()) for name in table.column_names])
+        parquet.write_table(table.cast(single, safe=False), file)
+    names = "t_s, x_pos_mm, c_pos_deg"
+    told = f"numbers of less than double precision are judged as they stand: {names}"
+    assert told in judge_file(file, MACHINE).notes
+
+
 def test_json_lines_may_be_written_by_others(tmp_path: Path) -> None:
     """Names in any order, other values beside, true and false, blank lines, another line end."""
     rows = [

@@ -17,7 +17,7 @@ from profileplan.setpoints.layout import MOST_DECIMALS
 from profileplan.setpoints.reading import last_decimals
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Sequence
+    from collections.abc import Iterator, Mapping, Sequence
 
     from profileplan.inputs import Axis
     from profileplan.motion.polynomials import Array, Indices
@@ -40,6 +40,8 @@ class Steps:
         How many the columns have at least.
     known : float, optional
         What the last decimal of every column stands for, where no numbers tell it.
+    fixed : mapping, optional
+        Column → its decimals, fewer than 0 for tens and hundreds, where they are known.
     """
 
     def __init__(
@@ -49,17 +51,22 @@ class Steps:
         *,
         decimals: Sequence[int] = (),
         known: float | None = None,
+        fixed: Mapping[int, int] | None = None,
     ) -> None:
         self._units = units
         self._positions = positions
         self._known = known
+        self._fixed = fixed or {}
         self._decimals = np.array(decimals, dtype=np.intp)
+        self._decimals[list(self._fixed)] = list(self._fixed.values())
+        self._free = [column for column in range(len(decimals)) if column not in self._fixed]
         self._coarsest = self._decimals.copy()
 
     def see(self, numbers: Array) -> None:
         """Take account of numbers as they are in the file: (n, k)."""
         if self._known is None:
-            self._decimals = last_decimals(numbers, self._decimals)
+            free = self._free
+            self._decimals[free] = last_decimals(numbers[:, free], self._decimals[free])
 
     def coarsest(self, column: int) -> float:
         """Return what the last decimal of a column stood for before any row was seen."""
@@ -68,11 +75,7 @@ class Steps:
 
     def possible(self, columns: tuple[int, ...]) -> Iterator[tuple[tuple[int, ...], list[float]]]:
         """Yield each number of decimals that columns may turn out to have, and their steps."""
-        ranges = [
-            range(self._least(column), MOST_DECIMALS + 1) if self._known is None else range(1)
-            for column in columns
-        ]
-        for decimals in product(*ranges):
+        for decimals in product(*(self._range(column) for column in columns)):
             pairs = zip(columns, decimals, strict=True)
             yield decimals, [self._step(column, count) for column, count in pairs]
 
@@ -80,10 +83,14 @@ class Steps:
         """Return the decimals of columns of which all rows were seen, and their steps."""
         return next(self.possible(columns))
 
-    def _least(self, column: int) -> int:
-        if column == FINEST:
-            return int(self._decimals[self._positions].max())
-        return int(self._decimals[column])
+    def _range(self, column: int) -> range:
+        """Return how many decimals a column may turn out to have."""
+        if self._known is not None:
+            return range(1)
+        chosen = self._positions if column == FINEST else [column]
+        if fixed := [self._fixed[one] for one in chosen if one in self._fixed]:
+            return range(min(fixed), min(fixed) + 1)
+        return range(int(self._decimals[chosen].max()), MOST_DECIMALS + 1)
 
     def _step(self, column: int, decimals: int) -> float:
         if self._known is not None:

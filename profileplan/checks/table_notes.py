@@ -46,6 +46,9 @@ def notes_on(files: TableFiles, machine: Machine, *, points: bool) -> Iterator[s
             yield f"{name} is judged by its second drive, {twin.name}: the first is not in it"
     if sheet.columns[0].name == "tick":
         yield f"a tick is taken for {machine.setpoints.period:g} s, the machine file's period"
+    if sheet.coarse:
+        names = ", ".join(sheet.coarse)
+        yield f"numbers of less than double precision are judged as they stand: {names}"
     if points:
         yield "its rows are judged as points between which a drive follows cubics"
 

@@ -10,6 +10,7 @@ import numpy as np
 from profileplan.checks.findings import TICK_TOLERANCE, Finding
 from profileplan.checks.table_axes import BEFORE, AxisJudge, Held, Window
 from profileplan.checks.table_cubics import LONG, refined
+from profileplan.checks.table_digits import significant_decimals
 from profileplan.checks.table_extremes import Doubt, Extreme, Places, Steps
 from profileplan.checks.table_notes import leap_note, notes_on, placed
 from profileplan.checks.table_turns import TravelTurns
@@ -21,7 +22,7 @@ from profileplan.setpoints.sets import table_files
 from profileplan.setpoints.turns import Turns
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterable, Iterator, Sequence
+    from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
     from pathlib import Path
 
     import numpy.typing as npt
@@ -200,7 +201,9 @@ def judge_file(
     judge: _FileJudge | None = None
     for rows in _gathered(files.read(block=block, progress=progress)):
         if judge is None:
-            judge = _FileJudge(files.sheet, machine, rows, points=manner.points)
+            own = manner.dialect or machine.setpoints.dialect
+            fixed = significant_decimals(rows.numbers, files.sheet, machine, own.significant)
+            judge = _FileJudge(files.sheet, machine, rows, points=manner.points, fixed=fixed)
         judge.see(rows)
     if judge is None:  # what has no rows has raised
         return TableJudgement((), ())
@@ -210,7 +213,15 @@ def judge_file(
 class _FileJudge:
     """Judges the rows of a table in a file, in their order."""
 
-    def __init__(self, sheet: Sheet, machine: Machine, rows: Rows, *, points: bool | None) -> None:
+    def __init__(
+        self,
+        sheet: Sheet,
+        machine: Machine,
+        rows: Rows,
+        *,
+        points: bool | None,
+        fixed: Mapping[int, int],
+    ) -> None:
         self._sheet = sheet
         self._machine = machine
         held = {
@@ -220,7 +231,7 @@ class _FileJudge:
         }
         units = np.abs([column.unit for column in sheet.columns])
         positions = [one.position for one in held.values()]
-        self._steps = Steps(units, positions, decimals=sheet.decimals)
+        self._steps = Steps(units, positions, decimals=sheet.decimals, fixed=fixed)
         self._turns = Turns(sheet, machine)
         pace = _pace(rows, sheet, machine, held=tuple(held.values()), points=points)
         self._travels = {

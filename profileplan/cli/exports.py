@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import click
 
 from profileplan.cli import frame, tables
-from profileplan.cli.jobs import job_of, planned_of, tell_unplayed
+from profileplan.cli.jobs import job_of, planned_of, tell_amiss, tell_unplayed
 from profileplan.cli.settings import (
     FORMS,
     PLACES,
@@ -34,6 +34,9 @@ if TYPE_CHECKING:
 PEAK_TOLERANCE = 1e-5
 """Share of a limit that cubics may pass it by unsaid, if rounding explains it: where points can be
 found that need no more than that, they are taken."""
+
+POINTS_ERROR = 0.001
+"""Greatest distance of cubics from the plan unless something else is asked for [mm or deg]."""
 
 NANOSECOND = 1e-9
 """Between such times points stand, if not on ticks [s]."""
@@ -84,7 +87,7 @@ PARTS_TOLD = 3
     "--error",
     type=frame.Measure("length"),
     help="Greatest distance of those cubics from the plan, rounding included, mm or deg; "
-    "default: 0.001.",
+    f"default: {POINTS_ERROR:g}.",
 )
 @click.option(
     "--longest",
@@ -147,13 +150,15 @@ def export(  # noqa: PLR0913 - one parameter an option
         if points == "pvt":
             # What the machine file says is the period of ticks; points need none.
             order = order._replace(content=replace(content, period=period))
-            told = _write_points(order, 0.001 if error is None else error, longest)
+            told = _write_points(order, POINTS_ERROR if error is None else error, longest)
         else:
             told = _write_ticks(order, form)
             tell_unplayed(planned, content.period)
     _tell_joins(told.parts)
     _tell(told, planned, as_json=as_json, quiet=quiet)
-    frame.finish(met=told.kept and all(finding.ok for finding in planned.check()))
+    findings = planned.check()
+    tell_amiss(findings)
+    frame.finish(met=told.kept and all(finding.ok for finding in findings))
 
 
 class _Order(NamedTuple):

@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from datetime import datetime
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, NamedTuple
 
 import click
 
 from profileplan import wording
 from profileplan.cli import frame, tables
+from profileplan.cli.settings import Digits
 from profileplan.errors import Fault, InputError
 
 if TYPE_CHECKING:
@@ -74,6 +76,7 @@ def plan(  # noqa: PLR0913 - one parameter an option
         click.echo(summary.text(values), nl=False)
     elif quiet:
         click.echo(tables.verdict(planned), color=frame.color())
+        tell_amiss(planned.check())
     else:
         _show_plan(planned)
         if written:
@@ -95,6 +98,12 @@ def plan(  # noqa: PLR0913 - one parameter an option
     help="What rows of a table are: ticks; or points with cubics between them. Default: as it "
     "looks.",
 )
+@click.option(
+    "--significant",
+    type=Digits(),
+    metavar="KIND=N,...",
+    help="Significant digits that a table is rounded to: pos=7; default: as the machine file says.",
+)
 @frame.speed
 @frame.tolerance
 @frame.as_json
@@ -105,6 +114,7 @@ def check(  # noqa: PLR0913 - one parameter an option
     machine: Path | None,
     columns: str | None,
     points: str | None,
+    significant: dict[str, int] | None,
     speed: float | None,
     tolerance: float | None,
     as_json: bool,
@@ -128,10 +138,10 @@ def check(  # noqa: PLR0913 - one parameter an option
         if speed is not None or tolerance is not None:
             message = "--speed and --tolerance are for waypoints; this is a setpoint table"
             raise InputError([Fault("", message, source)])
-        asked = (columns, points)
+        asked = _Asked(columns, points, significant)
         findings, notes = _table_findings(source, machine, asked, talk=not (as_json or quiet))
-    elif columns is not None or points is not None:
-        message = "--columns and --points are for setpoint tables; this is none"
+    elif (columns, points, significant) != (None, None, None):
+        message = "--columns, --points and --significant are for setpoint tables; this is none"
         raise InputError([Fault("", message, source)])
     else:
         job = job_of(source, machine, speed, tolerance)
@@ -180,31 +190,39 @@ def _limits(source: Path, machine: Path | None) -> Machine:
 
 
 def _is_table(source: Path, machine: Path | None, columns: str | None) -> bool:
-    """Tell whether a file is a setpoint table: by its ending, by a column of time, or numbers."""
+    """Tell whether a file is a setpoint table: by its ending, its headings, or numbers alone."""
     form = source.suffix.lower()
     if form != ".csv":
         return form in TABLES
     from profileplan import setpoints  # noqa: PLC0415
-    from profileplan.setpoints.layout import has_numbers_only  # noqa: PLC0415
+    from profileplan.setpoints.layout import has_axes, has_numbers_only  # noqa: PLC0415
 
     if columns is not None or setpoints.is_table(source) or has_numbers_only(source):
         return True
-    return machine is not None and setpoints.is_table(
-        source, _limits(source, machine).setpoints.dialect
-    )
+    if machine is None:
+        return False
+    limits = _limits(source, machine)
+    return setpoints.is_table(source, limits.setpoints.dialect) or has_axes(source, limits)
+
+
+class _Asked(NamedTuple):
+    """Options that say how a table is to be understood."""
+
+    columns: str | None
+    points: str | None
+    significant: dict[str, int] | None
 
 
 def _table_findings(
-    source: Path, machine: Path | None, asked: tuple[str | None, str | None], *, talk: bool
+    source: Path, machine: Path | None, asked: _Asked, *, talk: bool
 ) -> tuple[Sequence[Finding], Sequence[str]]:
-    """Judge a table, with progress, and say on stderr what is not judged, or how.
-
-    ``asked``: the options --columns and --points.
-    """
+    """Judge a table, with progress, and say on stderr what is not judged, or how."""
     from profileplan import checks  # noqa: PLC0415
 
     limits = _limits(source, machine)
-    columns, points = asked
+    columns, points, significant = asked
+    if significant is not None:
+        limits = _with_digits(limits, significant)
     manner = checks.Manner(
         columns=None if columns is None else _known_columns(columns),
         points=None if points is None else points == "pvt",
@@ -216,6 +234,24 @@ def _table_findings(
     for note in notes:
         click.echo(f"note: {note}", err=True)
     return judged.findings, notes
+
+
+def _with_digits(machine: Machine, significant: Mapping[str, int]) -> Machine:
+    """Return a machine whose tables have significant digits.
+
+    Raises
+    ------
+    InputError
+        There are too few or too many.
+    """
+    own = machine.setpoints
+    try:
+        dialect = own.dialect.changed({"significant": significant})
+    except InputError as error:
+        raise InputError(
+            replace(fault, place=f"--{fault.place.replace('.', ' ', 1)}") for fault in error.faults
+        ) from None
+    return replace(machine, setpoints=replace(own, dialect=dialect))
 
 
 def _known_columns(columns: str) -> tuple[str, ...]:
@@ -238,6 +274,13 @@ def _known_columns(columns: str) -> tuple[str, ...]:
     if faults:
         raise InputError(faults)
     return words
+
+
+def tell_amiss(findings: Sequence[Finding]) -> None:
+    """Say on stderr what is not met, but for the target, which the verdict tells."""
+    for finding in findings:
+        if not finding.ok and finding.check != "cycle time":
+            click.echo(f"{tables.bad('NOT MET')}: {wording.amiss(finding)}", err=True)
 
 
 def tell_unplayed(planned: Plan, period: float | None) -> None:

@@ -17,7 +17,7 @@ FORMS = (".csv", ".jsonl", ".npy", ".parquet")
 KIND_DIGITS = re.compile(r"\s*(?:(\w+)\s*=)?\s*(\d{1,3})\s*")
 
 
-class _Digits(click.ParamType[dict[str, int]]):
+class Digits(click.ParamType[dict[str, int]]):
     """Digits of all kinds of columns, or of some: "4", "pos=4,vel=2"."""
 
     name = "digits"
@@ -149,7 +149,7 @@ SETTINGS = (
         "--decimals",
         "decimals",
         "Decimals of all columns or by kind: 4, or pos=4,vel=2.",
-        _Digits(),
+        Digits(),
         "KIND=N,...",
         TEXT,
     ),
@@ -157,7 +157,7 @@ SETTINGS = (
         "--significant",
         "significant",
         "Significant digits in place of decimals: pos=7.",
-        _Digits(),
+        Digits(),
         "KIND=N,...",
         TEXT,
     ),

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import KW_ONLY, dataclass
 from fractions import Fraction
+from functools import cached_property
 
 from profileplan.inputs.rules import LIMIT, POSITION, Judge, is_number, shown
 
@@ -97,7 +98,7 @@ class Drive:
                 )
         judge.finish()
 
-    @property
+    @cached_property
     def ratio(self) -> Fraction:
         """Increments of a unit of the axis, exactly [1/mm or 1/deg]."""
         return self.increments * Fraction(*self.gear) / _exact(self.lead)

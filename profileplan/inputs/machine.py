@@ -173,7 +173,7 @@ class Axis:
         )
 
     def _judge_mechanics(self, judge: Judge) -> None:
-        """Judge what only the kind of the axis tells of its mechanics."""
+        """Judge what only the kind of the axis tells of its mechanics, motor and drive."""
         mechanics = self.mechanics
         _judge_record(judge, "mechanics", mechanics, Mechanics)
         _judge_record(judge, "motor", self.motor, Motor)
@@ -188,6 +188,8 @@ class Axis:
             for key, value in unfit.items():
                 if value is not None:
                     judge.note(f"mechanics.{key}", f"{shown(value)}; not on a {self.kind} axis")
+        if self.drive is not None and self.drive.wrap is not None and self.kind == "linear":
+            judge.note("drive.wrap", f"{shown(self.drive.wrap)}; only on a rotary axis")
         if self.motor is not None and mechanics is None:
             judge.note("motor", "its torque is not known without mechanics: give them")
         if self.motor is not None and isinstance(mechanics, Mechanics) and not self.motor_turn:
@@ -363,6 +365,7 @@ class Machine:
         )
         self._judge_height(judge)
         self._judge_mechanics(judge)
+        self._judge_twins(judge)
         judge.finish()
 
     @property
@@ -450,6 +453,18 @@ class Machine:
             if counterbalance and axis.name != self.up_axis:
                 message = "only on the up axis, as `up` names it"
                 judge.note(f"{place}.counterbalance", f"{shown(counterbalance)} N; {message}")
+
+    def _judge_twins(self, judge: Judge) -> None:
+        """Judge the names of second drives, which head columns as those of axes do."""
+        taken = list(self.axis_names)
+        for axis in self.axes:
+            twin = None if axis.drive is None else axis.drive.also
+            if twin is None:
+                continue
+            if twin.name in taken:
+                message = f"{shown(twin.name)} is a name already; a drive has its own"
+                judge.note(f"{join('axes', axis.name)}.drive.also", message)
+            taken.append(twin.name)
 
 
 def judge_footprint(

@@ -201,7 +201,7 @@ def _drive(table: Table | None, position: Quantity) -> Drive | None:
         table.note("lead", "missing; travel in a turn of the gear's output is needed")
     return table.build(
         lambda: Drive(
-            table.whole("increments", default=0),
+            _needed(table, "increments", 1),
             lead=table.number("lead", position, default=FULL_TURN),
             gear=Drive.gear if gear is None else _two(table, gear),
             direction=table.whole("direction", default=Drive.direction),
@@ -218,6 +218,9 @@ def _twin(table: Table, position: Quantity) -> Twin | None:
     direction = table.whole("also_direction", default=Twin.direction)
     offset = table.number("also_offset", position, default=Twin.offset)
     if name is None:
+        for key in ("also_direction", "also_offset"):
+            if key in table.raw:
+                table.note(key, "only with also, the name of the second drive")
         return None
     try:
         return Twin(name, direction=direction, offset=offset)
@@ -225,6 +228,13 @@ def _twin(table: Table, position: Quantity) -> Twin | None:
         raise InputError(
             replace(fault, place=TWIN_KEYS[fault.place]) for fault in error.faults
         ) from None
+
+
+def _needed(table: Table, key: str, harmless: int) -> int:
+    """Return a whole number that must be given, or a harmless one."""
+    if key not in table.raw:
+        table.note(key, "missing; a whole number is needed")
+    return table.whole(key, default=harmless)
 
 
 def _two(table: Table, gear: tuple[int, ...]) -> tuple[int, int]:
@@ -255,10 +265,14 @@ def _period(table: Table) -> float:
         return period
     if "period" in table.raw:
         table.note("interpolation", "is a period too; give one of them")
-    found = inner.build(
-        lambda: period_from_base(inner.whole("base", default=0), inner.whole("exponent", default=0))
-    )
+    found = inner.build(lambda: period_from_base(*_base_and_exponent(inner)))
     return found or SetpointSettings.period
+
+
+def _base_and_exponent(table: Table) -> tuple[int, int]:
+    base, exponent = _needed(table, "base", 1), _needed(table, "exponent", 0)
+    # One of them alone says nothing of the period.
+    return (base, exponent) if {"base", "exponent"} <= table.raw.keys() else (1, 0)
 
 
 def _dialect(table: Table) -> Dialect:

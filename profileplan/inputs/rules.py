@@ -224,7 +224,7 @@ def shown(value: object) -> str:
         case int() | float():
             text = f"{value:.12g}"
         case str():
-            text = f'"{_shortened(value)}"'
+            text = f'"{shortened(value)}"'
         case Mapping():
             text = "a table"
         case list() | tuple():
@@ -232,8 +232,14 @@ def shown(value: object) -> str:
         case None:
             text = "nothing"
         case _:
-            text = _shortened(str(value))
+            text = shortened(str(value))
     return text
+
+
+def shortened(text: str, length: int = 60) -> str:
+    """Return a text that can be printed, in one line that is no longer than asked for."""
+    clean = "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in text)
+    return clean if len(clean) <= length else clean[: length - 1] + "…"
 
 
 def quoted(names: Iterable[str]) -> str:
@@ -279,11 +285,6 @@ def join(place: str, key: str) -> str:
     """Return the key path of `key` inside `place`; a key that is no plain word is quoted."""
     word = key if re.fullmatch(r"[\w-]+", key) else shown(key)
     return f"{place}.{word}" if place else word
-
-
-def _shortened(text: str, length: int = 60) -> str:
-    clean = "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in text)
-    return clean if len(clean) <= length else clean[: length - 1] + "…"
 
 
 def _area(corners: Outline) -> float:

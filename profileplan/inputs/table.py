@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, TypeGuard, TypeVar
 from profileplan.errors import Fault, InputError
 from profileplan.inputs.files import read_text
 from profileplan.inputs.quantities import Quantity, parse_quantity
-from profileplan.inputs.rules import is_number, join, near, quoted, shown
+from profileplan.inputs.rules import is_number, join, near, quoted, shortened, shown
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Mapping
@@ -106,7 +106,8 @@ class Table:
             item for item in raw if isinstance(item, int) and not isinstance(item, bool)
         ]
         if not is_array(raw) or not numbers or len(numbers) != len(raw):
-            self.note(key, f"{shown(raw)}; an array of whole numbers is needed")
+            what = f"[{', '.join(map(shown, raw))}]" if is_array(raw) else shown(raw)
+            self.note(key, f"{shortened(what)}; an array of whole numbers is needed")
             return None
         return tuple(numbers)
 

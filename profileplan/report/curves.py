@@ -17,7 +17,7 @@ from profileplan.motion import polynomials
 from profileplan.motion.trajectory import ORDER, Trajectory
 
 if TYPE_CHECKING:
-    from profileplan.motion.polynomials import Array
+    from profileplan.motion.polynomials import Array, Indices
 
 MOST_NUMBERS = 300_000
 """Coefficients that go in as they are: 3.2 MB of text."""
@@ -81,9 +81,9 @@ def packed(trajectory: Trajectory) -> dict[str, object]:
         a long one "times", (k + 1,), and "low" and "high", (k, 4, d), 4 bytes a number. Each is
         little-endian, as base64.
     """
-    powers = _powers(trajectory)
-    own = trajectory.coefficients[:, :powers]
-    if own.size <= MOST_NUMBERS:
+    if not is_long(trajectory):
+        powers = _powers(trajectory)
+        own = trajectory.coefficients[:, :powers]
         return {
             "powers": powers,
             "breaks": text(trajectory.breaks),
@@ -97,7 +97,13 @@ def packed(trajectory: Trajectory) -> dict[str, object]:
     }
 
 
-def text(values: Array, kind: str = "<f8") -> str:
+def is_long(trajectory: Trajectory) -> bool:
+    """Tell whether a motion is too long to go in as it is."""
+    pieces, _, axes = trajectory.coefficients.shape
+    return bool(pieces * _powers(trajectory) * axes > MOST_NUMBERS)
+
+
+def text(values: Array | Indices, kind: str = "<f8") -> str:
     """Return an array's numbers in base64 (RFC 4648), row by row."""
     return base64.b64encode(np.ascontiguousarray(values, dtype=kind).tobytes()).decode("ascii")
 

@@ -5,16 +5,20 @@
 const plan = JSON.parse(document.getElementById("plan-data").textContent);
 const QUANTITIES = ["position", "velocity", "acceleration", "jerk"];
 const AT_LIMIT = 0.999;
-const STANDING = 1e-6;
+/* Share of an axis's greatest speed below which it stands. */
+const STANDING = 1e-9;
+/* Share of a limit below which a curve would be flat if it were scaled to it. */
+const FLAT = 0.01;
 /* What moves with the time is drawn on a layer of its own: the rest need not be drawn again. */
 const OVER = { level: "overlay" };
 const AT_ONCE = 3;
-const LEAST = Math.min(1e-4, plan.duration || 1);
+const LEAST = Math.min(1e-4, plan.duration / 1000 || 1);
 const calm = matchMedia("(prefers-reduced-motion: reduce)");
 const coarse = matchMedia("(pointer: coarse)").matches;
 const $ = (id) => document.getElementById(id);
 const css = (name) => getComputedStyle(document.documentElement).getPropertyValue(name).trim();
 const clamp = (value, low, high) => Math.min(Math.max(value, low), high);
+const between = (one, other, share) => one + share * (other - one);
 
 function numbers(text, Kind) {
   const bytes = Uint8Array.from(atob(text), (sign) => sign.charCodeAt(0));
@@ -57,7 +61,6 @@ class Exact {
     this.own = numbers(packed.coefficients, Float64Array);
     this.powers = packed.powers;
     this.axes = axes;
-    this.exact = true;
   }
   inside(piece, axis, order, since) {
     let value = 0;
@@ -71,6 +74,10 @@ class Exact {
   at(axis, order, time) {
     const piece = Math.min(before(this.breaks, time), this.breaks.length - 2);
     return this.inside(piece, axis, order, time - this.breaks[piece]);
+  }
+  ends(axis, order, time) {
+    const value = this.at(axis, order, time);
+    return [value, value];
   }
   curve(axis, order, from, to, columns) {
     const first = Math.min(before(this.breaks, from), this.breaks.length - 2);
@@ -97,12 +104,11 @@ class Stretches {
     this.low = numbers(packed.low, Float32Array);
     this.high = numbers(packed.high, Float32Array);
     this.axes = axes;
-    this.exact = false;
   }
-  at(axis, order, time) {
+  ends(axis, order, time) {
     const stretch = Math.min(before(this.times, time), this.times.length - 2);
     const index = (stretch * 4 + order) * this.axes + axis;
-    return (this.low[index] + this.high[index]) / 2;
+    return [this.low[index], this.high[index]];
   }
   curve(axis, order, from, to, columns) {
     const t = [], y = [];
@@ -127,7 +133,7 @@ class Samples {
     const index = before(this.t, time), next = Math.min(index + 1, this.t.length - 1);
     const span = this.t[next] - this.t[index];
     const share = span > 0 ? clamp((time - this.t[index]) / span, 0, 1) : 0;
-    return this.y[index] + share * (this.y[next] - this.y[index]);
+    return between(this.y[index], this.y[next], share);
   }
   curve(from, to, columns) {
     const first = before(this.t, from), last = Math.min(before(this.t, to) + 2, this.t.length);
@@ -144,40 +150,49 @@ let figures = [], spaces = [];
 /* ---- curves ---- */
 
 function rows(axis) {
-  const own = plan.axes[axis], limits = own.limits;
+  const own = plan.axes[axis], { velocity, acceleration, deceleration, jerk } = own.limits;
+  const greatest = Math.max(acceleration, deceleration);
+  const highs = [own.travel[1], velocity, greatest, jerk];
+  const lows = [own.travel[0], -velocity, -greatest, jerk === null ? null : -jerk];
+  const stands = STANDING * peak((from, to, columns) => motion.curve(axis, 1, from, to, columns));
   const found = QUANTITIES.map((name, order) => ({
-    name, unit: own.unit + ["", "/s", "/s²", "/s³"][order],
-    low: order === 0 ? own.travel[0] : order === 2 ? -Math.max(limits.acceleration, limits.deceleration) : negative(limits[name]),
-    high: order === 0 ? own.travel[1] : order === 2 ? Math.max(limits.acceleration, limits.deceleration) : limits[name],
-    at: (when) => motion.at(axis, order, when),
+    name, unit: own.unit + ["", "/s", "/s²", "/s³"][order], low: lows[order], high: highs[order],
+    ends: (when) => motion.ends(axis, order, when),
     curve: (from, to, columns) => motion.curve(axis, order, from, to, columns),
-    reached: (value, when) => order > 0 && reached(limits, order, value, motion.at(axis, 1, when)),
-    bounds: order !== 2 || limits.acceleration === limits.deceleration ? null : (when) => bounds(limits, motion.at(axis, 1, when)),
+    // An end of the travel is a place like any other: reaching it is no sign of haste.
+    marked: order > 0,
+    bounds: order !== 2 || acceleration === deceleration ? null
+      : (when) => bounds(own.limits, motion.ends(axis, 1, when), stands),
   }));
   for (const load of loads.filter((entry) => entry.axis === axis)) {
     found.push({
-      name: load.name, unit: load.unit, low: negative(load.limit), high: load.limit,
-      at: (when) => load.samples.at(when),
-      curve: (from, to, columns) => load.samples.curve(from, to, columns),
-      reached: (value) => load.limit !== null && Math.abs(value) >= AT_LIMIT * load.limit,
+      name: load.name, unit: load.unit, low: load.limit === null ? null : -load.limit, high: load.limit,
+      ends: (when) => { const value = load.samples.at(when); return [value, value]; },
+      curve: (from, to, columns) => load.samples.curve(from, to, columns), marked: true, bounds: null,
     });
   }
+  for (const row of found) row.peak = peak(row.curve);
   return found;
 }
 
-function negative(limit) { return limit === null ? null : -limit; }
+/* The greatest magnitude of a curve in the whole cycle. */
+function peak(curve) {
+  return curve(0, plan.duration || 1, 2000).y.reduce((most, value) => Math.max(most, Math.abs(value)), 0);
+}
 
 /* What bounds an acceleration at a velocity: another limit where the axis slows down. */
-function bounds(limits, velocity) {
-  const up = velocity < -STANDING ? limits.deceleration : velocity > STANDING ? limits.acceleration : Math.max(limits.acceleration, limits.deceleration);
-  const down = velocity > STANDING ? limits.deceleration : velocity < -STANDING ? limits.acceleration : Math.max(limits.acceleration, limits.deceleration);
-  return [-down, up];
+function bounds({ acceleration, deceleration }, [slowest, fastest], stands) {
+  const onward = fastest > stands, back = slowest < -stands, both = Math.max(acceleration, deceleration);
+  if (onward && back) return [-both, both];
+  return [onward ? -deceleration : -acceleration, back ? deceleration : acceleration];
 }
 
-function reached(limits, order, value, velocity) {
-  const name = order === 2 && value * velocity < 0 ? "deceleration" : QUANTITIES[order];
-  return limits[name] !== null && Math.abs(value) >= AT_LIMIT * limits[name];
+function reached(row, value, when) {
+  const [low, high] = row.bounds ? row.bounds(when) : [row.low, row.high];
+  return row.marked && high !== null && (value >= AT_LIMIT * high || value <= AT_LIMIT * low);
 }
+
+function formatter() { return new Bokeh.BasicTickFormatter({ power_limit_high: 7, power_limit_low: -5 }); }
 
 function plain(options) {
   const figure = Bokeh.Plotting.figure({
@@ -194,6 +209,7 @@ function plain(options) {
     axis.axis_label_text_color = css("--ink");
     axis.axis_label_text_font_size = "11px";
     axis.axis_label_text_font_style = "normal";
+    axis.formatter = formatter();
   }
   for (const grid of [figure.xgrid, figure.ygrid].flat()) grid.grid_line_color = css("--grid");
   return figure;
@@ -205,7 +221,7 @@ function curveFigure(axis, row, width, last) {
     x_range: new Bokeh.Range1d({ start: state.from, end: state.to || 1, bounds: [0, plan.duration || 1], min_interval: LEAST }),
     y_range: new Bokeh.Range1d({ start: 0, end: 1 }), min_border_left: 72, min_border_right: 12,
     title: new Bokeh.Title({
-      text: `${plan.axes[axis].name} ${row.name}, ${row.unit}`, text_font_size: "12px",
+      text_font_size: "12px",
       text_font_style: "normal", text_color: css("--ink"),
     }),
   });
@@ -213,7 +229,7 @@ function curveFigure(axis, row, width, last) {
   if (last) figure.xaxis.axis_label = "time, s";
   figure.yaxis.ticker = new Bokeh.BasicTicker({ desired_num_ticks: 4 });
   figure.xaxis.ticker = new Bokeh.BasicTicker({ desired_num_ticks: 6 });
-  figure.yaxis.formatter = new Bokeh.BasicTickFormatter({ power_limit_high: 7 });
+  const scale = figure.yaxis.formatter = formatter();
   const forbidden = { fill_color: css("--beyond"), fill_alpha: 0.10, hatch_pattern: "/", hatch_color: css("--beyond"), hatch_alpha: 0.35, hatch_weight: 0.6, hatch_scale: 8, level: "underlay" };
   const line = { line_color: css("--beyond"), line_width: 1, line_dash: [5, 3] };
   const moving = new Bokeh.ColumnDataSource({ data: { t: [], low: [], high: [], floor: [], sky: [] } });
@@ -248,68 +264,101 @@ function curveFigure(axis, row, width, last) {
   figure.x_range.properties.end.change.connect(moved);
   figure.on_event("mousemove", (event) => { if (!state.playing) setNow(event.x); });
   figure.on_event("tap", (event) => setNow(event.x));
-  return { figure, row, axis, source, limit, moving, mark, now, columns: Math.max(width - 80, 100) };
+  return { figure, row, axis, source, limit, scale, moving, mark, now, columns: Math.max(width - 80, 100) };
 }
 
 function refresh(own) {
-  const { t, y } = own.row.curve(state.from, state.to, own.columns);
+  const { row, figure } = own;
+  const { t, y } = row.curve(state.from, state.to, own.columns);
   own.source.data = { t, y };
-  const tMarked = [], yMarked = [], half = (state.to - state.from) / own.columns / 2;
-  for (let i = 0; i < t.length; i++) {
-    if (!own.row.reached(y[i], t[i])) continue;
-    tMarked.push(t[i] - half, t[i] + half, NaN);
-    yMarked.push(y[i], y[i], NaN);
-  }
-  own.limit.data = { t: tMarked, y: yMarked };
-  if (own.row.bounds) {
-    const edges = t.map(own.row.bounds), far = 4 * own.row.high;
-    own.moving.data = { t, low: edges.map((edge) => edge[0]), high: edges.map((edge) => edge[1]), floor: t.map(() => -far), sky: t.map(() => far) };
-  }
+  own.limit.data = atLimit(row, t, y, (state.to - state.from) / own.columns / 2);
+  if (row.bounds) own.moving.data = bandsOf(row, own.columns);
   let low = Infinity, high = -Infinity;
   for (const value of y) { low = Math.min(low, value); high = Math.max(high, value); }
-  if (state.toLimits && own.row.low !== null) { low = Math.min(low, own.row.low); high = Math.max(high, own.row.high); }
+  const far = row.marked && row.peak > 0 && row.peak < FLAT * row.high;
+  if (state.toLimits && row.low !== null && !far) { low = Math.min(low, row.low); high = Math.max(high, row.high); }
+  figure.title.text = `${plan.axes[own.axis].name} ${row.name}, ${row.unit}${far ? ` (limit ${digits(row.high)})` : ""}`;
   const room = 0.08 * (high - low) || Math.max(Math.abs(high), 1) * 0.1;
-  own.figure.y_range.setv({ start: low - room, end: high + room });
+  figure.y_range.setv({ start: low - room, end: high + room });
+  // Few digits of a power of ten keep the scale as narrow as the others'.
+  own.scale.precision = Math.max(-low, high) >= 1e7 ? 1 : "auto";
+}
+
+/* The stretches of a curve that are at a limit; an instant is drawn as wide as can be seen. */
+function atLimit(row, t, y, half) {
+  const marked = { t: [], y: [] };
+  const add = (...points) => { for (const [when, value] of points) { marked.t.push(when); marked.y.push(value); } };
+  for (let i = 0; i < t.length; i++) {
+    if (!reached(row, y[i], t[i])) continue;
+    add([t[i] - half, y[i]], [t[i] + half, y[i]]);
+    const middle = (t[i] + t[i + 1]) / 2;
+    // Of a crowded curve the next point may be at the other limit.
+    if (y[i] * y[i + 1] > 0 && row.ends(middle).some((value) => reached(row, value, middle)) && reached(row, y[i + 1], middle)) {
+      add([t[i + 1], y[i + 1]]);
+    }
+    add([NaN, NaN]);
+  }
+  return marked;
+}
+
+/* Bounds that change with the velocity, column by column of the screen. */
+function bandsOf(row, columns) {
+  const found = { t: [], low: [], high: [], floor: [], sky: [] }, far = 4 * row.high;
+  const wide = (state.to - state.from) / columns;
+  for (let k = 0; k < columns; k++) {
+    const start = state.from + k * wide, [low, high] = row.bounds(start + wide / 2);
+    found.t.push(start, start + wide);
+    found.low.push(low, low); found.high.push(high, high);
+    found.floor.push(-far, -far); found.sky.push(far, far);
+  }
+  return found;
 }
 
 /* ---- views in space ---- */
 
 const across = plan.columns[0], along = plan.columns[1], height = plan.columns[2];
 
+const track = plan.sides.length ? {
+  ...plan.track, times: numbers(plan.track.times, Float64Array), classes: numbers(plan.track.classes, Uint8Array),
+  feet: plan.track.feet && placed(plan.track.feet, 2),
+} : null;
+if (track) track.points = track.points ? placed(track.points, 3) : Float64Array.from([...track.times].flatMap(exactly));
+
+/* Points that are counted from the lowest corner of what is seen. */
+function placed(text, columns) {
+  return Float64Array.from(numbers(text, Float32Array), (value, index) => value + plan.extent[0][index % columns]);
+}
+
+function exactly(when) { return [across, along, height].map((axis) => axis === null ? 0 : motion.at(axis, 0, when)); }
+
+/* Where the tool point is drawn at a time: across, along and height. */
 function seen(when) {
-  return [across, along, height].map((axis) => axis === null ? 0 : motion.at(axis, 0, when));
+  const first = Math.max(Math.min(before(track.times, when), track.times.length - 2), 0), next = first + 1;
+  const share = clamp((when - track.times[first]) / (track.times[next] - track.times[first]) || 0, 0, 1);
+  const place = motion instanceof Exact ? exactly(when)
+    : [0, 1, 2].map((k) => between(track.points[3 * first + k], track.points[3 * next + k], share));
+  const foot = track.feet && [0, 1].map((k) => between(track.feet[2 * first + k], track.feet[2 * next + k], share));
+  return magnified(place, foot);
 }
 
-const track = plan.sides.length ? trackOf() : null;
-
-function trackOf() {
-  const times = numbers(plan.track.times, Float64Array);
-  const feet = numbers(plan.track.feet, Float32Array);
-  const points = [[], [], []], speed = [];
-  const linear = plan.axes.map((axis, index) => axis.kind === "linear" ? index : -1).filter((index) => index >= 0);
-  for (let i = 0; i < times.length; i++) {
-    seen(times[i]).forEach((value, column) => points[column].push(value));
-    const middle = (times[i] + times[Math.min(i + 1, times.length - 1)]) / 2;
-    speed.push(Math.hypot(...linear.map((axis) => motion.at(axis, 1, middle))));
-  }
-  return { times, feet, points, speed, most: speed.reduce((one, other) => Math.max(one, other), 0) };
+/* Where an instant of the track is drawn. */
+function shown(index) {
+  const foot = track.feet && track.feet.subarray(2 * index, 2 * index + 2);
+  return magnified(track.points.subarray(3 * index, 3 * index + 3), foot);
 }
 
-/* Where a point of the motion is drawn: farther from what it follows, if that is asked for. */
-function shown(index, point) {
-  const [x, y] = [track.feet[2 * index], track.feet[2 * index + 1]];
-  if (state.magnified === 1 || Number.isNaN(x)) return point;
-  return [x + state.magnified * (point[0] - x), y + state.magnified * (point[1] - y), point[2]];
+/* Draws a point farther from what it follows, if that is asked for. */
+function magnified(place, foot) {
+  if (state.magnified === 1 || !foot || Number.isNaN(foot[0])) return place;
+  return [between(foot[0], place[0], state.magnified), between(foot[1], place[1], state.magnified), place[2]];
 }
-
-function classOf(speed) { return Math.min(Math.floor(speed / (track.most || 1) * 5), 4); }
 
 function spaceFigure(side, width) {
   const [right, up] = side.name === "plan" ? [0, 1] : [0, 2];
   const low = plan.extent[0], high = plan.extent[1];
-  const margin = 0.06 * Math.max(high[right] - low[right], high[up] - low[up], 1);
-  const reach = (plan.tool || [[0, 0]]).map((corner) => Math.abs(corner[0]));
-  const extra = margin + Math.max(...reach, 0);
+  const margin = 0.06 * Math.max(high[right] - low[right], high[up] - low[up]) || 1;
+  const shapes = [plan.tool, ...plan.hanging.map((held) => held.outline)].filter(Boolean).flat();
+  const extra = margin + shapes.reduce((most, corner) => Math.max(most, ...corner.map(Math.abs)), 0);
   const inner = width - 84;
   const spanX = high[right] - low[right] + 2 * extra, spanY = high[up] - low[up] + 2 * extra;
   const tall = clamp(inner * spanY / spanX, 150, 460);
@@ -338,7 +387,8 @@ function spaceFigure(side, width) {
   figure.multi_line({ field: "xs" }, { field: "ys" }, { source: add("drawn", { xs: lines.map((own) => column(own, right)), ys: lines.map((own) => column(own, up)) }), line_color: css("--drawn"), line_width: 1.2, line_dash: "dashed" });
   figure.line({ field: "x" }, { field: "y" }, { source: add("step", { x: [], y: [] }), line_color: css("--accent"), line_width: 11, line_alpha: 0.3, line_cap: "round" });
   figure.segment({ field: "x0" }, { field: "y0" }, { field: "x1" }, { field: "y1" }, { source: add("path", { x0: [], y0: [], x1: [], y1: [], color: [], width: [] }), line_color: { field: "color" }, line_width: { field: "width" }, line_cap: "round" });
-  if (plan.meeting) meeting(figure, side);
+  const room = scale * 12, taken = plan.meeting ? [meeting(figure, side, scale)] : [];
+  if (side.name === "plan") names(figure, room, taken);
   for (const [name, color] of [["tool", "--accent"], ["part", "--part"]]) {
     figure.patch({ field: "x" }, { field: "y" }, { source: add(name, { x: [], y: [] }), fill_color: css(color), fill_alpha: 0.18, line_color: css(color), line_width: 1.3, ...OVER });
   }
@@ -354,49 +404,56 @@ function spaceFigure(side, width) {
 }
 
 function keepouts(figure, side, floor, sky) {
-  const xs = [], ys = [], names = [], x = [], y = [];
+  const xs = [], ys = [];
   for (const own of plan.keepouts) {
-    const corners = own.outlines.flat();
-    const left = Math.min(...corners.map((c) => c[0])), right = Math.max(...corners.map((c) => c[0]));
     const top = own.top === null ? sky : own.top;
-    if (side.name === "plan") {
-      for (const outline of own.outlines) { xs.push(outline.map((c) => c[0])); ys.push(outline.map((c) => c[1])); }
-      y.push(Math.max(...corners.map((c) => c[1])));
-    } else {
-      xs.push([left, right, right, left]);
-      ys.push([floor, floor, top, top]);
-      y.push(clamp(top, Math.min(plan.extent[0][2], plan.extent[1][2]), Math.max(plan.extent[0][2], plan.extent[1][2])));
+    for (const outline of own.outlines) {
+      const across = outline.map((corner) => corner[0]), left = Math.min(...across), right = Math.max(...across);
+      xs.push(side.name === "plan" ? across : [left, right, right, left]);
+      ys.push(side.name === "plan" ? outline.map((corner) => corner[1]) : [floor, floor, top, top]);
     }
-    names.push(own.name);
-    x.push((left + right) / 2);
   }
   const source = new Bokeh.ColumnDataSource({ data: { xs, ys } });
   figure.patches({ field: "xs" }, { field: "ys" }, { source, fill_color: css("--beyond"), fill_alpha: 0.12, line_color: css("--beyond"), hatch_pattern: "/", hatch_color: css("--beyond"), hatch_alpha: 0.5, hatch_scale: 8, hatch_weight: 0.6 });
-  if (side.name !== "plan") return;
-  for (let k = 0; k < names.length && k < 12; k++) {
-    figure.add_layout(new Bokeh.Label({ x: x[k], y: y[k], text: names[k], text_font_size: "11px", text_color: css("--ink"), text_align: "center", text_baseline: "bottom", background_fill_color: css("--paper"), background_fill_alpha: 0.7, padding: 1, y_offset: 3 }));
+}
+
+function words(figure, x, y, text, options) {
+  figure.add_layout(new Bokeh.Label({ x, y, text, text_font_size: "11px", text_color: css("--ink"), background_fill_color: css("--paper"), background_fill_alpha: 0.85, padding: 1, ...options }));
+}
+
+/* Names keep-outs where a name has room: the table of the cell has all of them. */
+function names(figure, room, taken) {
+  for (const own of plan.keepouts) {
+    const highest = own.outlines.flat().reduce((one, other) => other[1] > one[1] ? other : one);
+    const outline = own.outlines.find((corners) => corners.includes(highest)).map((corner) => corner[0]);
+    const x = (Math.min(...outline) + Math.max(...outline)) / 2, half = own.name.length * room * 0.32;
+    const box = [x - half, x + half, highest[1], highest[1] + 1.6 * room];
+    if (taken.some((other) => box[0] < other[1] && other[0] < box[1] && box[2] < other[3] && other[2] < box[3])) continue;
+    taken.push(box);
+    words(figure, x, highest[1], own.name, { text_align: "center", text_baseline: "bottom", y_offset: 3 });
   }
 }
 
-function meeting(figure, side) {
-  const own = plan.meeting;
-  const [one, other] = own.gap;
-  const place = seen(own.time);
+/* Draws the smallest clearance; returns what its value covers. */
+function meeting(figure, side, scale) {
+  const own = plan.meeting, [one, other] = own.gap;
+  const level = seen(own.time)[2];
   const ends = side.name === "plan" ? [one, other]
-    : own.heights === null ? [[one[0], place[2]], [other[0], place[2]]] : [[one[0], own.heights[0]], [other[0], own.heights[1]]];
+    : own.heights === null ? [[one[0], level], [other[0], level]] : [[one[0], own.heights[0]], [other[0], own.heights[1]]];
   const source = new Bokeh.ColumnDataSource({ data: { x: ends.map((p) => p[0]), y: ends.map((p) => p[1]) } });
   figure.line({ field: "x" }, { field: "y" }, { source, line_color: css("--warn"), line_width: 3 });
   figure.scatter({ field: "x" }, { field: "y" }, { source, size: 7, marker: "square", line_color: css("--warn"), fill_color: css("--paper"), line_width: 2 });
-  figure.add_layout(new Bokeh.Label({ x: ends[1][0], y: ends[1][1], text: own.label, x_offset: 8, y_offset: 8, text_font_size: "12px", text_color: css("--ink"), background_fill_color: css("--paper"), background_fill_alpha: 0.85, padding: 2 }));
+  const [x, y] = ends[1];
+  words(figure, x, y, own.label, { x_offset: 8, y_offset: 8, text_font_size: "12px", padding: 2 });
+  return [x - 8 * scale, x + (12 + 8 * own.label.length) * scale, y - 8 * scale, y + 28 * scale];
 }
 
 function refreshSpace(own) {
   const data = { x0: [], y0: [], x1: [], y1: [], color: [], width: [] };
-  const point = (i) => shown(i, [track.points[0][i], track.points[1][i], track.points[2][i]]);
   const look = [0, 1, 2, 3, 4].map((k) => [css(`--speed-${k}`), 1.6 + 1.1 * k]);
-  let last = point(0);
+  let last = shown(0);
   for (let i = 1; i < track.times.length; i++) {
-    const next = point(i), [color, width] = look[classOf(track.speed[i - 1])];
+    const next = shown(i), [color, width] = look[track.classes[i - 1]];
     if (last[own.right] !== next[own.right] || last[own.up] !== next[own.up]) {
       data.x0.push(last[own.right]); data.y0.push(last[own.up]);
       data.x1.push(next[own.right]); data.y1.push(next[own.up]);
@@ -418,7 +475,7 @@ function markIn(own) {
   const x = [], y = [];
   if (state.mark) {
     for (let i = before(track.times, state.mark.start); i < track.times.length && track.times[i] <= state.mark.end; i++) {
-      const place = shown(i, [track.points[0][i], track.points[1][i], track.points[2][i]]);
+      const place = shown(i);
       x.push(place[own.right]); y.push(place[own.up]);
     }
   }
@@ -427,7 +484,7 @@ function markIn(own) {
 
 /* Shows less or more about the tool point; with a factor of 0 all of it. */
 function zoomSpace(own, factor) {
-  const at = shown(before(track.times, state.now), seen(state.now));
+  const at = seen(state.now);
   const ranges = [[own.figure.x_range, at[own.right], 0], [own.figure.y_range, at[own.up], 1]];
   for (const [range, about, which] of ranges) {
     const half = factor * (range.end - range.start) / 2;
@@ -436,7 +493,7 @@ function zoomSpace(own, factor) {
 }
 
 function placeTool(own) {
-  const at = shown(before(track.times, state.now), seen(state.now));
+  const at = seen(state.now);
   own.sources.now.data = { x: [at[own.right]], y: [at[own.up]] };
   const part = plan.hanging.find((held) => held.start <= state.now && state.now < held.end);
   const span = (outline) => [Math.min(...outline.map((c) => c[0])), Math.max(...outline.map((c) => c[0]))];
@@ -464,11 +521,12 @@ function setNow(when) {
   for (const own of figures) own.now.location = state.now;
   for (const own of spaces) placeTool(own);
   $("scrub").value = state.now;
-  $("clock").textContent = `${state.now.toFixed(3)} s`;
+  const told = `${state.now.toFixed(plan.duration < 0.1 ? 6 : 3)} s`;
+  $("clock").textContent = told;
   $("playhead").style.left = `${100 * state.now / (plan.duration || 1)}%`;
   const step = stepAt(state.now);
   $("at-step").textContent = step ? step.name : "";
-  $("scrub").setAttribute("aria-valuetext", `${state.now.toFixed(3)} s, ${step ? step.name : ""}`);
+  $("scrub").setAttribute("aria-valuetext", `${told}, ${step ? step.name : ""}`);
   readout();
 }
 
@@ -484,7 +542,8 @@ function readout() {
   for (let axis = 0; axis < plan.axes.length; axis++) {
     axisRows[axis].forEach((row, k) => {
       const cell = $(`value-${axis}-${k}`);
-      if (cell) cell.textContent = digits(row.at(state.now));
+      const told = row.ends(state.now).map(digits);
+      if (cell) cell.textContent = told[0] === told[1] ? told[0] : told.join(" to ");
     });
   }
 }
@@ -636,7 +695,7 @@ function legend() {
     line.className = "stroke";
     line.style.height = `${1.6 + 1.1 * k}px`;
     line.style.background = `var(--speed-${k})`;
-    item.append(line, `${digits(Number((k * track.most / 5).toPrecision(3)))} to ${digits(Number(((k + 1) * track.most / 5).toPrecision(3)))}`);
+    item.append(line, [k, k + 1].map((edge) => digits(Number((edge * track.most / 5).toPrecision(3)))).join(" to "));
     $("speeds").append(item);
   }
 }
@@ -670,6 +729,18 @@ function act() {
       setRange(span.start - room, span.end + room);
     });
   }
+  // A row of the timeline is one stop of the Tab key, however many blocks it has.
+  for (const lane of document.querySelectorAll(".lane")) {
+    lane.addEventListener("keydown", (event) => {
+      const step = { ArrowLeft: "previousElementSibling", ArrowRight: "nextElementSibling" }[event.key];
+      const next = step ? event.target[step] : { Home: lane.firstElementChild, End: lane.lastElementChild }[event.key];
+      if (!next) return;
+      event.target.tabIndex = -1;
+      next.tabIndex = 0;
+      next.focus();
+      event.preventDefault();
+    });
+  }
   for (const element of document.querySelectorAll("[data-view]")) {
     element.addEventListener("click", () => zoomSpace(spaces[element.dataset.view], Number(element.dataset.factor)));
   }
@@ -699,6 +770,8 @@ function act() {
   });
 }
 
+// What is drawn over a figure stays within its frame, as all else does.
+Object.defineProperty(Bokeh.GlyphRenderer.prototype.default_view.prototype, "needs_clip", { get: () => true });
 theme(matchMedia("(prefers-color-scheme: dark)").matches ? "dark" : "light");
 legend();
 act();

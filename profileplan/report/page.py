@@ -10,6 +10,7 @@ import json
 import math
 from importlib.resources import files
 from importlib.util import find_spec
+from itertools import groupby
 from pathlib import Path
 from typing import TYPE_CHECKING, NamedTuple
 
@@ -39,8 +40,11 @@ NEEDED = ("bokeh", "jinja2")
 
 HOW_TO_GET = "pip install 'profileplan[report]'"
 
-SHORTEST = 1e-3
-"""Share of the cycle below which a step of many has no block of its own in the timeline."""
+MOST_BLOCKS = 400
+"""Blocks of a row of the timeline; of more, those that are near each other are drawn as one."""
+
+SHORT = 0.0095
+"""Times below would be a few milliseconds."""
 
 TICKS = 8
 """About so many times are written under the timeline."""
@@ -162,23 +166,23 @@ def _bokeh() -> Iterator[str]:
 def _facts(planned: PlannedCycle, scene: Scene, loads: Sequence[LoadCurve]) -> dict[str, object]:
     """Return what the template says in words."""
     source, findings = planned.job.cycle.source, planned.check()
-    lanes, left_out = _lanes(planned, scene)
-    reduced = ""
-    if planned.trajectory.coefficients.size > curves.MOST_NUMBERS:
+    reduced = []
+    if curves.is_long(planned.trajectory):
         wide = planned.duration / curves.STRETCHES
-        reduced = (
-            f"A long cycle: curves show the least and the greatest value of every {wide:.3g} s."
+        reduced.append(
+            f"A long cycle: curves and values are the least and the greatest of every {wide:.3g} s."
         )
+    if scene.sides and scene.times[-1] < planned.duration:
+        reduced.append(f"The views show the way of the first {scene.times[-1]:.3g} s.")
     return {
         "title": planned.job.machine.name,
         "source": str(source) if source else "cycle made in a program",
         "tiles": list(_tiles(planned)),
         "amiss": [wording.amiss(finding) for finding in findings if not finding.ok],
-        "lanes": lanes,
-        "left_out": left_out,
+        "lanes": list(lanes(planned, scene)),
         "ticks": list(_ticks(planned.duration)),
         "duration": repr(planned.duration),
-        "step": f"{max(planned.job.machine.setpoints.period, planned.duration / 100_000):.6g}",
+        "step": f"{_step(planned):.6g}",
         "magnifications": scene.magnifications,
         "sides": [{"name": side.name, "label": _label(side.name)} for side in scene.sides],
         "drawn": bool(scene.drawn),
@@ -186,7 +190,8 @@ def _facts(planned: PlannedCycle, scene: Scene, loads: Sequence[LoadCurve]) -> d
         "keepouts": bool(scene.keepouts),
         "meeting": "" if scene.meeting is None else scene.meeting.what,
         "speed_unit": "mm/s along the linear axes",
-        "reduced": reduced,
+        "reduced": " ".join(reduced),
+        "long": curves.is_long(planned.trajectory),
         "axes": [
             {
                 "name": axis.name,
@@ -226,11 +231,22 @@ def _tiles(planned: PlannedCycle) -> Iterator[Tile]:
     yield _motor(findings)
 
 
+def _step(planned: PlannedCycle) -> float:
+    """Return by how much an arrow key shifts the time [s]: a tick of the setpoints, or more."""
+    duration = planned.duration
+    return min(max(planned.job.machine.setpoints.period, duration / 100_000), duration / 100) or 1.0
+
+
+def _seconds(time: float) -> str:
+    """Return a time to the millisecond, and a short one in four digits."""
+    return f"{time:.3f} s" if time >= SHORT else f"{time:.4g} s"
+
+
 def _time(planned: PlannedCycle) -> Tile:
-    figure, target = f"{planned.duration:.3f} s", planned.target
+    figure, target = _seconds(planned.duration), planned.target
     if target is None:
         return Tile("Cycle time", figure, "no target given")
-    apart = f"{abs(target - planned.duration):.3f} s"
+    apart = _seconds(abs(target - planned.duration))
     told = f"{apart} to spare" if planned.meets_target else f"{apart} too long"
     share = planned.duration / target
     state = "good" if planned.meets_target else "bad"
@@ -252,7 +268,7 @@ def _held(planned: PlannedCycle) -> Tile:
     return Tile(
         "What limits it",
         wording.lever(first.limit),
-        f"10 % more would save {first.limit.saves:.3f} s ({100 * share:.1f} % of the cycle)",
+        f"10 % more would save {_seconds(first.limit.saves)} ({100 * share:.1f} % of the cycle)",
     )
 
 
@@ -285,36 +301,47 @@ def _motor(findings: Sequence[Finding]) -> Tile:
     return Tile(head, f"{100 * share:.0f} %", told, "good" if worst.ok else "bad", share)
 
 
-def _lanes(planned: PlannedCycle, scene: Scene) -> tuple[list[Lane], str]:
-    """Return the rows of the timeline, and what is said of steps that have no block."""
+def lanes(planned: PlannedCycle, scene: Scene) -> Iterator[Lane]:
+    """Yield the rows of the timeline."""
     whole = planned.duration or 1.0
 
-    def block(mark: str, kind: str, text: str, start: float, end: float) -> Block:
-        left, width = 100 * start / whole, 100 * (end - start) / whole
-        return Block(mark, kind, text, start, end, f"{left:.4f}", f"{width:.4f}")
+    def block(mark: str, kind: str, text: str, times: tuple[float, float]) -> Block:
+        left, width = 100 * times[0] / whole, 100 * (times[1] - times[0]) / whole
+        return Block(mark, kind, text, *times, f"{left:.4f}", f"{width:.4f}")
 
-    shortest = SHORTEST * whole if len(planned.steps) > rows.MOST_STEPS else 0.0
-    steps = []
+    def lane(name: str, blocks: list[Block]) -> Lane:
+        if len(blocks) <= MOST_BLOCKS:
+            return Lane(name, blocks)
+        fused = []
+        for _, group in groupby(blocks, lambda own: int(own.start / whole * MOST_BLOCKS)):
+            first, *more = group
+            last = more[-1] if more else first
+            kind = first.kind if all(own.kind == first.kind for own in more) else "step"
+            text = first.text if first.text == last.text else f"{first.text} … {last.text}"
+            fused.append(block(first.mark, kind, text, (first.start, last.end)))
+        return Lane(name, fused)
+
     asked = planned.job.cycle.steps
-    for index, step in enumerate(planned.steps):
-        if step.duration > shortest:
-            kind = "wait" if isinstance(asked[index], Wait) else "step"
-            steps.append(block(rows.step_mark(index), kind, step.name, step.start, step.end))
-    lanes = [Lane("steps", steps)]
+    steps = [
+        block(
+            rows.step_mark(index),
+            "wait" if isinstance(asked[index], Wait) else "step",
+            step.name,
+            (step.start, step.end),
+        )
+        for index, step in enumerate(planned.steps)
+        if step.duration > 0
+    ]
+    yield lane("steps", steps)
     for number, name in enumerate(planned.signals):
-        on = [
-            block(f"signal-{number}-{turn}", "on", name, *times)
-            for turn, times in enumerate(_on(planned, name))
-        ]
-        lanes.append(Lane(name, on))
+        times = enumerate(_on(planned, name))
+        yield lane(name, [block(f"signal-{number}-{turn}", "on", name, own) for turn, own in times])
     held = [
-        block(f"payload-{turn}", "held", _held_text(own.mass), own.start, own.end)
+        block(f"payload-{turn}", "held", _held_text(own.mass), (own.start, own.end))
         for turn, own in enumerate(scene.hanging)
     ]
     if held:
-        lanes.append(Lane("payload", held))
-    short = sum(step.duration > 0 for step in planned.steps) - len(steps)
-    return lanes, f"{short} steps below {shortest:.3g} s are not shown." if short else ""
+        yield lane("payload", held)
 
 
 def _held_text(mass: float) -> str:
@@ -389,13 +416,23 @@ def _space(scene: Scene) -> dict[str, object]:
     """Return what is seen in space, as plain values."""
     if not scene.sides:
         return {"sides": [], "columns": [None, None, None], "drawn": [], "hanging": []}
+    # Far from 0, single precision is good enough only from a corner of what is seen.
+    low = scene.extent[0]
     return {
         "sides": [side._asdict() for side in scene.sides],
         "columns": list(scene.columns),
         "extent": scene.extent.tolist(),
         "track": {
             "times": curves.text(scene.times),
-            "feet": curves.text(scene.feet, "<f4"),
+            # Of polynomials the page knows them.
+            "points": curves.text(scene.seen(scene.planned.trajectory.at(scene.times)) - low, "<f4")
+            if curves.is_long(scene.planned.trajectory)
+            else None,
+            "feet": None
+            if np.isnan(scene.feet).all()
+            else curves.text(scene.feet - low[:2], "<f4"),
+            "classes": curves.text(scene.speed_classes(scene.times), "u1"),
+            "most": scene.top_speed,
         },
         "drawn": [{"step": own.step, "line": curves.text(own.line, "<f4")} for own in scene.drawn],
         "bands": {

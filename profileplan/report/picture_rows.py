@@ -28,6 +28,9 @@ SAMPLES = 900
 REACHED = 0.999
 """Share of a limit from which on it counts as reached."""
 
+AT_END = 1e-6
+"""Share of the travel within which a position is at its end."""
+
 STANDING = 1e-9
 """Share of an axis's greatest speed below which it stands: it neither speeds up nor slows down."""
 
@@ -146,7 +149,8 @@ def _curve(axis: Axis, title: str, samples: _Samples) -> Curve:
     values = samples.values
     if title == "position":
         least, most = axis.travel
-        near = (1 - REACHED) * (most - least)
+        # A share of the travel would mark what is far from its ends.
+        near = AT_END * (most - least)
         low, high = np.full_like(values, least), np.full_like(values, most)
         held = np.asarray((values >= most - near) | (values <= least + near))
         return Curve(title, unit, samples.times, values, low, high, held)

@@ -28,6 +28,9 @@ LARGE, PLAIN, SMALL, TINY = 12.0, 8.0, 7.0, 6.0
 APART, GAP, TALL = 0.3, 0.1, 0.12
 """Least distance of numbers beside each other, their least gap, and the height of one [inches]."""
 
+LONGEST = 9
+"""Signs of a number; longer ones are told as "1e+12"."""
+
 POINTS = 72.0
 """In an inch."""
 
@@ -107,6 +110,8 @@ def shortened(text: str, size: float, room: float) -> str:
 def number(value: float) -> str:
     """Return a number of a scale, in as few digits as it needs."""
     digits = f"{round(value, 9) + 0.0:.9f}".rstrip("0").removesuffix(".")
+    if len(digits) > LONGEST:
+        digits = f"{value:.7g}"
     return digits.replace("-", "\N{MINUS SIGN}")
 
 

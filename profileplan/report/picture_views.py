@@ -123,19 +123,9 @@ class Looks:
         return self.scene.seen(self.scene.planned.trajectory.at(self.times))
 
     @cached_property
-    def top_speed(self) -> float:
-        """The greatest speed of the linear axes together [mm/s], exactly."""
-        speeds = self.scene.planned.trajectory.speeds(self.scene.machine.linear)
-        return float(speeds.value.max())
-
-    @cached_property
     def levels(self) -> Indices:
         """The step of speed between each two instants, (m - 1,), counted from 0."""
-        middles = 0.5 * (self.times[1:] + self.times[:-1])
-        velocity = self.scene.planned.trajectory.at(middles, 1)[:, list(self.scene.machine.linear)]
-        share = np.linalg.norm(velocity, axis=1) / (self.top_speed or 1.0)
-        levels: Indices = np.clip(np.floor(share * LEVELS), 0, LEVELS - 1).astype(np.intp)
-        return levels
+        return self.scene.speed_classes(self.times, LEVELS)
 
     @cached_property
     def views(self) -> tuple[View, ...]:
@@ -277,7 +267,7 @@ def draw_view(axes: Axes, looks: Looks, view: View, size: tuple[float, float]) -
 
 def draw_speeds(axes: Axes, looks: Looks, wide: float) -> None:
     """Draw how fast a line of a width and colour is, on axes of a width [inches]."""
-    top = looks.top_speed or 1.0
+    top = looks.scene.top_speed or 1.0
     edges = np.linspace(0.0, top, LEVELS + 1).tolist()
     for level, ends in enumerate(pairwise(edges)):
         axes.plot(
@@ -445,6 +435,8 @@ def _ribbons(points: Array, levels: Indices) -> LineCollection:
     runs = shapely.simplify(
         [shapely.LineString(ends[one : other + 1]) for one, other in zip(first, last, strict=True)],
         FINE * float(np.ptp(points, axis=0).max()),
+        # Lines have no inside; to watch over it takes long where points are many on a line.
+        preserve_topology=False,
     )
     order = np.argsort(-own, kind="stable")
     return LineCollection(

@@ -14,13 +14,12 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 
 from profileplan.inputs import PathStep, Payload, Trace
-from profileplan.report.curves import sampled_times
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
 
     from profileplan.inputs import Machine, Tool
-    from profileplan.motion.polynomials import Array
+    from profileplan.motion.polynomials import Array, Flags, Indices
     from profileplan.results import PlannedCycle
 
 CORNERS = 48
@@ -29,14 +28,32 @@ CORNERS = 48
 FLATTENED = 0.1
 """Share of a tolerance by which what is drawn may differ from a curve."""
 
+FINE = 0.02
+"""The same share of one that is magnified."""
+
 COARSE = 2e-4
 """The same as a share of what is in view, where the tolerance is finer than can be seen."""
 
 SEEN = 0.02
 """Share of what is in view that the tolerance is magnified to."""
 
-MOST_SAMPLES = 6_000
-"""About as many instants of the motion are drawn in space."""
+BEND = 0.2
+"""Share of a tolerance by which the motion may differ from what is drawn of it."""
+
+ROOM = 0.3
+"""Share of the size of what is followed that its tolerance is magnified to at most."""
+
+INSTANTS = 6_000
+"""About as many instants of a motion of few pieces are drawn in space."""
+
+A_PIECE = 4
+"""Instants of every piece of a motion of many; those that bend the way are kept."""
+
+MOST_INSTANTS = 40_000
+"""No more are drawn in space: the motion from the beginning on."""
+
+SPEEDS = 5
+"""Classes of speed that are told apart."""
 
 
 class Side(NamedTuple):
@@ -211,7 +228,9 @@ class Scene:
         allowed = max((own.tolerance for own in self.drawn), default=0.0)
         if not allowed:
             return (1,)
-        most = SEEN * self.size / allowed
+        # Larger bands of small outlines would cover each other.
+        spans = [np.ptp(own.line[:, :2], axis=0).max() for own in self.drawn if own.tolerance]
+        most = min(SEEN * self.size, ROOM * float(np.median(spans)) or math.inf) / allowed
         round_ones = [factor * 10**decade for decade in range(7) for factor in (1, 2, 5)]
         larger = [factor for factor in round_ones if 1 < factor <= most]
         return (1, *larger[-3::2])
@@ -233,7 +252,8 @@ class Scene:
         for (_, tolerance), lines in allowed.items():
             radius = tolerance * factor
             whole = shapely.MultiLineString([shapely.LineString(line) for line in lines])
-            band = shapely.simplify(shapely.buffer(whole, radius, quad_segs=6), 0.02 * radius)
+            fine = FINE if factor > 1 else FLATTENED
+            band = shapely.simplify(shapely.buffer(whole, radius, quad_segs=6), fine * radius)
             for part in getattr(band, "geoms", [band]):
                 rings = [part.exterior, *part.interiors]
                 found.append(tuple(np.asarray(shapely.get_coordinates(ring)) for ring in rings))
@@ -241,10 +261,63 @@ class Scene:
 
     @cached_property
     def times(self) -> Array:
-        """Instants at which the motion is drawn, (m,) [s], among them every break if few enough."""
-        followed = [time for own in self.drawn for time in (own.start, own.end)]
-        even = sampled_times(self.planned.trajectory, MOST_SAMPLES)
-        return np.unique(np.concatenate([even, followed]))
+        """Instants between which the motion is drawn as straight, (m,) [s].
+
+        Among them are the ends of steps and of what is followed.
+        """
+        motion = self.planned.trajectory
+        share = np.linspace(
+            0.0, 1.0, max(A_PIECE, INSTANTS // motion.durations.size), endpoint=False
+        )
+        within = motion.breaks[:-1, np.newaxis] + motion.durations[:, np.newaxis] * share
+        ends = np.array(
+            [
+                *(0.0, motion.duration),
+                *(step.start for step in self.planned.steps),
+                *(time for own in self.drawn for time in (own.start, own.end)),
+            ]
+        )
+        ends = np.unique(np.clip(ends, 0.0, motion.duration))
+        times = np.unique(np.concatenate([within.ravel(), ends]))
+        if times.size > 2 * INSTANTS:
+            times = times[self._needed(times, np.searchsorted(times, ends))]
+        return times[:MOST_INSTANTS]
+
+    def _needed(self, times: Array, cuts: Indices) -> Flags:
+        """Tell which instants bend the way or change the class of speed; those at cuts do, too."""
+        import shapely  # noqa: PLC0415
+
+        near = np.full(cuts.size - 1, COARSE * self.size)
+        for own in self.drawn:
+            if own.tolerance:
+                first, last = np.searchsorted(times[cuts], [own.start, own.end])
+                near[first:last] = np.minimum(near[first:last], BEND * own.tolerance)
+        needed = np.zeros(times.size, dtype=bool)
+        needed[cuts] = True
+        needed[1:-1] |= np.diff(self.speed_classes(times)) != 0
+        way = self.seen(self.planned.trajectory.at(times))
+        runs = np.repeat(np.arange(near.size), np.diff(cuts) + 1)
+        index = np.arange(runs.size) - runs
+        for columns in ([0, 1], [0, 2], [1, 2]):
+            # The third coordinate tells which corners are left.
+            corners = np.column_stack([way[:, columns], np.arange(times.size)])[index]
+            lines = shapely.linestrings(corners, indices=runs)
+            left = shapely.simplify(lines, near, preserve_topology=False)
+            needed[shapely.get_coordinates(left, include_z=True)[:, 2].astype(np.intp)] = True
+        return needed
+
+    @cached_property
+    def top_speed(self) -> float:
+        """The greatest speed of the linear axes together [mm/s], exactly."""
+        return float(self.planned.trajectory.speeds(self.machine.linear).value.max())
+
+    def speed_classes(self, times: Array, classes: int = SPEEDS) -> Indices:
+        """Return the class of speed between each two of (m,) times [s], from 0: (m - 1,)."""
+        middles = 0.5 * (times[1:] + times[:-1])
+        velocity = self.planned.trajectory.at(middles, 1)[:, list(self.machine.linear)]
+        share = np.linalg.norm(velocity, axis=1) / (self.top_speed or 1.0)
+        found: Indices = np.clip(np.floor(share * classes), 0, classes - 1).astype(np.intp)
+        return found
 
     @cached_property
     def feet(self) -> Array:

@@ -6,14 +6,13 @@ Values are not rounded there, but where a drive counts increments.
 from __future__ import annotations
 
 import io
-from importlib import import_module
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from profileplan.errors import Fault, InputError
 from profileplan.inputs.dialect import Dialect
 from profileplan.setpoints.content import Content, Field
+from profileplan.setpoints.files import parquet_libraries
 from profileplan.setpoints.parts import Group, Part, Plain, write_rows
 from profileplan.setpoints.writing import Ticks
 
@@ -90,7 +89,7 @@ def write_parquet(
     InputError
         As for ``write_table``, and if pyarrow is not installed.
     """
-    libraries = _arrow(file)
+    libraries = parquet_libraries(file)
     dialect = dialect or Dialect()
     rows = Ticks(schedule, content or Content(), dialect)
     form = _Parquet(rows.fields, libraries, tell_joins=dialect.tell_joins)
@@ -225,12 +224,3 @@ def _npy_head(kind: np.dtype[np.void], count: int) -> bytes:
     padding = -(len(MAGIC) + len(version) + 4 + len(text) + 1) % ALIGNMENT
     text += b" " * padding + b"\n"
     return MAGIC + version + len(text).to_bytes(4, "little") + text
-
-
-def _arrow(file: Path) -> tuple[ModuleType, ModuleType]:
-    """Return the library that writes Parquet."""
-    try:
-        return import_module("pyarrow"), import_module("pyarrow.parquet")
-    except ImportError as error:
-        message = "Parquet needs pyarrow: install profileplan[parquet], or write .npy"
-        raise InputError([Fault("", message, file)]) from error

@@ -97,6 +97,8 @@ class Sheet:
         How many decimals the first rows have in the columns read.
     begins : float
         The time in the first row, as it is written; NaN where it is no number.
+    coarse : tuple of str
+        Names of the columns read whose numbers have less than double precision.
     """
 
     _: KW_ONLY
@@ -105,12 +107,17 @@ class Sheet:
     columns: tuple[Column, ...]
     decimals: tuple[int, ...] = ()
     begins: float = math.nan
+    coarse: tuple[str, ...] = ()
 
     @property
     def unread(self) -> tuple[str, ...]:
-        """Names of the columns that are not read."""
+        """Names of the columns that are not read, or where they are that have none."""
         read = {column.cell for column in self.columns}
-        return tuple(name for index, name in enumerate(self.names) if index not in read)
+        return tuple(
+            name or f"column {index + 1} without a name"
+            for index, name in enumerate(self.names)
+            if index not in read
+        )
 
     @property
     def axes(self) -> tuple[int, ...]:
@@ -185,6 +192,17 @@ def usual_headings(machine: Machine, *, columns: Sequence[str] | None, file: Pat
     return headings
 
 
+def axis_headings(machine: Machine) -> set[str]:
+    """Return the headings of all columns of axes that are read."""
+    return {
+        heading
+        for axis in machine.axes
+        for quantity in RATES
+        for drive in _drives(axis)
+        for heading in _spellings(axis, quantity, drive=drive)
+    }
+
+
 def usual_names(dialect: Dialect) -> dict[str, str]:
     """Return the usual headings by those that a dialect has for them."""
     return {new: usual for usual, new in dialect.names.items()}
@@ -208,12 +226,12 @@ def signal_columns(
     known = tuple(
         f"{name}_{quantity}_"
         for axis in machine.axes
-        for name in (axis.name, *_twin_names(axis, machine))
+        for name in _names(axis)
         for quantity in (*RATES, *LOADS)
     )
     read = {column.cell for column in sheet.columns}
     for index, name in enumerate(sheet.names):
-        if index in read or not rows or name.startswith(known):
+        if index in read or not rows or not name or name.startswith(known):
             continue
         if others.get(index, 0) <= rows // FEW:
             yield Column(index, name, "signal")
@@ -228,8 +246,7 @@ def _axis_headings(axis: Axis, kinds: Sequence[str], *, counted: bool) -> Iterat
     if axis.drive is None or not counted:
         yield from (axis.column(kind) for kind in kinds)
         return
-    twin = axis.drive.also
-    for name in (axis.name, *([] if twin is None else [twin.name])):
+    for name in _names(axis):
         for kind in kinds:
             if kind not in LOADS:
                 yield f"{name}_{kind}_{INCREMENT_UNITS[kind]}"
@@ -245,10 +262,12 @@ def _name_faults(names: Sequence[str], machine: Machine, file: Path) -> list[str
     if len(names) > MOST_COLUMNS:
         return [f"has {len(names):,} columns; at most {MOST_COLUMNS:,} are read"]
     counts = Counter(names)
-    faults = [f"column {shown(name)} stands twice" for name in names if counts[name] > 1]
+    # What has no name is not read.
+    faults = [f"column {shown(name)} stands twice" for name in names if name and counts[name] > 1]
     times = [name for name in names if name in TIME_HEADINGS.values()]
     if not times:
-        faults.append(f'column "t_s" is missing{_hint("t_s", names)}')
+        others = ", ".join(heading for heading in TIME_HEADINGS.values() if heading != "t_s")
+        faults.append(f'column "t_s" is missing, or {others}{_hint("t_s", names)}')
     elif len(times) > 1 and times[0] != times[1]:
         faults.append(f"columns {shown(times[0])} and {shown(times[1])} both hold the time")
     needed = _needed(names, machine, file)
@@ -256,7 +275,7 @@ def _name_faults(names: Sequence[str], machine: Machine, file: Path) -> list[str
         for quantity in RATES:
             spelled = [
                 [name for name in _spellings(axis, quantity, drive=drive) if name in counts]
-                for drive in _drives(axis, machine)
+                for drive in _drives(axis)
             ]
             faults += [
                 f"columns {shown(held[0])} and {shown(held[1])} hold the same"
@@ -276,7 +295,7 @@ def _needed(names: Sequence[str], machine: Machine, file: Path) -> Sequence[Axis
         for axis in machine.axes
         if any(
             name in names
-            for drive in _drives(axis, machine)
+            for drive in _drives(axis)
             for quantity in RATES
             for name in _spellings(axis, quantity, drive=drive)
         )
@@ -294,30 +313,29 @@ def _hint(name: str, names: Sequence[str]) -> str:
     return near(name, [other for other in names[:100] if len(other) < 50])
 
 
-def _twin_names(axis: Axis, machine: Machine) -> list[str]:
-    """Return the name of the second drive of an axis, if it has one with a name of its own."""
+def _names(axis: Axis) -> tuple[str, ...]:
+    """Return the name of an axis, and that of its second drive if it has one."""
     twin = None if axis.drive is None else axis.drive.also
-    return [] if twin is None or twin.name in machine.axis_names else [twin.name]
+    return (axis.name,) if twin is None else (axis.name, twin.name)
 
 
-def _drives(axis: Axis, machine: Machine) -> range:
+def _drives(axis: Axis) -> range:
     """Return the numbers of the drives of an axis."""
-    return range(1 + len(_twin_names(axis, machine)))
+    return range(len(_names(axis)))
 
 
 def _spellings(axis: Axis, quantity: str, *, drive: int) -> dict[str, Spelling]:
     """Return the names under which a table may hold a quantity of a drive of an axis."""
     own = axis.drive
     place = own if own is None or drive == 0 else own.also
-    name = axis.name if drive == 0 or own is None or own.also is None else own.also.name
-    start, end = f"{name}_{quantity}_", RATES[quantity]
+    start, end = f"{_names(axis)[drive]}_{quantity}_", RATES[quantity]
     position = quantity == "pos"
     turn = own.wrap if own is not None and own.wrap is not None and position else 0.0
     found = {
         f"{start}{unit}{end}": Spelling(size, wrap=turn / size)
         for unit, size in UNITS[axis.unit].items()
     }
-    if own is None or place is None or (own.wrap is not None and axis.kind == "linear"):
+    if own is None or place is None:
         return found
     found[f"{start}inc{end}"] = Spelling(
         place.direction / float(own.ratio),
@@ -338,7 +356,7 @@ def _columns(names: Sequence[str], machine: Machine) -> Iterator[Column]:
         for quantity in RATES:
             high = POSITION.high if quantity == "pos" else HIGHEST
             place = 0
-            for drive in _drives(axis, machine):
+            for drive in _drives(axis):
                 for name, spelling in _spellings(axis, quantity, drive=drive).items():
                     if name in names:
                         unit, shift, wrap, counted = spelling

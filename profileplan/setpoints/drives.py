@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
@@ -92,7 +93,7 @@ def judge_drives(schedule: Schedule, drives: Mapping[str, Drive]) -> None:
         ends = [float(low.value[column]), float(high.value[column])]
         faults += _overflows(axis, drive, ends)
     if faults:
-        raise InputError(faults)
+        raise InputError(replace(fault, file=machine.source) for fault in faults)
 
 
 class Turn(NamedTuple):
@@ -138,5 +139,6 @@ def _overflows(axis: Axis, drive: Drive, ends: Sequence[float]) -> Iterator[Faul
         turn = drive.wrap_increments
         held = most if turn is None else turn
         if held > MOST_INCREMENTS:
-            message = f"{held:.0f} increments; a counter of 32 bits holds {MOST_INCREMENTS}"
+            message = f"{counter.name} counts up to {held:.0f} increments; "
+            message += f"a counter of 32 bits holds {MOST_INCREMENTS}"
             yield Fault(f"axes.{axis.name}.drive", message)

@@ -10,6 +10,7 @@ import io
 import os
 import secrets
 from contextlib import contextmanager, suppress
+from importlib import import_module
 from typing import TYPE_CHECKING, BinaryIO
 
 from profileplan.errors import Fault, InputError
@@ -17,6 +18,7 @@ from profileplan.errors import Fault, InputError
 if TYPE_CHECKING:
     from collections.abc import Iterator
     from pathlib import Path
+    from types import ModuleType
     from typing import TextIO
 
 
@@ -177,6 +179,21 @@ def replacing(file: Path) -> Iterator[TextIO]:
 def not_written(file: Path, error: OSError) -> InputError:
     """Return the fault of a file that could not be written."""
     return InputError([Fault("", f"cannot be written: {error.strerror or error}", file)])
+
+
+def parquet_libraries(file: Path) -> tuple[ModuleType, ModuleType]:
+    """Return pyarrow, and its part that reads and writes Parquet.
+
+    Raises
+    ------
+    InputError
+        It is not installed.
+    """
+    try:
+        return import_module("pyarrow"), import_module("pyarrow.parquet")
+    except ImportError as error:
+        message = "Parquet needs pyarrow: install profileplan[parquet], or take another form"
+        raise InputError([Fault("", message, file)]) from error
 
 
 def _umask() -> int:

@@ -19,6 +19,7 @@ from profileplan.inputs.dialect import DECIMAL_SIGNS, DELIMITERS, TIME_HEADINGS,
 from profileplan.setpoints.columns import (
     Column,
     Sheet,
+    axis_headings,
     found_columns,
     signal_columns,
     usual_headings,
@@ -179,6 +180,22 @@ def has_numbers_only(file: Path) -> bool:
     number, _ = _first_row(lines, DELIMITERS)
     text = lines[number].decode("utf-8", errors="replace")
     return any(len(_numbers(text, sign)) > 1 for sign in DELIMITERS)
+
+
+def has_axes(file: Path, machine: Machine) -> bool:
+    """Tell whether the first line of a file that is no comment has headings of axes, in any case.
+
+    Such a table may lack the time, which is told then.
+    """
+    try:
+        lines = _head(file).lines
+    except InputError:
+        return False
+    number, delimiter = _first_row(lines, DELIMITERS)
+    usual, known = usual_names(machine.setpoints.dialect), axis_headings(machine)
+    folded = {heading.casefold() for heading in (*known, *usual)}
+    text = lines[number][:MOST_LINE].decode("utf-8", errors="replace")
+    return any(cell.strip(' "\r').casefold() in folded for cell in text.split(delimiter))
 
 
 def split(text: str, delimiter: str) -> list[str]:

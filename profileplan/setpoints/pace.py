@@ -17,14 +17,19 @@ ROWS_AT_A_TIME = 24_576
 """Rows that are sampled and written together. More do not stay in the cache; with fewer, threads
 wait for each other between calls."""
 
+NUMBERS_AT_A_TIME = 600_000
+"""Numbers that are written together at most: of tables with many columns fewer rows are, so that
+memory does not grow with the columns either."""
+
 MOST_WORKERS = 2
 """Threads that make rows: part of the work is not done in parallel, so more gain little."""
 
 
-def blocks(rows: range) -> Iterator[range]:
-    """Yield rows block by block."""
-    for start in range(rows.start, rows.stop, ROWS_AT_A_TIME):
-        yield range(start, min(start + ROWS_AT_A_TIME, rows.stop))
+def blocks(rows: range, columns: int = 1) -> Iterator[range]:
+    """Yield rows of so many columns block by block."""
+    count = min(ROWS_AT_A_TIME, max(NUMBERS_AT_A_TIME // columns, 1))
+    for start in range(rows.start, rows.stop, count):
+        yield range(start, min(start + count, rows.stop))
 
 
 def in_order(task: Callable[[Job], Result], jobs: Iterable[Job]) -> Generator[Result]:

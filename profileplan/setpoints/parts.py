@@ -208,7 +208,8 @@ def write_rows(
         _judge_finite(numbers, rows.fields)
         return [form.rows([numbers[place] for place in group.columns], group) for group in groups]
 
-    jobs = (some for cut in cuts for some in blocks(cut))
+    width = len(rows.fields)
+    jobs = (some for cut in cuts for some in blocks(cut, width))
     with replacing_all() as files, closing(in_order(made, jobs)) as contents:
         for index, cut in enumerate(cuts):
             own = parts[index * len(groups) : (index + 1) * len(groups)]
@@ -216,7 +217,7 @@ def write_rows(
                 _Output(files, part, form.encoder(part, group))
                 for group, part in zip(groups, own, strict=True)
             ]
-            for some in blocks(cut):
+            for some in blocks(cut, width):
                 for output, content in zip(outputs, next(contents), strict=True):
                     output.write(content)
                 if progress:

@@ -13,7 +13,6 @@ import tokenize
 import warnings
 from contextlib import contextmanager
 from dataclasses import replace
-from importlib import import_module
 from typing import TYPE_CHECKING, NamedTuple, Protocol
 
 import numpy as np
@@ -29,13 +28,13 @@ from profileplan.setpoints.columns import (
     usual_headings,
     usual_names,
 )
+from profileplan.setpoints.files import parquet_libraries
 from profileplan.setpoints.layout import MARK, MOST_LINE, ROWS_TRIED, opened
 from profileplan.setpoints.reading import BLOCK, MOST_FAULTY, Rows, last_decimals, whole_lines
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping, Sequence
     from pathlib import Path
-    from types import ModuleType
 
     import numpy.typing as npt
 
@@ -98,6 +97,9 @@ class Records(Protocol):
     def numeric(self, cell: int) -> bool:
         """Tell whether a column holds numbers."""
 
+    def coarse(self, cell: int) -> bool:
+        """Tell whether a column's numbers have less than double precision."""
+
     def blocks(self, columns: Sequence[Column], size: int) -> Iterator[Block]:
         """Yield the records, about so many bytes of text at a time."""
 
@@ -145,7 +147,9 @@ def record_sheet(
     ]
     if faults:
         raise InputError(faults)
-    sheet = _tried(records, Sheet(file=file, names=tuple(names), columns=found), machine)
+    coarse = tuple(column.name for column in found if records.coarse(column.cell))
+    sheet = Sheet(file=file, names=tuple(names), columns=found, coarse=coarse)
+    sheet = _tried(records, sheet, machine)
     if len(sheet.signals()) < len(names) - len(usual):
         raise InputError([_width_fault(records, usual, file)])
     return sheet
@@ -230,6 +234,10 @@ class _JsonLines:
     def numeric(self, cell: int) -> bool:
         """Tell whether the first row has a number there, or something that is told as a fault."""
         return isinstance(self._values[cell], (int, float, str, type(None)))
+
+    def coarse(self, cell: int) -> bool:  # noqa: ARG002 - texts are read as doubles
+        """Tell that none has less than double precision."""
+        return False
 
     def blocks(self, columns: Sequence[Column], size: int) -> Iterator[Block]:
         """Yield the records."""
@@ -350,9 +358,13 @@ class _Npy:
 
     def numeric(self, cell: int) -> bool:
         """Tell whether a column holds numbers."""
-        fields = self._kind.fields
-        kind = self._kind if fields is None else fields[self._own[cell]][0]
+        kind = self._type(cell)
         return kind.kind in "biuf" and kind.shape == ()
+
+    def coarse(self, cell: int) -> bool:
+        """Tell whether a column's numbers have less than double precision."""
+        kind = self._type(cell)
+        return kind.kind == "f" and kind.itemsize < np.dtype(np.float64).itemsize
 
     def blocks(self, columns: Sequence[Column], size: int) -> Iterator[Block]:
         """Yield the records."""
@@ -373,6 +385,10 @@ class _Npy:
             rows = Rows(np.arange(start + 1, stop + 1), numbers)
             yield Block(rows, (), stop, self._count)
 
+    def _type(self, cell: int) -> np.dtype[np.generic]:
+        fields = self._kind.fields
+        return self._kind if fields is None else fields[self._own[cell]][0]
+
     def _array(self) -> npt.NDArray[np.generic]:
         with warnings.catch_warnings():
             # Of old or odd descriptions; they are read or refused.
@@ -387,7 +403,7 @@ class _Parquet:
         self._file = file
         with opened(file):
             pass
-        arrow, parquet = _arrow(file)
+        arrow, parquet = parquet_libraries(file)
         self._damages = (arrow.ArrowException, *DAMAGES)
         self._file_of = parquet.ParquetFile
         with _damage_told(file, PARQUET, self._damages), self._file_of(file, **SLOWLY) as found:
@@ -397,6 +413,10 @@ class _Parquet:
                 bool(types.is_integer(kind) or types.is_floating(kind) or types.is_boolean(kind))
                 for kind in found.schema_arrow.types
             ]
+            self._coarse = [
+                bool(types.is_float16(kind) or types.is_float32(kind))
+                for kind in found.schema_arrow.types
+            ]
             self._count = int(found.metadata.num_rows)
         self.names: Sequence[str] | None = self._own
         self.width = len(self._own)
@@ -404,6 +424,10 @@ class _Parquet:
     def numeric(self, cell: int) -> bool:
         """Tell whether a column holds numbers."""
         return self._numeric[cell]
+
+    def coarse(self, cell: int) -> bool:
+        """Tell whether a column's numbers have less than double precision."""
+        return self._coarse[cell]
 
     def blocks(self, columns: Sequence[Column], size: int) -> Iterator[Block]:
         """Yield the records."""
@@ -524,18 +548,3 @@ def _damage_told(
         reason = "".join(sign for sign in " ".join(str(error).split()) if sign.isprintable())
         message = f"is damaged, or not {what}: {reason[:200] or type(error).__name__}"
         raise InputError([Fault("", message, file)]) from None
-
-
-def _arrow(file: Path) -> tuple[ModuleType, ModuleType]:
-    """Return the library that reads Parquet.
-
-    Raises
-    ------
-    InputError
-        It is not installed.
-    """
-    try:
-        return import_module("pyarrow"), import_module("pyarrow.parquet")
-    except ImportError as error:
-        message = "Parquet needs pyarrow: install profileplan[parquet], or write another form"
-        raise InputError([Fault("", message, file)]) from error

@@ -13,7 +13,7 @@ import numpy as np
 
 if TYPE_CHECKING:
     from profileplan.inputs import Axis, Machine
-    from profileplan.motion.polynomials import Array
+    from profileplan.motion.polynomials import Array, Flags
     from profileplan.setpoints.columns import Column, Sheet
 
 MOST_TURNS = 1000
@@ -21,6 +21,9 @@ MOST_TURNS = 1000
 
 NEAR = 1e-9
 """How far from its travel a row may be [turns]: what rounding makes of it."""
+
+ROUNDED = 1e-3
+"""What rounding may make of a step from row to row [turns]."""
 
 
 class Turns:
@@ -60,8 +63,8 @@ class Turns:
 class Turning:
     """A column that may start from 0 again.
 
-    A drive's counter always does. A column of degrees does where it leaps by about a wrap and is
-    never outside of one; else it is taken as it is.
+    A drive's counter always does. A column of degrees does where it leaps inside of one wrap by
+    more than the axis can turn in that time; else it is taken as it is.
     """
 
     def __init__(self, sheet: Sheet, axis: Axis, column: Column) -> None:
@@ -85,7 +88,7 @@ class Turning:
         if not self._column.counted:
             low, high = np.minimum(own[:-1], own[1:]), np.maximum(own[:-1], own[1:])
             inside = ((low >= 0) & (high <= wrap)) | ((low >= -wrap / 2) & (high <= wrap / 2))
-            turns = np.where(inside, turns, 0.0)
+            turns = np.where(inside & ~self._possible(rows, steps), turns, 0.0)
         counts = self._turns + np.cumsum(turns)
         self.turned = self.turned or bool(np.any(turns))
         self._turns = int(counts[-1])
@@ -110,6 +113,23 @@ class Turning:
     def wrap(self) -> float:
         """What is counted until it starts again [mm or deg]."""
         return self._column.wrap * abs(self._column.unit)
+
+    def _possible(self, rows: Array, steps: Array) -> Flags:
+        """Tell which steps from row to row, (n - 1,), the axis can make as they stand.
+
+        Over a time h its velocity bounds a step, and the mean of the velocities at both ends tells
+        it to a h² / 4, with the greatest acceleration a.
+        """
+        spans = np.maximum(np.diff(rows[:, 0]) * self._time, 0.0)
+        limits, way = self.axis.limits, steps * self._column.unit
+        rounding = ROUNDED * self.wrap
+        possible = np.abs(way) <= limits.velocity * spans + rounding
+        if self._rate is not None:
+            velocity = rows[:, self._rate] * self._rate_unit
+            told = 0.5 * (velocity[:-1] + velocity[1:]) * spans
+            sway = max(limits.acceleration, limits.deceleration) * spans**2 / 4
+            possible &= np.abs(way - told) <= sway + rounding
+        return possible
 
     def _expected(self, rows: Array) -> Array:
         """Return what the column is expected to change by, (n - 1,): 0 where a wrap tells it."""
