@@ -122,6 +122,7 @@ def test_the_page_says_what_the_plan_says(kiln: pp.Plan) -> None:
     for file in (KILN, KILN.with_name("machine.toml")):
         assert hashlib.sha256(file.read_bytes()).hexdigest() in text, file
     assert "Risk assessment, guarding and the local codes are for qualified people." in text
+    assert "The views show the way of the first" not in text, "they show all of it"
     assert pp.__version__ in text
 
 

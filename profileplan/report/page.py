@@ -172,7 +172,7 @@ def _facts(planned: PlannedCycle, scene: Scene, loads: Sequence[LoadCurve]) -> d
         reduced.append(
             f"A long cycle: curves and values are the least and the greatest of every {wide:.3g} s."
         )
-    if scene.sides and scene.times[-1] < planned.duration:
+    if scene.sides and scene.times[-1] < planned.trajectory.duration:
         reduced.append(f"The views show the way of the first {scene.times[-1]:.3g} s.")
     return {
         "title": planned.job.machine.name,
