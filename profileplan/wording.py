@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Sequence
+    from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 
     from profileplan.checks import Finding
     from profileplan.results import Limit, PlannedCycle, PlannedStep
@@ -78,7 +78,7 @@ def lever(limit: Limit) -> str:
 
 def listed(steps: Sequence[str], most: int = NAMED) -> str:
     """Return names of steps in a row, the first few of many."""
-    if len(steps) <= most + 1:
+    if len(steps) <= most:
         return "; ".join(steps)
     return f"{'; '.join(steps[:most])}; and {len(steps) - most} more"
 
@@ -87,6 +87,36 @@ def required(finding: Finding) -> str:
     """Return what a finding is about."""
     named = f"{finding.axis} {finding.check}" if finding.axis else finding.check
     return f"{named}, {finding.what}" if finding.what else named
+
+
+REQUIREMENT = ("requirement", "value", "limit", "margin", "unit", "use %", "where")
+"""Heads of a table of requirements, but for the last: whether it is met."""
+
+
+def requirement(finding: Finding) -> list[str]:
+    """Return the cells of a requirement below those heads."""
+    return [
+        required(finding),
+        short(finding.value),
+        short(finding.limit),
+        short(finding.margin, 3),
+        finding.unit,
+        "" if finding.use is None else f"{100 * finding.use:.1f}",
+        at(finding),
+    ]
+
+
+def most(shares: Mapping[str, float]) -> str:
+    """Return the greatest share of a limit in percent, and the axis that uses it."""
+    axis, share = max(shares.items(), key=lambda item: item[1], default=("", 0.0))
+    return f"{100 * share:.0f} {axis}" if share > 0 else ""
+
+
+def all_amiss(findings: Iterable[Finding]) -> Iterator[str]:
+    """Yield how requirements are not met; the verdict tells the target."""
+    for finding in findings:
+        if not finding.ok and finding.check != "cycle time":
+            yield amiss(finding)
 
 
 def amiss(finding: Finding) -> str:

@@ -16,6 +16,7 @@ from profileplan.motion.laws import LAWS
 ROOT = Path(profileplan.__file__).parent
 
 ORDER = (
+    "lazy",
     "errors",
     "inputs",
     "geometry",
@@ -87,8 +88,9 @@ WITHIN = {
         "deviation",
         "trace",
     ),
-    "cli": ("frame", "tables", "settings", "jobs", "exports", "drawings", "pictures"),
+    "cli": ("frame", "tables", "settings", "remarks", "jobs", "exports", "drawings", "pictures"),
     "report": (
+        "extra",
         "curves",
         "scene",
         "loads",
@@ -99,6 +101,8 @@ WITHIN = {
         "pictures",
         "rows",
         "notebook",
+        "facts",
+        "timeline",
         "page",
     ),
     "planning": ("plan", "tasks", "rides", "steps", "transfers", "matching", "traces", "cycle"),

@@ -24,8 +24,7 @@ from numpy.testing import assert_allclose
 
 import profileplan as pp
 from profileplan.cli import cli
-from profileplan.report import brief, curves
-from profileplan.report import page as page_module
+from profileplan.report import brief, curves, timeline
 from profileplan.report.page import page
 from profileplan.report.scene import Scene
 
@@ -314,8 +313,8 @@ def test_heights_are_seen_as_the_machine_counts_them() -> None:
 def test_many_short_steps_are_in_the_timeline_together() -> None:
     """Of thousands of steps each is too narrow to be seen; none may be missing from the row."""
     plan = shuttle(1200)
-    (lane,) = page_module.lanes(plan, Scene(plan))
-    assert len(lane.blocks) <= page_module.MOST_BLOCKS
+    (lane,) = timeline.lanes(plan, Scene(plan))
+    assert len(lane.blocks) <= timeline.MOST_BLOCKS
     covered = sum(block.end - block.start for block in lane.blocks)
     assert covered == pytest.approx(plan.duration)
     assert "move 1 … " in lane.blocks[0].text

@@ -176,29 +176,26 @@ def test_a_page_opens_without_trouble_and_is_all_there(
     assert not opened.trouble
 
 
-def test_velocities_are_drawn_with_their_peaks(cases: dict[str, Case], opened: Opened) -> None:
-    """Few points enter a figure; the exact extremes of the polynomials must be among them."""
-    case = cases["kiln-loader"]
-    ready(opened.page, case)
-    drawn = opened.page.evaluate(
-        "planPage.figures().filter((own) => own.row.name === 'velocity')"
-        ".map((own) => Math.max(...own.source.data.y.map(Math.abs)))"
+def drawn_peaks(page: Page, name: str) -> list[float]:
+    """Return the greatest magnitude of a quantity that is drawn, axis by axis."""
+    found: list[float] = page.evaluate(
+        "(name) => planPage.figures().filter((own) => own.row.name === name)"
+        ".map((own) => Math.max(...own.source.data.y.map(Math.abs)))",
+        name,
     )
-    assert_allclose(drawn, case.plan.trajectory.peaks.velocity.value, rtol=1e-3)
+    return found
 
 
-def test_torques_are_drawn_with_their_peaks(cases: dict[str, Case], opened: Opened) -> None:
-    """The torque's exact extremes come from another route than its samples."""
+def test_peaks_are_drawn(cases: dict[str, Case], opened: Opened) -> None:
+    """Few points enter a figure; exact extremes of velocity and torque must be among them."""
     case = cases["kiln-loader"]
     ready(opened.page, case)
-    drawn = opened.page.evaluate(
-        "planPage.figures().filter((own) => own.row.name === 'torque')"
-        ".map((own) => Math.max(...own.source.data.y.map(Math.abs)))"
-    )
+    velocities = drawn_peaks(opened.page, "velocity")
+    assert_allclose(velocities, case.plan.trajectory.peaks.velocity.value, rtol=1e-3)
     peaks = [load.peak_torque for load in dynamics.loads(case.plan)]
     exact = [abs(peak.value) for peak in peaks if peak is not None]
-    assert len(drawn) == 3
-    assert_allclose(drawn, exact, rtol=1e-6)
+    assert len(exact) == 3
+    assert_allclose(drawn_peaks(opened.page, "torque"), exact, rtol=1e-6)
 
 
 @pytest.mark.parametrize("name", ["tile-turner", "glaze-inspection", "kerb"])
@@ -477,12 +474,12 @@ def test_views_are_zoomed_by_buttons(cases: dict[str, Case], opened: Opened) -> 
         " own.figure.y_range.end, own.sources.now.data.x[0]])(planPage.spaces()[0])"
     )
     before = page.evaluate(ranges)
-    page.get_by_role("button", name="Seen from above, closer").click()
+    page.get_by_role("button", name="plan view, closer").click()
     left, right, low, high, x = page.evaluate(ranges)
     assert (left + right) / 2 == pytest.approx(x)
     assert right - left == pytest.approx((before[1] - before[0]) / 2)
     assert high - low == pytest.approx((before[3] - before[2]) / 2)
-    page.get_by_role("button", name="Seen from above, whole").click()
+    page.get_by_role("button", name="plan view, whole").click()
     assert page.evaluate(ranges) == before
 
 

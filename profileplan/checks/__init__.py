@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 from profileplan.checks.findings import LIMIT_TOLERANCE, QUANTITIES, SHARED, Finding, Row
 from profileplan.checks.schedules import check
+from profileplan.lazy import loader
 
 if TYPE_CHECKING:
     from profileplan.checks.tables import (
@@ -31,12 +32,6 @@ __all__ = [
     "judge_file",
 ]
 
+_HOMES = {"tables": ("Manner", "TableJudgement", "check_file", "check_table", "judge_file")}
 
-def __getattr__(name: str) -> object:
-    """Load what judges tables (PEP 562)."""
-    if name not in __all__:
-        message = f"module {__name__!r} has no attribute {name!r}"
-        raise AttributeError(message)
-    from importlib import import_module  # noqa: PLC0415
-
-    return getattr(import_module("profileplan.checks.tables"), name)
+__getattr__ = loader(__name__, _HOMES)

@@ -5,19 +5,18 @@ from __future__ import annotations
 import re
 from contextlib import contextmanager
 from dataclasses import replace
-from itertools import pairwise
-from pathlib import Path
 from typing import TYPE_CHECKING, NamedTuple
 
 import click
 
-from profileplan.cli import frame, tables
-from profileplan.cli.jobs import job_of, planned_of, tell_amiss, tell_unplayed
+from profileplan.cli import frame, remarks, tables
+from profileplan.cli.jobs import job_of, planned_of
 from profileplan.cli.settings import (
     FORMS,
     PLACES,
     SETTINGS,
     TEXT,
+    Columns,
     Interpolation,
     Sorted,
     dialect_options,
@@ -25,37 +24,22 @@ from profileplan.cli.settings import (
 from profileplan.errors import Fault, InputError
 
 if TYPE_CHECKING:
-    from collections.abc import Collection, Iterator, Mapping, Sequence
+    from collections.abc import Collection, Iterator, Mapping
+    from pathlib import Path
 
-    from profileplan.inputs import Axis, Drive, Job, Machine
+    from profileplan.inputs import Drive, Machine
     from profileplan.planning import Plan
-    from profileplan.setpoints import Content, Dialect, Noise, Part, PvtTable
-
-PEAK_TOLERANCE = 1e-5
-"""Share of a limit that cubics may pass it by unsaid, if rounding explains it: where points can be
-found that need no more than that, they are taken."""
+    from profileplan.setpoints import Content, Dialect, Part
 
 POINTS_ERROR = 0.001
 """Greatest distance of cubics from the plan unless something else is asked for [mm or deg]."""
-
-NANOSECOND = 1e-9
-"""Between such times points stand, if not on ticks [s]."""
-
-PARTS_TOLD = 3
-"""Parts that begin in motion that are named; of more the number is told."""
 
 
 @dialect_options
 @frame.cli.command(cls=Sorted)
 @frame.source
 @frame.machine
-@click.option(
-    "-o",
-    "--output",
-    type=click.Path(path_type=Path, dir_okay=False),
-    required=True,
-    help="The table to write, .csv, .jsonl, .npy or .parquet; replaced when complete.",
-)
+@frame.output("The table to write, .csv, .jsonl, .npy or .parquet; replaced when complete.")
 @click.option(
     "--period",
     type=frame.Measure("time"),
@@ -69,6 +53,7 @@ PARTS_TOLD = 3
 )
 @click.option(
     "--columns",
+    type=Columns(),
     help="What to write for each axis: any of pos, vel, acc, jerk, force, torque; default: as the "
     "machine file says, or pos,vel,acc.",
 )
@@ -105,7 +90,7 @@ def export(  # noqa: PLR0913 - one parameter an option
     output: Path,
     period: float | None,
     interpolation: tuple[int, int] | None,
-    columns: str | None,
+    columns: tuple[str, ...] | None,
     units: str | None,
     points: str,
     error: float | None,
@@ -153,11 +138,11 @@ def export(  # noqa: PLR0913 - one parameter an option
             told = _write_points(order, POINTS_ERROR if error is None else error, longest)
         else:
             told = _write_ticks(order, form)
-            tell_unplayed(planned, content.period)
-    _tell_joins(told.parts)
+            remarks.tell_unplayed(planned, content.period)
+    remarks.tell_joins(told.parts)
     _tell(told, planned, as_json=as_json, quiet=quiet)
     findings = planned.check()
-    tell_amiss(findings)
+    remarks.tell_amiss(findings)
     frame.finish(met=told.kept and all(finding.ok for finding in findings))
 
 
@@ -259,15 +244,12 @@ def _dialect(machine: Machine, given: Mapping[str, object]) -> Dialect:
 
 
 def _content(
-    machine: Machine, *, columns: str | None, units: str | None, period: float | None
+    machine: Machine, *, columns: tuple[str, ...] | None, units: str | None, period: float | None
 ) -> Content:
     """Return what is written: as the machine file says, but for what is asked for."""
     from profileplan import setpoints  # noqa: PLC0415
 
-    words = None
-    if columns is not None:
-        words = tuple(name.strip() for name in columns.split(",") if name.strip())
-    return setpoints.Content.of(machine, columns=words, period=period, units=units)
+    return setpoints.Content.of(machine, columns=columns, period=period, units=units)
 
 
 @contextmanager
@@ -332,10 +314,10 @@ def _write_ticks(order: _Order, form: str) -> _Told:
         # Only counts are rounded there.
         counted = {name for drive in content.drives.items() for name in _drive_names(*drive)}
         noises = tuple(noise for noise in noises if noise.axis in counted)
-    _tell_noise(noises)
+    remarks.tell_noise(noises)
     if content.period is not None:
-        _tell_turns(order, content.period)
-    return _Told(parts, "", {"rounding": [_noise_values(noise) for noise in noises]})
+        remarks.tell_turns(planned, content.drives, content.period)
+    return _Told(parts, "", {"rounding": [remarks.noise_values(noise) for noise in noises]})
 
 
 def _drive_names(axis: str, drive: Drive) -> tuple[str, ...]:
@@ -359,98 +341,11 @@ def _write_points(order: _Order, error: float, longest: float | None) -> _Told:
     with frame.Progress("writing setpoints", wanted=talk) as progress:
         parts = setpoints.write_pvt(planned, found, output, kept=order.kept, progress=progress)
     for place, axis in enumerate(planned.job.machine.axes):
-        _tell_peaks(found, place, axis)
-        _tell_leaps(found, place, axis, planned.job.machine.setpoints.period)
-    _tell_lost(planned, found)
-    return _Told(parts, f"{_distance(found, planned.job)}; ", _distances(found), found.kept)
-
-
-def _distances(found: PvtTable) -> dict[str, object]:
-    return {
-        "error": dict(zip(found.axes, found.error.tolist(), strict=True)),
-        "rounding_share": dict(zip(found.axes, found.rounding.tolist(), strict=True)),
-        "limits_kept": found.kept,
-        "cubics": {
-            axis: {quantity: float(values[place]) for quantity, values in found.peaks.items()}
-            | {
-                "leap": float(found.leaps[place]),
-                "over_limit": {name: float(own[place]) for name, own in found.excess.items()},
-                "explained": {name: float(own[place]) for name, own in found.explained.items()},
-                "kept": not any(own[place] for own in found.broken.values()),
-            }
-            for place, axis in enumerate(found.axes)
-        },
-    }
-
-
-def _distance(found: PvtTable, job: Job) -> str:
-    """Return how far the cubics are from the plan, of the axis that is farthest."""
-    worst = int(found.error.argmax())
-    axis = job.machine.axes[worst]
-    return (
-        f"at most {found.error[worst]:.3g} {axis.unit} off the plan, {axis.name}, of which "
-        f"rounding up to {found.rounding[worst]:.2g}"
-    )
-
-
-def _tell_peaks(found: PvtTable, place: int, axis: Axis) -> None:
-    """Say on stderr which limit of an axis the cubics between points pass by most, if any."""
-    broken = [name for name, axes in found.broken.items() if axes[place]]
-    worst = max(broken or found.excess, key=lambda name: float(found.excess[name][place]))
-    share, explained = found.excess[worst][place], found.explained[worst][place]
-    if not broken and share <= PEAK_TOLERANCE:
-        return
-    reached = f"leave it by {100 * share:.2g} % of its length"
-    if worst in found.peaks:
-        limit = axis.limits._asdict()[worst]
-        reached = f"reach {found.peaks[worst][place]:.6g}, {100 * share:.2g} % over {limit:g}"
-    steps = "increments" if axis.name in found.content.drives else "steps"
-    steps = f"rounding, of positions to {steps} of {2 * found.rounding[place]:.3g} {axis.unit},"
-    if not broken:
-        verdict = f"{steps} explains it: finer steps make it less"
-    elif found.tick == NANOSECOND:
-        verdict = (
-            f"the limit is not kept; {steps} explains up to {100 * explained:.2g} %: take finer "
-            "ones, or a greater --error, so that points are farther apart"
-        )
-    else:
-        verdict = (
-            f"the limit is not kept; {steps} explains {100 * explained:.2g} %. Points off ticks "
-            "keep it: leave out --period and --interpolation, and tell the time in s, ms or us"
-        )
-    click.echo(
-        f"note: {axis.name} {worst}: between points the drive's cubics {reached}; {verdict}",
-        err=True,
-    )
-
-
-def _tell_leaps(found: PvtTable, place: int, axis: Axis, period: float) -> None:
-    """Say on stderr where an acceleration leaps by more than the jerk limit allows in a tick."""
-    leap = float(found.leaps[place])
-    if axis.jerk is not None and leap > axis.jerk * period:
-        click.echo(
-            f"note: {axis.name} jerk: where cubics meet the acceleration leaps by up to "
-            f"{leap:.4g} {axis.unit}/s²; played in a tick of {period:g} s that is "
-            f"{leap / period / axis.jerk:.2g} times the jerk limit: a smaller --error makes it "
-            "less",
-            err=True,
-        )
-
-
-def _tell_lost(planned: Plan, found: PvtTable) -> None:
-    """Say on stderr which signals change back before a point shows them."""
-    if found.tick != NANOSECOND:
-        tell_unplayed(planned, found.tick)
-        return
-    for name in planned.signals:
-        times = [event.time for event in planned.events if event.signal == name]
-        lost = sum(after - before < NANOSECOND for before, after in pairwise(times))
-        if lost:
-            click.echo(
-                f"note: {name} changes and changes back at once, {lost} times: the table does "
-                "not show it",
-                err=True,
-            )
+        remarks.tell_peaks(found, place, axis)
+        remarks.tell_leaps(found, place, axis, planned.job.machine.setpoints.period)
+    remarks.tell_lost(planned, found)
+    more = f"{remarks.distance(found, planned.job)}; "
+    return _Told(parts, more, remarks.distances(found), found.kept)
 
 
 def _tell(told: _Told, planned: Plan, *, as_json: bool, quiet: bool) -> None:
@@ -464,7 +359,7 @@ def _tell(told: _Told, planned: Plan, *, as_json: bool, quiet: bool) -> None:
             "file": str(parts[0].file),
             "files": [str(part.file) for part in parts],
             "rows": rows,
-            "parts": [_part_values(part) for part in parts],
+            "parts": [remarks.part_values(part) for part in parts],
             **told.values,
         }
         click.echo(summary.text(values), nl=False)
@@ -474,71 +369,3 @@ def _tell(told: _Told, planned: Plan, *, as_json: bool, quiet: bool) -> None:
     click.echo(f"{parts[0].file}{more}: {rows} rows; {told.more}{verdict}", color=frame.color())
     if not quiet:
         click.echo(summary.CAUTION, err=True)
-
-
-def _part_values(part: Part) -> dict[str, object]:
-    return {
-        "file": str(part.file),
-        "axis": part.axis or None,
-        "first_row": part.first,
-        "rows": part.rows,
-        "starts_at_rest": part.starts_at_rest,
-    }
-
-
-def _tell_joins(parts: Sequence[Part]) -> None:
-    """Say on stderr which parts begin while the axes move."""
-    moving = [part for part in parts if part.axis == parts[0].axis and not part.starts_at_rest]
-    for part in moving[:PARTS_TOLD]:
-        click.echo(f"note: {part.file.name} {part.joins}", err=True)
-    if len(moving) > PARTS_TOLD:
-        click.echo(f"note: … and {len(moving) - PARTS_TOLD} more parts in motion", err=True)
-
-
-def _tell_turns(order: _Order, period: float) -> None:
-    """Say on stderr which wrapped axes may turn so far that no one can tell which way."""
-    from profileplan import setpoints  # noqa: PLC0415
-
-    for turn in setpoints.doubtful_turns(order.planned, order.content.drives, period):
-        click.echo(
-            f"note: {turn.name} turns by up to {turn.angle:.4g} deg between two rows, half of its "
-            f"wrap of {turn.wrap:g} or more: its sense is in doubt; take a period below "
-            f"{turn.longest:.2g} s",
-            err=True,
-        )
-
-
-def _tell_noise(noises: Sequence[Noise]) -> None:
-    """Say on stderr where rounding is large against a limit, and what makes it small.
-
-    Of each axis the loudest quantity is told.
-    """
-    loudest: dict[str, Noise] = {}
-    for noise in noises:
-        other = loudest.get(noise.axis)
-        if noise.advice is not None and (other is None or _share(other) < _share(noise)):
-            loudest[noise.axis] = noise
-    for noise in loudest.values():
-        click.echo(
-            f"note: {noise.axis} {noise.quantity}: from these positions a drive derives up to "
-            f"{noise.derived:.3g}, from exact ones {noise.exact:.3g}, the limit is "
-            f"{noise.limit:.3g}; {noise.advice}",
-            err=True,
-        )
-
-
-def _share(noise: Noise) -> float:
-    return noise.rounding / noise.limit
-
-
-def _noise_values(noise: Noise) -> dict[str, object]:
-    return {
-        "axis": noise.axis,
-        "quantity": noise.quantity,
-        "limit": noise.limit,
-        "exact": noise.exact,
-        "derived": noise.derived,
-        "rounding": noise.rounding,
-        "time_s": noise.time,
-        "ok": noise.ok,
-    }

@@ -13,7 +13,7 @@ import sys
 import time
 from importlib import import_module
 from pathlib import Path
-from typing import TYPE_CHECKING, NoReturn
+from typing import TYPE_CHECKING, NoReturn, TypeVar
 
 import click
 
@@ -21,8 +21,11 @@ from profileplan import __version__
 from profileplan.errors import Fault, InputError, ProfileplanError
 
 if TYPE_CHECKING:
-    from collections.abc import Iterable
+    from collections.abc import Callable, Iterable
     from typing import Self
+
+FC = TypeVar("FC", bound="Callable[..., object] | click.Command")
+"""What an option is put to."""
 
 REQUIREMENT_NOT_MET = 1
 INTERRUPTED = 130
@@ -147,6 +150,19 @@ machine = click.option(
     type=click.Path(path_type=Path),
     help="Machine file; needed for a .csv or .dxf, else in place of the one in the cycle file.",
 )
+
+
+def output(help_text: str) -> Callable[[FC], FC]:
+    """Return the option that names the file to write."""
+    return click.option(
+        "-o",
+        "--output",
+        type=click.Path(path_type=Path, dir_okay=False),
+        required=True,
+        help=help_text,
+    )
+
+
 speed = click.option(
     "--speed",
     type=Measure("velocity"),

@@ -10,8 +10,8 @@ from typing import TYPE_CHECKING, NamedTuple
 import click
 
 from profileplan import wording
-from profileplan.cli import frame, tables
-from profileplan.cli.settings import Digits
+from profileplan.cli import frame, remarks, tables
+from profileplan.cli.settings import FORMS, Columns, Digits
 from profileplan.errors import Fault, InputError
 
 if TYPE_CHECKING:
@@ -20,9 +20,6 @@ if TYPE_CHECKING:
     from profileplan.checks import Finding
     from profileplan.inputs import Job, Machine
     from profileplan.planning import Plan
-
-TABLES = (".jsonl", ".npy", ".parquet")
-"""Endings of setpoint tables that are no texts of cells."""
 
 
 @frame.cli.command()
@@ -76,7 +73,7 @@ def plan(  # noqa: PLR0913 - one parameter an option
         click.echo(summary.text(values), nl=False)
     elif quiet:
         click.echo(tables.verdict(planned), color=frame.color())
-        tell_amiss(planned.check())
+        remarks.tell_amiss(planned.check())
     else:
         _show_plan(planned)
         if written:
@@ -89,6 +86,7 @@ def plan(  # noqa: PLR0913 - one parameter an option
 @frame.machine
 @click.option(
     "--columns",
+    type=Columns(),
     help="What a table without a header holds of each axis, behind the time: any of pos, vel, acc, "
     "jerk, force, torque; default: as the machine file says.",
 )
@@ -112,7 +110,7 @@ def check(  # noqa: PLR0913 - one parameter an option
     *,
     source: Path,
     machine: Path | None,
-    columns: str | None,
+    columns: tuple[str, ...] | None,
     points: str | None,
     significant: dict[str, int] | None,
     speed: float | None,
@@ -189,11 +187,11 @@ def _limits(source: Path, machine: Path | None) -> Machine:
     return read_machine(machine)
 
 
-def _is_table(source: Path, machine: Path | None, columns: str | None) -> bool:
+def _is_table(source: Path, machine: Path | None, columns: tuple[str, ...] | None) -> bool:
     """Tell whether a file is a setpoint table: by its ending, its headings, or numbers alone."""
     form = source.suffix.lower()
     if form != ".csv":
-        return form in TABLES
+        return form in FORMS
     from profileplan import setpoints  # noqa: PLC0415
     from profileplan.setpoints.layout import has_axes, has_numbers_only  # noqa: PLC0415
 
@@ -208,7 +206,7 @@ def _is_table(source: Path, machine: Path | None, columns: str | None) -> bool:
 class _Asked(NamedTuple):
     """Options that say how a table is to be understood."""
 
-    columns: str | None
+    columns: tuple[str, ...] | None
     points: str | None
     significant: dict[str, int] | None
 
@@ -224,7 +222,7 @@ def _table_findings(
     if significant is not None:
         limits = _with_digits(limits, significant)
     manner = checks.Manner(
-        columns=None if columns is None else _known_columns(columns),
+        columns=None if columns is None else _known(columns),
         points=None if points is None else points == "pvt",
     )
     with frame.Progress("checking", wanted=talk) as progress:
@@ -254,7 +252,7 @@ def _with_digits(machine: Machine, significant: Mapping[str, int]) -> Machine:
     return replace(machine, setpoints=replace(own, dialect=dialect))
 
 
-def _known_columns(columns: str) -> tuple[str, ...]:
+def _known(columns: tuple[str, ...]) -> tuple[str, ...]:
     """Return the words of --columns.
 
     Raises
@@ -265,35 +263,14 @@ def _known_columns(columns: str) -> tuple[str, ...]:
     from profileplan.inputs.dialect import KINDS  # noqa: PLC0415
     from profileplan.inputs.rules import near, shown  # noqa: PLC0415
 
-    words = tuple(word.strip() for word in columns.split(",") if word.strip())
     faults = [
         Fault("--columns", f"{shown(word)}; allowed: {', '.join(KINDS)}{near(word, KINDS)}")
-        for word in words
+        for word in columns
         if word not in KINDS
     ]
     if faults:
         raise InputError(faults)
-    return words
-
-
-def tell_amiss(findings: Sequence[Finding]) -> None:
-    """Say on stderr what is not met, but for the target, which the verdict tells."""
-    for finding in findings:
-        if not finding.ok and finding.check != "cycle time":
-            click.echo(f"{tables.bad('NOT MET')}: {wording.amiss(finding)}", err=True)
-
-
-def tell_unplayed(planned: Plan, period: float | None) -> None:
-    """Say on stderr which signals change back before a row shows them."""
-    from profileplan import setpoints  # noqa: PLC0415
-
-    for event in setpoints.unplayed(planned, period):
-        state = "on" if event.state else "off"
-        click.echo(
-            f"note: {event.signal} goes {state} at {event.time:.6f} s and changes again before "
-            "the next row: the table does not show it",
-            err=True,
-        )
+    return columns
 
 
 def _write(
@@ -315,7 +292,7 @@ def _write(
             planned, table, content=content, dialect=own.dialect, progress=progress
         )
     summary.write_json(values, record)
-    tell_unplayed(planned, None)
+    remarks.tell_unplayed(planned, None)
     if absent := page.missing():
         click.echo(f"note: no report.html: {absent}", err=True)
         return f"{table.name} and {record.name}"
@@ -340,9 +317,8 @@ def _show_plan(planned: Plan) -> None:
     if planned.job.cycle.parts:
         click.echo(tables.parts(planned))
     click.echo(tables.requirements(planned.check()), color=frame.color())
-    for finding in planned.check():
-        if not finding.ok and finding.check != "cycle time":
-            click.echo(f"  {wording.amiss(finding)}", color=frame.color())
+    for line in wording.all_amiss(planned.check()):
+        click.echo(f"  {line}", color=frame.color())
     if planned.meets_target is False:
         click.echo(tables.levers(planned), color=frame.color())
     from profileplan.summary import CAUTION  # noqa: PLC0415

@@ -2,24 +2,21 @@
 
 from __future__ import annotations
 
-from pathlib import Path
+from typing import TYPE_CHECKING
 
 import click
 
 from profileplan.cli import frame, tables
 from profileplan.cli.jobs import job_of, planned_of
 
+if TYPE_CHECKING:
+    from pathlib import Path
+
 
 @frame.cli.command()
 @frame.source
 @frame.machine
-@click.option(
-    "-o",
-    "--output",
-    type=click.Path(path_type=Path, dir_okay=False),
-    required=True,
-    help="The picture to write, .png, .svg or .pdf; replaced when complete.",
-)
+@frame.output("The picture to write, .png, .svg or .pdf; replaced when complete.")
 @frame.speed
 @frame.tolerance
 @frame.quiet

@@ -17,6 +17,23 @@ FORMS = (".csv", ".jsonl", ".npy", ".parquet")
 KIND_DIGITS = re.compile(r"\s*(?:(\w+)\s*=)?\s*(\d{1,3})\s*")
 
 
+class Columns(click.ParamType[tuple[str, ...]]):
+    """Kinds of columns in a row: "pos,vel"."""
+
+    name = "text"
+
+    def convert(
+        self,
+        value: object,
+        param: click.Parameter | None,  # noqa: ARG002 - click's interface
+        ctx: click.Context | None,  # noqa: ARG002
+    ) -> tuple[str, ...]:
+        """Return the words; whether they are known tells who uses them."""
+        if isinstance(value, tuple):
+            return value
+        return tuple(word.strip() for word in str(value).split(",") if word.strip())
+
+
 class Digits(click.ParamType[dict[str, int]]):
     """Digits of all kinds of columns, or of some: "4", "pos=4,vel=2"."""
 

@@ -18,9 +18,6 @@ if TYPE_CHECKING:
 NARROW, WIDE = 60, 160
 """Fewest and most columns that tables are fitted to."""
 
-NAMED = 5
-"""How many of the steps that a limit holds back are named, where a cycle has parts."""
-
 
 def step_table(planned: Plan) -> str:
     """Return the table of steps: when, how long, what limits each, the use of each limit.
@@ -37,7 +34,7 @@ def step_table(planned: Plan) -> str:
     for number, step in enumerate(planned.steps, start=1):
         if number - 1 in left_out:
             continue
-        shares = [_most(by_axis) for by_axis in uses(planned, step).values()]
+        shares = [wording.most(by_axis) for by_axis in uses(planned, step).values()]
         times = [f"{step.start:.3f}", f"{step.duration:.3f}"]
         rows.append([str(number), step.name, step.kind, *times, wording.held(step), *shares])
     shown = table(heads, rows, text=("step", "kind", "limited by"))
@@ -86,20 +83,8 @@ def levers(planned: Plan) -> str:
 
 def findings_table(findings: Sequence[Finding]) -> str:
     """Return the table of requirements, with value, limit and margin."""
-    heads = ["requirement", "value", "limit", "margin", "unit", "use %", "where", "met"]
-    rows = [
-        [
-            wording.required(finding),
-            wording.short(finding.value),
-            wording.short(finding.limit),
-            wording.short(finding.margin, 3),
-            finding.unit,
-            "" if finding.use is None else f"{100 * finding.use:.1f}",
-            wording.at(finding),
-            _met(finding),
-        ]
-        for finding in findings
-    ]
+    heads = [*wording.REQUIREMENT, "met"]
+    rows = [[*wording.requirement(finding), _met(finding)] for finding in findings]
     return table(heads, rows, text=("requirement", "unit", "where", "met"))
 
 
@@ -170,15 +155,7 @@ def _left_out(planned: Plan) -> set[int]:
 
 def _named(planned: Plan, steps: Sequence[str]) -> str:
     """Return names of steps in a row, the first few where parts repeat them."""
-    if not planned.job.cycle.parts or len(steps) <= NAMED:
-        return "; ".join(steps)
-    return f"{'; '.join(steps[:NAMED])}; and {len(steps) - NAMED} more"
-
-
-def _most(shares: dict[str, float]) -> str:
-    """Return the greatest share of a limit in percent, and the axis that uses it."""
-    axis, share = max(shares.items(), key=lambda item: item[1], default=("", 0.0))
-    return f"{100 * share:.0f} {axis}" if share > 0 else ""
+    return wording.listed(steps) if planned.job.cycle.parts else "; ".join(steps)
 
 
 def _asks_for_time(step: PlannedStep) -> bool:

@@ -80,13 +80,7 @@ class Drive:
         judge = Judge()
         judge.whole("increments", self.increments, 1, MOST_PER_TURN)
         judge.number("lead", self.lead, LIMIT, "mm or deg")
-        try:
-            motor, output = self.gear
-        except (TypeError, ValueError):
-            judge.note("gear", f"{shown(self.gear)}; [turns of the motor, turns of the output]")
-        else:
-            judge.whole("gear[1]", motor, 1, MOST_TEETH)
-            judge.whole("gear[2]", output, 1, MOST_TEETH)
+        judge_gear(judge, self.gear)
         _judge_place(judge, self.direction, self.offset)
         judge.optional("wrap", self.wrap, LIMIT, "deg")
         if not judge.faults and self.wrap is not None:
@@ -112,6 +106,17 @@ class Drive:
     def wrap_increments(self) -> int | None:
         """Increments after which it counts from 0 again."""
         return None if self.wrap is None else int(self.ratio * _exact(self.wrap))
+
+
+def judge_gear(judge: Judge, gear: tuple[int, int]) -> None:
+    """Judge turns of the motor to turns of the gear's output."""
+    try:
+        motor, output = gear
+    except (TypeError, ValueError):
+        judge.note("gear", f"{shown(gear)}; [turns of the motor, turns of the output]")
+        return
+    judge.whole("gear[1]", motor, 1, MOST_TEETH)
+    judge.whole("gear[2]", output, 1, MOST_TEETH)
 
 
 def _judge_place(judge: Judge, direction: object, offset: object) -> None:

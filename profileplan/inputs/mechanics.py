@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from dataclasses import KW_ONLY, dataclass, fields
 
-from profileplan.inputs.drive import MOST_TEETH
+from profileplan.inputs.drive import judge_gear
 from profileplan.inputs.rules import LIMIT, MASS, Judge, Range, shown
 
 FORCE = Range(0, 1e9)
@@ -87,23 +87,12 @@ class Mechanics:
         judge.number("counterbalance", self.counterbalance, FORCE, "N")
         judge.boolean("carries_payload", self.carries_payload)
         judge.optional("lead", self.lead, LIMIT, "mm or deg")
-        self._judge_gear(judge)
+        if self.gear is not None:
+            judge_gear(judge, self.gear)
         judge.number("inertia", self.inertia, INERTIA, "kg·m²")
         judge.number("efficiency", self.efficiency, EFFICIENCY, "of the power")
         judge.number("drag_torque", self.drag_torque, FORCE, "N·m")
         judge.finish()
-
-    def _judge_gear(self, judge: Judge) -> None:
-        if self.gear is None:
-            return
-        try:
-            motor, output = self.gear
-        except (TypeError, ValueError):
-            judge.note("gear", f"{shown(self.gear)}; [turns of the motor, turns of the output]")
-        else:
-            judge.whole("gear[1]", motor, 1, MOST_TEETH)
-            judge.whole("gear[2]", output, 1, MOST_TEETH)
-            object.__setattr__(self, "gear", (motor, output))
 
 
 @dataclass(frozen=True)

@@ -62,6 +62,27 @@ def derivative(coefficients: Array) -> Array:
     return coefficients[..., 1:] * np.arange(1.0, coefficients.shape[-1])
 
 
+def shifted(coefficients: Array, offset: Array) -> Array:
+    """Return the coefficients of the same polynomials about other places.
+
+    Parameters
+    ----------
+    coefficients : (n, k, d) array
+        Ascending powers, along the middle.
+    offset : (n,) array
+        Where each is expanded anew.
+
+    Source: Taylor shift by repeated synthetic division: Knuth, The Art of Computer Programming,
+    volume 2, section 4.6.4 (from memory).
+    """
+    expanded: Array = coefficients.copy()
+    order = expanded.shape[1]
+    for first in range(order - 1):
+        for power in range(order - 2, first - 1, -1):
+            expanded[:, power] += offset[:, np.newaxis] * expanded[:, power + 1]
+    return expanded
+
+
 def trimmed(coefficients: Array) -> Array:
     """Return the coefficients without the highest powers that no polynomial uses."""
     used = np.flatnonzero(coefficients.any(axis=tuple(range(coefficients.ndim - 1))))

@@ -304,13 +304,7 @@ class Trajectory:
         inside = pieces < self.durations.size
         offsets = [float(start - own[piece]) for start, piece in zip(starts, pieces, strict=True)]
         pieces = np.minimum(pieces, self.durations.size - 1)
-        offset = np.where(inside, offsets, 0.0)[:, np.newaxis]
-        expanded: Array = self.coefficients[pieces].copy()
-        # Taylor shift by repeated synthetic division: Knuth, The Art of Computer Programming,
-        # volume 2, section 4.6.4 (from memory).
-        for first in range(ORDER - 1):
-            for power in range(ORDER - 2, first - 1, -1):
-                expanded[:, power] += offset * expanded[:, power + 1]
+        expanded = polynomials.shifted(self.coefficients[pieces], np.where(inside, offsets, 0.0))
         expanded[~inside, 0] = self.last
         expanded[~inside, 1:] = 0.0
         return expanded

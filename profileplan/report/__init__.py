@@ -5,6 +5,8 @@ Names are loaded from their modules when they are first used: they bring large l
 
 from typing import TYPE_CHECKING
 
+from profileplan.lazy import loader
+
 if TYPE_CHECKING:
     from profileplan.report.notebook import brief
     from profileplan.report.page import write_page
@@ -12,19 +14,6 @@ if TYPE_CHECKING:
 
 __all__ = ["brief", "draw", "write_page", "write_picture"]
 
-_HOMES = {
-    "brief": "notebook",
-    "draw": "pictures",
-    "write_page": "page",
-    "write_picture": "pictures",
-}
+_HOMES = {"notebook": ("brief",), "page": ("write_page",), "pictures": ("draw", "write_picture")}
 
-
-def __getattr__(name: str) -> object:
-    """Load a name from the module that it lives in (PEP 562)."""
-    if name not in _HOMES:
-        message = f"module {__name__!r} has no attribute {name!r}"
-        raise AttributeError(message)
-    from importlib import import_module  # noqa: PLC0415
-
-    return getattr(import_module(f"{__name__}.{_HOMES[name]}"), name)
+__getattr__ = loader(__name__, _HOMES)

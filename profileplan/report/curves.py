@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from profileplan.motion import polynomials
-from profileplan.motion.trajectory import ORDER, Trajectory
+from profileplan.motion.trajectory import Trajectory
 
 if TYPE_CHECKING:
     from profileplan.motion.polynomials import Array, Indices
@@ -27,6 +27,16 @@ STRETCHES = 8_000
 
 QUANTITIES = ("position", "velocity", "acceleration", "jerk")
 """What curves show of an axis, in the order of the derivatives."""
+
+
+AT_LIMIT = 0.999
+"""Share of a limit from which on it counts as reached."""
+
+AT_A_LIMIT = f"at a limit ({100 * AT_LIMIT:g} % of it or more)"
+"""What is said of such a stretch of a curve."""
+
+STANDING = 1e-9
+"""Share of an axis's greatest speed below which it stands: it neither speeds up nor slows down."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -134,22 +144,6 @@ def thinned(times: Array, values: Array, stretches: int = STRETCHES) -> tuple[Ar
     return times[kept], values[kept]
 
 
-def sampled_times(trajectory: Trajectory, most: int) -> Array:
-    """Return times at which to look at a motion: every break, and between them about as often.
-
-    Parameters
-    ----------
-    trajectory : Trajectory
-    most : int
-        About so many times in all; breaks are left out only if they alone are more.
-    """
-    breaks = trajectory.breaks
-    even = np.linspace(0.0, trajectory.duration, max(most - breaks.size, most // 2, 2))
-    if breaks.size > most:
-        return even
-    return np.unique(np.concatenate([breaks, even]))
-
-
 def _powers(trajectory: Trajectory) -> int:
     """Return how many coefficients a piece needs."""
     used = np.flatnonzero(np.any(trajectory.coefficients != 0, axis=(0, 2)))
@@ -161,10 +155,7 @@ def _cut(trajectory: Trajectory, cuts: Array) -> Trajectory:
     starts = cuts[:-1]
     pieces = np.searchsorted(trajectory.breaks, starts, side="right") - 1
     pieces = np.clip(pieces, 0, trajectory.durations.size - 1)
-    offset = (starts - trajectory.breaks[pieces])[:, np.newaxis]
-    shifted = trajectory.coefficients[pieces].copy()
-    # Taylor shift, as in ``Trajectory.stack``.
-    for first in range(ORDER - 1):
-        for power in range(ORDER - 2, first - 1, -1):
-            shifted[:, power] += offset * shifted[:, power + 1]
+    shifted = polynomials.shifted(
+        trajectory.coefficients[pieces], starts - trajectory.breaks[pieces]
+    )
     return Trajectory(trajectory.axes, np.diff(cuts), shifted)

@@ -4,9 +4,6 @@
 
 const plan = JSON.parse(document.getElementById("plan-data").textContent);
 const QUANTITIES = ["position", "velocity", "acceleration", "jerk"];
-const AT_LIMIT = 0.999;
-/* Share of an axis's greatest speed below which it stands. */
-const STANDING = 1e-9;
 /* Share of a limit below which a curve would be flat if it were scaled to it. */
 const FLAT = 0.01;
 /* What moves with the time is drawn on a layer of its own: the rest need not be drawn again. */
@@ -154,7 +151,7 @@ function rows(axis) {
   const greatest = Math.max(acceleration, deceleration);
   const highs = [own.travel[1], velocity, greatest, jerk];
   const lows = [own.travel[0], -velocity, -greatest, jerk === null ? null : -jerk];
-  const stands = STANDING * peak((from, to, columns) => motion.curve(axis, 1, from, to, columns));
+  const stands = plan.standing * peak((from, to, columns) => motion.curve(axis, 1, from, to, columns));
   const found = QUANTITIES.map((name, order) => ({
     name, unit: own.unit + ["", "/s", "/s²", "/s³"][order], low: lows[order], high: highs[order],
     ends: (when) => motion.ends(axis, order, when),
@@ -189,7 +186,7 @@ function bounds({ acceleration, deceleration }, [slowest, fastest], stands) {
 
 function reached(row, value, when) {
   const [low, high] = row.bounds ? row.bounds(when) : [row.low, row.high];
-  return row.marked && high !== null && (value >= AT_LIMIT * high || value <= AT_LIMIT * low);
+  return row.marked && high !== null && (value >= plan.at_limit * high || value <= plan.at_limit * low);
 }
 
 function formatter() { return new Bokeh.BasicTickFormatter({ power_limit_high: 7, power_limit_low: -5 }); }
@@ -213,6 +210,15 @@ function plain(options) {
   }
   for (const grid of [figure.xgrid, figure.ygrid].flat()) grid.grid_line_color = css("--grid");
   return figure;
+}
+
+/* A finger scrolls the page; a mouse shifts a figure, and zooms with Ctrl. */
+function gestures(figure, options) {
+  if (coarse) return;
+  const pan = new Bokeh.PanTool(options), wheel = new Bokeh.WheelZoomTool({ ...options, modifiers: { ctrl: true } });
+  figure.add_tools(pan, wheel);
+  figure.toolbar.active_drag = pan;
+  figure.toolbar.active_scroll = wheel;
 }
 
 function curveFigure(axis, row, width, last) {
@@ -252,13 +258,7 @@ function curveFigure(axis, row, width, last) {
   figure.line({ field: "t" }, { field: "y" }, { source, line_color: css("--ink"), line_width: 1.4 });
   figure.line({ field: "t" }, { field: "y" }, { source: limit, line_color: css("--limit"), line_width: 4, line_alpha: 0.75 });
   figure.add_layout(now);
-  if (!coarse) {
-    const pan = new Bokeh.PanTool({ dimensions: "width" });
-    const wheel = new Bokeh.WheelZoomTool({ dimensions: "width", modifiers: { ctrl: true } });
-    figure.add_tools(pan, wheel);
-    figure.toolbar.active_drag = pan;
-    figure.toolbar.active_scroll = wheel;
-  }
+  gestures(figure, { dimensions: "width" });
   const moved = () => setRange(figure.x_range.start, figure.x_range.end);
   figure.x_range.properties.start.change.connect(moved);
   figure.x_range.properties.end.change.connect(moved);
@@ -393,12 +393,7 @@ function spaceFigure(side, width) {
     figure.patch({ field: "x" }, { field: "y" }, { source: add(name, { x: [], y: [] }), fill_color: css(color), fill_alpha: 0.18, line_color: css(color), line_width: 1.3, ...OVER });
   }
   figure.scatter({ field: "x" }, { field: "y" }, { source: add("now", { x: [], y: [] }), size: 11, marker: "circle_cross", fill_color: css("--paper"), line_color: css("--accent"), line_width: 2, ...OVER });
-  if (!coarse) {
-    const pan = new Bokeh.PanTool(), wheel = new Bokeh.WheelZoomTool({ modifiers: { ctrl: true } });
-    figure.add_tools(pan, wheel);
-    figure.toolbar.active_drag = pan;
-    figure.toolbar.active_scroll = wheel;
-  }
+  gestures(figure, {});
   const home = [{ start: middle[0] - half[0], end: middle[0] + half[0] }, { start: ends[0], end: ends[1] }];
   return { figure, side, right, up, sources, sky, home };
 }
@@ -770,8 +765,10 @@ function act() {
   });
 }
 
-// What is drawn over a figure stays within its frame, as all else does.
-Object.defineProperty(Bokeh.GlyphRenderer.prototype.default_view.prototype, "needs_clip", { get: () => true });
+// What is drawn over a figure stays within its frame, as all else does; a library that has no such
+// part draws it a little beyond.
+const drawer = Bokeh.GlyphRenderer?.prototype?.default_view?.prototype;
+if (drawer) Object.defineProperty(drawer, "needs_clip", { get: () => true });
 theme(matchMedia("(prefers-color-scheme: dark)").matches ? "dark" : "light");
 legend();
 act();

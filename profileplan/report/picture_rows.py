@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 
 from profileplan.motion import polynomials
-from profileplan.report.curves import QUANTITIES, envelope
+from profileplan.report.curves import AT_LIMIT, QUANTITIES, STANDING, envelope
 from profileplan.report.loads import load_curves
 
 if TYPE_CHECKING:
@@ -25,14 +25,9 @@ if TYPE_CHECKING:
 SAMPLES = 900
 """About as many values of a curve: more than paper shows. More pieces are a long motion."""
 
-REACHED = 0.999
-"""Share of a limit from which on it counts as reached."""
 
 AT_END = 1e-6
 """Share of the travel within which a position is at its end."""
-
-STANDING = 1e-9
-"""Share of an axis's greatest speed below which it stands: it neither speeds up nor slows down."""
 
 
 class Curve(NamedTuple):
@@ -78,7 +73,7 @@ def reached(values: Array, low: Array, high: Array) -> Flags:
     ----------
     values, low, high : (m,) arrays
     """
-    return np.asarray((values >= REACHED * high) | (values <= REACHED * low))
+    return np.asarray((values >= AT_LIMIT * high) | (values <= AT_LIMIT * low))
 
 
 class _Samples(NamedTuple):

@@ -16,6 +16,7 @@ from matplotlib.lines import Line2D
 from matplotlib.patches import Patch, Rectangle
 
 from profileplan import wording
+from profileplan.report.curves import AT_A_LIMIT
 from profileplan.report.picture_rows import Curve, curves_of
 from profileplan.report.picture_style import (
     INK,
@@ -410,7 +411,7 @@ def _foot(sheet: Sheet, curves: Sequence[Sequence[Curve]], *, lines: bool) -> No
     if lines:
         found.append((Line2D([], [], color=LINE, lw=0.6), "a step begins"))
     if any(np.any(curve.held) for own in curves for curve in own):
-        found.insert(1, (Line2D([], [], color=WARM, lw=2.2), "at a limit (99.9 % of it or more)"))
+        found.insert(1, (Line2D([], [], color=WARM, lw=2.2), AT_A_LIMIT))
     sheet.legend(
         [handle for handle, _ in found],
         [label for _, label in found],

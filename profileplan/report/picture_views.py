@@ -19,7 +19,6 @@ from matplotlib.lines import Line2D
 from matplotlib.patches import PathPatch, Polygon
 from matplotlib.path import Path
 
-from profileplan.report.curves import sampled_times
 from profileplan.report.picture_style import (
     INK,
     PALE,
@@ -114,8 +113,11 @@ class Looks:
 
     @cached_property
     def times(self) -> Array:
-        """Instants of the motion, (m,) [s]."""
-        return sampled_times(self.scene.planned.trajectory, INSTANTS)
+        """Instants of the motion, (m,) [s]: even ones, and every break if these are not more."""
+        motion = self.scene.planned.trajectory
+        breaks = motion.breaks if motion.breaks.size <= INSTANTS else motion.breaks[[0, -1]]
+        count = max(INSTANTS - breaks.size, INSTANTS // 2)
+        return np.unique(np.concatenate([breaks, np.linspace(0.0, motion.duration, count)]))
 
     @cached_property
     def way(self) -> Array:
@@ -213,7 +215,7 @@ class Looks:
                 for one in standing.outlines
             ]
         bounds = _roomy(np.concatenate(corners))
-        return View("plan view" if plan else "side view", side, columns, bounds, factor)
+        return View(side.label, side, columns, bounds, factor)
 
     def _hangs(self, own: Hanging, times: tuple[float, ...], side: Side) -> Iterator[Array]:
         """Yield the outline of what hangs at the tool at some times [s]."""

@@ -6,11 +6,11 @@ The same plan always makes the same bytes. matplotlib draws; it comes with profi
 from __future__ import annotations
 
 import io
-from importlib.util import find_spec
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from profileplan.errors import Fault, InputError
+from profileplan.report.extra import missing
 from profileplan.setpoints.files import replacing_all
 
 if TYPE_CHECKING:
@@ -27,8 +27,6 @@ FORMS: dict[str, dict[str, str | None]] = {
 
 DOTS = 200
 """Of a .png, in an inch."""
-
-MISSING = "pictures need matplotlib: pip install 'profileplan[report]'"
 
 
 def draw(planned: PlannedCycle) -> Figure:
@@ -98,5 +96,5 @@ def judge(file: Path | None = None) -> None:
     if file is not None and file.suffix.lower() not in FORMS:
         message = f"the ending is {file.suffix!r}; a picture is .png, .svg or .pdf"
         raise InputError([Fault("", message, file)])
-    if find_spec("matplotlib") is None:
-        raise InputError([Fault("", MISSING, file)])
+    if absent := missing("matplotlib"):
+        raise InputError([Fault("", f"a picture needs more: {absent}", file)])

@@ -79,11 +79,7 @@ def step_mark(index: int) -> str:
 def _steps(planned: PlannedCycle) -> PageTable:
     rows = []
     for index, step in enumerate(planned.steps[:MOST_STEPS]):
-        shares = [
-            max(by_axis.items(), key=lambda item: item[1], default=("", 0.0))
-            for by_axis in uses(planned, step).values()
-        ]
-        used = [f"{100 * share:.0f} {axis}" if share > 0 else "" for axis, share in shares]
+        used = [wording.most(by_axis) for by_axis in uses(planned, step).values()]
         least = "" if step.least_time is None else f"{step.least_time:.3f}"
         cells = [str(index + 1), step.name, step.kind, f"{step.start:.3f}", f"{step.duration:.3f}"]
         found = [*cells, least, wording.held(step), *used]
@@ -135,22 +131,10 @@ def _levers(planned: PlannedCycle) -> PageTable:
 
 def _requirements(planned: PlannedCycle) -> PageTable:
     rows = [
-        Row(
-            [
-                wording.required(finding),
-                wording.short(finding.value),
-                wording.short(finding.limit),
-                wording.short(finding.margin, 3),
-                finding.unit,
-                "" if finding.use is None else f"{100 * finding.use:.1f}",
-                wording.at(finding),
-                "yes" if finding.ok else "NO",
-            ],
-            bad=not finding.ok,
-        )
+        Row([*wording.requirement(finding), "yes" if finding.ok else "NO"], bad=not finding.ok)
         for finding in planned.check()
     ]
-    names = ["requirement", "value", "limit", "margin", "unit", "use %", "where", "met"]
+    names = [*wording.REQUIREMENT, "met"]
     return PageTable("requirements", "Requirements", names, rows, frozenset({1, 2, 3, 5}))
 
 

@@ -67,6 +67,11 @@ class Side(NamedTuple):
     up: str | None
     falls: bool = False
 
+    @property
+    def label(self) -> str:
+        """What it is called."""
+        return f"{self.name} view"
+
 
 class Standing(NamedTuple):
     """A keep-out: its name, its outlines in plan, (n, 2) each, up to where it blocks [mm]."""
@@ -381,7 +386,10 @@ class Scene:
         return payload
 
     def _footprint(self, of: Tool | Payload) -> Array | None:
-        """Return a footprint, (n, 2); what a rotary axis turns counts as the circle it sweeps."""
+        """Return a footprint, (n, 2); what a rotary axis turns counts as the circle it sweeps.
+
+        ``geometry.cell`` has it as a shape; a page without keep-outs need not load that.
+        """
         radius = of.radius
         if of.outline is not None:
             corners = np.array(of.outline, dtype=np.float64)

@@ -6,6 +6,7 @@ Names are loaded from their modules when they are first used: most jobs need few
 from typing import TYPE_CHECKING
 
 from profileplan.inputs import Dialect, Drive, Twin, base_from_period, period_from_base
+from profileplan.lazy import loader
 
 if TYPE_CHECKING:
     from profileplan.setpoints.binary import write_npy, write_parquet
@@ -66,13 +67,4 @@ _HOMES = {
     "writing": ("write_csv", "write_json_lines", "write_pvt", "write_table"),
 }
 
-
-def __getattr__(name: str) -> object:
-    """Load a name from the module that it lives in (PEP 562)."""
-    from importlib import import_module  # noqa: PLC0415
-
-    for module, names in _HOMES.items():
-        if name in names:
-            return getattr(import_module(f"{__name__}.{module}"), name)
-    message = f"module {__name__!r} has no attribute {name!r}"
-    raise AttributeError(message)
+__getattr__ = loader(__name__, _HOMES)

@@ -118,6 +118,11 @@ class PvtTable:
         )
 
     @property
+    def on_ticks(self) -> bool:
+        """Whether points stand on ticks of a period, and not wherever they keep the limits."""
+        return self.tick != NANOSECOND
+
+    @property
     def kept(self) -> bool:
         """Whether the cubics keep all limits, within what rounding explains."""
         return not any(axes.any() for axes in self.broken.values())
