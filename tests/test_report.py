@@ -310,6 +310,22 @@ def test_heights_are_seen_as_the_machine_counts_them() -> None:
     assert_allclose(scene.extent[:, 2], [0, 100], atol=1e-9)
 
 
+@pytest.mark.parametrize("tolerance", [0.02, 0.3, 1.0, 5.0, 60.0])
+def test_deviations_are_magnified_as_far_as_the_view_has_room(tolerance: float) -> None:
+    """The greatest round factor with room is offered: the series goes on by 2.5 at most."""
+    axes = tuple(pp.Axis(n, travel=(0, 2000), velocity=500, acceleration=4000) for n in "xy")
+    path = pp.PathStep(
+        (pp.Waypoint({"x": 900.0}), pp.Waypoint({"x": 900.0, "y": 700.0})), tolerance=tolerance
+    )
+    cycle = pp.Cycle(steps=(path,), start={"x": 0.0, "y": 0.0})
+    factors = Scene(pp.plan(pp.Machine("m", axes), cycle)).magnifications
+    room = 0.02 * 900 / tolerance
+    assert factors[0] == 1
+    assert list(factors) == sorted(set(factors))
+    assert factors[-1] <= max(room, 1.0)
+    assert room < 2.5 * factors[-1]
+
+
 def test_many_short_steps_are_in_the_timeline_together() -> None:
     """Of thousands of steps each is too narrow to be seen; none may be missing from the row."""
     plan = shuttle(1200)

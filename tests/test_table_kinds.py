@@ -512,3 +512,15 @@ def test_significant_digits_can_be_told(tmp_path: Path) -> None:
     assert run(*words, "--significant", "8")[0] == 0
     status, told = run(*words, "--significant", "pos=99")
     assert (status, "--significant pos: 99; allowed: 1 to 17" in told) == (2, True)
+
+
+def test_a_column_that_is_missing_is_not_taken_for_another_axis(tmp_path: Path) -> None:
+    """A heading that is an axis's own was not meant for one whose column is missing."""
+    machine = replace(
+        MACHINE, axes=tuple(replace(MACHINE.axes[0], name=n, drive=None) for n in "xz")
+    )
+    file = written(tmp_path / "table.csv", [["t_s", "X", "z_pos_mm"], ["0", "0", "0"]])
+    with pytest.raises(pp.InputError) as raised:
+        judge_file(file, machine)
+    assert 'column "x_pos_mm" is missing' in str(raised.value)
+    assert "did you mean" not in str(raised.value)

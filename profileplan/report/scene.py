@@ -238,7 +238,8 @@ class Scene:
         most = min(SEEN * self.size, ROOM * float(np.median(spans)) or math.inf) / allowed
         round_ones = [factor * 10**decade for decade in range(7) for factor in (1, 2, 5)]
         larger = [factor for factor in round_ones if 1 < factor <= most]
-        return (1, *larger[-3::2])
+        # The greatest, and the last but two.
+        return (1, *larger[:-4:-2][::-1])
 
     def bands(self, factor: float) -> tuple[tuple[Array, ...], ...]:
         """Return what is within the tolerance, magnified, in plan: polygons.

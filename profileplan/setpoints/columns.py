@@ -284,7 +284,9 @@ def _name_faults(names: Sequence[str], machine: Machine, file: Path) -> list[str
             ]
             if not any(spelled) and quantity == "pos" and axis in needed:
                 name = axis.column("pos")
-                faults.append(f"column {shown(name)} is missing{_hint(name, names)}")
+                faults.append(
+                    f"column {shown(name)} is missing{_hint(name, _unknown(names, machine))}"
+                )
     return list(dict.fromkeys(faults))
 
 
@@ -307,6 +309,18 @@ def _needed(names: Sequence[str], machine: Machine, file: Path) -> Sequence[Axis
     if not held and named_by(file, SIGNALS_OF_ALL):
         return ()
     return named if named and not held else machine.axes
+
+
+def _unknown(names: Sequence[str], machine: Machine) -> list[str]:
+    """Return the headings that stand for no quantity of any axis: what is none was meant."""
+    known = {
+        spelling
+        for axis in machine.axes
+        for drive in _drives(axis)
+        for quantity in RATES
+        for spelling in _spellings(axis, quantity, drive=drive)
+    }
+    return [name for name in names if name not in known]
 
 
 def _hint(name: str, names: Sequence[str]) -> str:

@@ -200,9 +200,10 @@ def _advice(axis: Axis, order: int, share: float, step: float, period: float) ->
     finer = step * NOISY / share
     longer = period * (share / NOISY) ** (1 / order)
     return (
-        f"rounding alone is up to {share:.0%} of the limit: steps of {finer:.2g} {axis.unit} or "
-        f"finer (now {step:.2g}), or a period of {longer:.2g} s or longer (now {period:.2g}), keep "
-        f"it below {NOISY:.0%}; else filter what the drive derives, or give it the velocity too"
+        f"rounding alone is up to {100 * share:.0f} % of the limit: steps of {finer:.2g} "
+        f"{axis.unit} or finer (now {step:.2g}), or a period of {longer:.2g} s or longer (now "
+        f"{period:.2g}), keep it below {100 * NOISY:g} %; else filter what the drive derives, or "
+        "give it the velocity too"
     )
 
 
